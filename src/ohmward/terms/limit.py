@@ -1,0 +1,23 @@
+"""A limit, resolved for one part: what must hold, at which condition, and who says so."""
+
+from dataclasses import dataclass
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class Limit:
+    """Bounds on one quantity of one part at one condition, in the quantity's SI unit.
+
+    A condition that is None is not a condition: the limit then holds at every point of its
+    stage. At least one of ``minimum`` and ``maximum`` is set.
+    """
+
+    part_id: str
+    stage: str
+    quantity: str
+    minimum: float | None
+    maximum: float | None
+    source: str
+    frequency_hz: float | None = None
+    level_v: float | None = None
+    bias_v: float | None = None
+    bias_a: float | None = None
