@@ -1,1 +1,1 @@
-""""""
+"""Values as people write them: numbers with units, tolerances, ratings, markings, series."""
