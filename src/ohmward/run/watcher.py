@@ -8,8 +8,8 @@ from ohmward.sequence.brief import Brief, PlannedStage
 class Watcher(Protocol):
     """Told of progress; must return at once and never raise."""
 
-    def begun(self, brief: Brief, *, elapsed_s: float) -> None:
-        """The run begins, or is taken up again after ``elapsed_s`` of it."""
+    def begun(self, brief: Brief, *, behind_s: float) -> None:
+        """The run begins, or is taken up again with ``behind_s`` of its planned time done."""
 
     def stage(self, stage: PlannedStage) -> None:
         """A stage of a part begins."""
@@ -24,7 +24,7 @@ class Watcher(Protocol):
 class Silent:
     """Watches without a word."""
 
-    def begun(self, brief: Brief, *, elapsed_s: float) -> None:
+    def begun(self, brief: Brief, *, behind_s: float) -> None:
         """Say nothing."""
 
     def stage(self, stage: PlannedStage) -> None:

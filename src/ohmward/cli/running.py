@@ -1,0 +1,90 @@
+"""``brief``, ``dryrun``, ``run``, ``resume`` and ``demo``: a sequence, a bench and a parts list."""
+
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+SequenceArgument = Annotated[
+    str, typer.Argument(metavar="SEQUENCE", help="Sequence file, or the name of a shipped one.")
+]
+BenchOption = Annotated[
+    str, typer.Option("--bench", metavar="BENCH", help="Bench file, or the name of a shipped one.")
+]
+PartsOption = Annotated[
+    str, typer.Option("--parts", metavar="PARTS", help="Parts list (CSV), or a shipped one's name.")
+]
+OutOption = Annotated[
+    Path, typer.Option("--out", metavar="DIR", help="New folder for the run; must not exist yet.")
+]
+JsonOption = Annotated[bool, typer.Option("--json", help="Print JSON.")]
+SeedOption = Annotated[
+    int, typer.Option("--seed", min=0, help="Draws parts and noise; same seed, same bytes.")
+]
+
+
+def add_to(app: typer.Typer) -> None:
+    """Add these commands to the program."""
+    for command in (brief, dryrun, run, resume, demo):
+        app.command()(command)
+
+
+def brief(
+    sequence: SequenceArgument, bench: BenchOption, parts: PartsOption, json: JsonOption = False
+) -> None:
+    """Show what a run would do, how long it takes, and what this bench cannot tell."""
+    from ohmward import api
+
+    prepared = api.prepare(sequence, bench=bench, parts=parts)
+    if json:
+        typer.echo(api.as_json(prepared.brief.as_dict()))
+    else:
+        api.show_brief(prepared.brief)
+
+
+def dryrun(
+    sequence: SequenceArgument,
+    bench: BenchOption,
+    parts: PartsOption,
+    out: OutOption,
+    seed: SeedOption = 0,
+) -> None:
+    """Carry the sequence out on a simulated bench, in virtual time; opens no real address."""
+    from ohmward import api
+
+    prepared = api.prepare(sequence, bench=bench, parts=parts)
+    api.show_run(api.dry_run(prepared, out=out, seed=seed, watch=True))
+
+
+def run(sequence: SequenceArgument, bench: BenchOption, parts: PartsOption, out: OutOption) -> None:
+    """Carry the sequence out on the real bench.
+
+    Discharge every part before it goes into the fixture. This program is no interlock and
+    replaces no local rule and no qualified person.
+    """
+    from ohmward import api
+
+    prepared = api.prepare(sequence, bench=bench, parts=parts)
+    api.show_run(api.run(prepared, out=out, watch=True))
+
+
+def resume(
+    folder: Annotated[Path, typer.Argument(metavar="DIR", help="Folder of a stopped run.")],
+) -> None:
+    """Go on with a run that was stopped or killed; readings already taken are kept."""
+    from ohmward import api
+
+    api.show_run(api.resume(folder, watch=True))
+
+
+def demo(
+    out: Annotated[
+        Path, typer.Option("--out", metavar="DIR", help="New folder for the run.")
+    ] = Path("demo-run"),
+    seed: SeedOption = 0,
+) -> None:
+    """Test the demo lot on the simulated bench: a funicular depot's stores re-test their parts."""
+    from ohmward import api
+
+    prepared = api.prepare("depot-survey", bench="depot-bench", parts="depot-lot")
+    api.show_run(api.dry_run(prepared, out=out, seed=seed, watch=True))

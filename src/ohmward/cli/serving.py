@@ -1,0 +1,29 @@
+"""``serve``: a simulated bench behind real sockets on this machine."""
+
+from typing import Annotated
+
+import typer
+
+
+def add_to(app: typer.Typer) -> None:
+    """Add this command to the program."""
+    app.command()(serve)
+
+
+def serve(
+    bench: Annotated[
+        str, typer.Argument(metavar="BENCH", help="Bench file, or the name of a shipped one.")
+    ],
+    parts: Annotated[
+        str | None,
+        typer.Option("--parts", metavar="PARTS", help="Parts list: what lies in the positions."),
+    ] = None,
+    seed: Annotated[int, typer.Option("--seed", min=0, help="Draws parts and noise.")] = 0,
+    json: Annotated[
+        bool, typer.Option("--json", help="Print the instruments as JSON, one line.")
+    ] = False,
+) -> None:
+    """Serve a simulated bench on loopback sockets until stopped; prints the bench file for run."""
+    from ohmward import api
+
+    api.serve(bench, parts=parts, seed=seed, as_json_line=json)

@@ -1,0 +1,191 @@
+"""What a person sees in a terminal: the brief, the progress of a run, the decisions.
+
+Plain words and plain tables; nothing is told by colour alone, and a pipe gets the same text.
+"""
+
+from collections import Counter
+from collections.abc import Iterable, Sequence
+from itertools import groupby
+
+from rich.console import Console
+from rich.progress import BarColumn, Progress, TextColumn
+from rich.table import Table
+
+from ohmward.errors import Problem
+from ohmward.output.verdicts import PartVerdict
+from ohmward.sequence.brief import Brief, PlannedStage, PlannedSweep
+from ohmward.terms.decision import Decision
+from ohmward.units.values import format_quantity
+
+DECISION_STYLES = {
+    Decision.ACCEPT: "green",
+    Decision.REJECT: "bold red",
+    Decision.UNDECIDED: "yellow",
+    Decision.INVALID: "bold magenta",
+}
+
+
+def duration(seconds: float) -> str:
+    """Seconds as a person says them: ``42 s``, ``12 min``, ``3 h 05 min``."""
+    if seconds < 100:
+        return f"{seconds:.0f} s"
+    minutes = round(seconds / 60)
+    return f"{minutes} min" if minutes < 100 else f"{minutes // 60} h {minutes % 60:02d} min"
+
+
+def show_problems(console: Console, problems: Sequence[Problem]) -> None:
+    """Every problem on a line of its own, file by file."""
+    for problem in problems:
+        console.print(str(problem), markup=False, highlight=False, soft_wrap=True)
+    count = len(problems)
+    what = "One problem" if count == 1 else f"{count} problems"
+    console.print(f"{what} to mend; nothing was opened or written.", highlight=False)
+
+
+def show_brief(console: Console, brief: Brief) -> None:
+    """The brief as one reads it before a run: cautions first, then what is done and not done."""
+    _line(console, f"{brief.name}: {brief.purpose}")
+    if brief.follows:
+        _line(console, f"Conditions: {brief.follows}")
+    _line(
+        console,
+        f"{len(brief.parts)} parts on {brief.bench}, {brief.readings} readings, "
+        f"about {duration(brief.duration_s)}",
+    )
+    _list(console, "Before anyone touches the bench", brief.cautions)
+    console.print()
+    console.print(_stage_table(brief.stages))
+    _list(
+        console,
+        "This bench cannot reach",
+        [
+            f"{left.part_id}, {left.stage}: {left.what}; {left.reason}"
+            for left in brief.cannot_reach
+        ],
+    )
+    _list(console, "This bench cannot decide", [doubt.reason for doubt in brief.cannot_decide])
+    _list(console, "Worth knowing", brief.warnings)
+
+
+def _stage_table(stages: Sequence[PlannedSweep]) -> Table:
+    table = Table(box=None, pad_edge=False, header_style="bold")
+    for heading in ("part", "position", "stage", "points", "frequency", "level", "bias", "time"):
+        table.add_column(heading)
+    for _, group in groupby(stages, key=lambda stage: stage.part.part_id):
+        for stage in group:
+            table.add_row(
+                stage.part.part_id,
+                stage.part.position,
+                stage.stage,
+                f"{len(stage.points)} × {stage.repeats}",
+                _span((point.frequency_hz for point in stage.points), "Hz"),
+                _span((point.level_v for point in stage.points), "V"),
+                _bias_span(stage),
+                duration(stage.duration_s),
+            )
+    return table
+
+
+def _bias_span(stage: PlannedSweep) -> str:
+    if any(point.bias_a for point in stage.points):
+        return _span((point.bias_a for point in stage.points), "A")
+    return _span((point.bias_v for point in stage.points), "V")
+
+
+def _span(values: Iterable[float], unit: str) -> str:
+    listed = sorted(set(values))
+    first, last = format_quantity(listed[0], unit), format_quantity(listed[-1], unit)
+    return first if len(listed) == 1 else f"{first} to {last}"
+
+
+def show_decisions(console: Console, verdicts: Sequence[PartVerdict]) -> None:
+    """One row per part with its decision and the reason, then the count of each decision."""
+    table = Table(box=None, pad_edge=False, header_style="bold")
+    for heading in ("part", "position", "what", "decision", "reason"):
+        table.add_column(heading, overflow="fold")
+    for verdict in verdicts:
+        part = verdict.part
+        table.add_row(
+            part.part_id,
+            part.position,
+            f"{part.kind} {format_quantity(part.nominal, part.unit)}",
+            f"[{DECISION_STYLES[verdict.decision]}]{verdict.decision}[/]",
+            verdict.reason,
+        )
+    console.print(table)
+    counts = Counter(verdict.decision for verdict in verdicts)
+    _line(console, ", ".join(f"{counts[d]} {d}" for d in DECISION_STYLES if counts[d]))
+
+
+def _line(console: Console, text: str) -> None:
+    console.print(text, markup=False, highlight=False, soft_wrap=True)
+
+
+def _list(console: Console, heading: str, items: Sequence[str]) -> None:
+    if items:
+        console.print()
+        console.print(heading, style="bold")
+        for item in items:
+            _line(console, f"  - {item}")
+
+
+class ProgressBar:
+    """Watches a run on a terminal: one bar for the lot, with the time that is left.
+
+    On a pipe it writes one line per part instead. Use as a context manager.
+    """
+
+    def __init__(self, console: Console) -> None:
+        self._console = console
+        self._progress = Progress(
+            TextColumn("{task.description}"),
+            BarColumn(),
+            TextColumn("{task.percentage:3.0f} %"),
+            TextColumn("{task.fields[left]}"),
+            console=console,
+            transient=True,
+            disable=not console.is_terminal,
+        )
+        self._task = self._progress.add_task("", total=None, left="")
+        self._planned_s = 0.0
+        self._behind_s = 0.0
+        self._stage_s = 0.0
+        self._part_id = ""
+
+    def __enter__(self) -> "ProgressBar":
+        self._progress.start()
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self._progress.stop()
+
+    def begun(self, brief: Brief, *, behind_s: float) -> None:
+        """The run begins; ``behind_s`` of its planned time is done already."""
+        self._planned_s = max(brief.duration_s, 1e-9)
+        self._behind_s = behind_s
+        self._progress.update(self._task, total=self._planned_s, completed=behind_s)
+
+    def stage(self, stage: PlannedStage) -> None:
+        """A stage of a part begins."""
+        self._behind_s += self._stage_s
+        self._stage_s = stage.duration_s
+        self._show(f"{stage.part.part_id}, {stage.stage}", self._behind_s)
+        if not self._console.is_terminal and stage.part.part_id != self._part_id:
+            share = 100 * self._behind_s / self._planned_s
+            _line(self._console, f"{stage.part.part_id} at {stage.part.position} ({share:.0f} %)")
+        self._part_id = stage.part.part_id
+
+    def reading(self, stage: PlannedStage, *, done: int, of: int) -> None:
+        """One more reading is taken; the bar moves now and then."""
+        if done % 16 == 0 or done == of:
+            self._show(
+                f"{stage.part.part_id}, {stage.stage}", self._behind_s + self._stage_s * done / of
+            )
+
+    def note(self, text: str) -> None:
+        """Something a person should know now."""
+        _line(self._console, text)
+
+    def _show(self, text: str, behind_s: float) -> None:
+        left = f"about {duration(max(0.0, self._planned_s - behind_s))} left"
+        self._progress.update(self._task, description=text, completed=behind_s, left=left)
