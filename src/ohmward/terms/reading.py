@@ -36,3 +36,41 @@ class Environment:
 
     temperature_c: float = nan
     humidity_pct: float = nan
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class VoltageReading:
+    """One reading of a voltmeter, referred to what it measures (a divider is accounted for)."""
+
+    voltage_v: float
+    status: Status = Status.OK
+    range: str = ""
+    reply: bytes = b""
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class CurrentReading:
+    """One reading of a current meter; ``range_a`` is the full scale it was taken on."""
+
+    current_a: float
+    range_a: float
+    status: Status = Status.OK
+    reply: bytes = b""
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class SupplyReading:
+    """What a supply says of itself: what it was told, and what it measures at its terminals.
+
+    ``limiting`` is true while its current limit holds the voltage down; ``tripped`` when its
+    own protection has switched it off.
+    """
+
+    voltage_set_v: float
+    limit_set_a: float
+    voltage_v: float
+    current_a: float
+    output_on: bool
+    limiting: bool = False
+    tripped: bool = False
+    reply: bytes = b""
