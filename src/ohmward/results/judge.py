@@ -1,0 +1,160 @@
+"""Rows of results.csv: every limit held against what was measured, and what is worth reporting.
+
+One row for each limit of each part (at its worst point where it names no condition), then the
+main quantities of the part's kind where no limit judges them. Decisions are those of JCGM 106
+with guard band w = r·U; what cannot be trusted is invalid and never a rejection.
+"""
+
+from collections.abc import Collection, Iterable, Mapping, Sequence
+from math import isnan, nan
+
+import numpy as np
+from numpy.typing import NDArray
+
+from ohmward.results import reasons
+from ohmward.results.cells import Cell, cells_of
+from ohmward.results.closure import drift_of, split_closure
+from ohmward.results.columns import RESULT_COLUMNS
+from ohmward.results.derive import Columns
+from ohmward.results.judged import Judged, Rule, Stage, expand, matches, why_not
+from ohmward.results.quantities import CHANGES, evaluate, reference_cell
+from ohmward.results.report import report_stage
+from ohmward.results.whole_stage import judge_resonance
+from ohmward.terms.decision import Decision
+from ohmward.terms.limit import Limit
+from ohmward.terms.part import Part
+from ohmward.terms.quantity import QUANTITIES
+
+Row = dict[str, object]
+
+_SEVERITY = (Decision.REJECT, Decision.INVALID, Decision.UNDECIDED, Decision.ACCEPT)
+
+
+def judge(
+    readings: Columns,
+    impedance: Mapping[str, NDArray[np.generic]],
+    parts: Sequence[Part],
+    limits: Iterable[Limit],
+    *,
+    rule: Rule | None = None,
+    closures: Collection[str] = (),
+    run_id: str = "",
+) -> list[Row]:
+    """The rows of results.csv, by part, then limit, then what is reported.
+
+    ``readings`` are the journal's columns, ``impedance`` what `derive_impedance` made of them;
+    ``closures`` names the stages that end with a closure point. A number that does not apply is
+    NaN. Units are those of the quantity.
+    """
+    rule = rule or Rule()
+    stages: dict[str, dict[str, Stage]] = {part.part_id: {} for part in parts}
+    for (part_id, name), cells in cells_of(readings, impedance).items():
+        if part_id in stages:
+            stages[part_id][name] = _stage(cells, closes=name in closures)
+    by_part: dict[str, list[Limit]] = {}
+    for limit in limits:
+        by_part.setdefault(limit.part_id, []).append(limit)
+    rows = []
+    for part in parts:
+        found, own = stages[part.part_id], by_part.get(part.part_id, [])
+        for limit in own:
+            stage = found.get(limit.stage, Stage(cells=[]))
+            rows.append(_row(run_id, limit, judge_limit(part, limit, stage, rule)))
+        for name, stage in found.items():
+            here = [limit for limit in own if limit.stage == name]
+            for limit, judged in report_stage(part, name, stage, here, rule):
+                rows.append(_row(run_id, limit, judged))
+    return rows
+
+
+def _stage(cells: list[Cell], *, closes: bool) -> Stage:
+    if not closes:
+        return Stage(cells=cells)
+    rest, closure = split_closure(cells)
+    return Stage(cells=rest, drift=drift_of(rest[0], closure) if closure else "")
+
+
+def part_decisions(rows: Iterable[Row], parts: Iterable[Part]) -> dict[str, Decision]:
+    """Each part's decision from its judged rows; one of which nothing was judged is invalid."""
+    judged: dict[str, list[Decision]] = {part.part_id: [] for part in parts}
+    for row in rows:
+        if row["decision"] != Decision.REPORTED and row["part_id"] in judged:
+            judged[str(row["part_id"])].append(Decision(str(row["decision"])))
+    return {part_id: Decision.of_part(decisions) for part_id, decisions in judged.items()}
+
+
+def judge_limit(part: Part, limit: Limit, stage: Stage, rule: Rule) -> Judged:
+    """One limit held against one stage of its part: its worst point where it covers several."""
+    if QUANTITIES[limit.quantity].per == "part":
+        return judge_resonance(part, stage.cells, limit, rule, stage.drift)
+    cells = [cell for cell in stage.cells if matches(limit, cell.point)]
+    if limit.quantity in CHANGES:
+        # the reference is 0 by definition: it proves nothing unless it is asked for
+        asked = [cell for cell in cells if reference_cell(cell, stage.cells) is not cell]
+        cells = asked or cells
+    if not cells:
+        return Judged(decision=Decision.INVALID, reason=reasons.no_reading(limit))
+    return min((_judge_cell(rule, limit, cell, stage) for cell in cells), key=_badness)
+
+
+def _badness(judged: Judged) -> tuple[int, float]:
+    probability = 2.0 if isnan(judged.probability) else judged.probability
+    return _SEVERITY.index(judged.decision), probability
+
+
+def _judge_cell(rule: Rule, limit: Limit, cell: Cell, stage: Stage) -> Judged:
+    quantity = limit.quantity
+    found = evaluate(quantity, cell, stage.cells) if cell.good else None
+    doubt = why_not(quantity, cell, stage)
+    if found is None or doubt:
+        return _invalid(doubt, cell, found.value if found else nan)
+    spread = expand(rule, found, cell)
+    decision, probability = spread.decide(rule, limit.minimum, limit.maximum)
+    said = reasons.measured(
+        quantity, found.value, spread.u_expanded, spread.k, reasons.condition(cell.point)
+    )
+    note = f" ({found.note})" if found.note else ""
+    reason = reasons.judged(said + note, limit, decision, probability) + reasons.left_out(cell)
+    return Judged(
+        decision=decision,
+        reason=reason,
+        value=found.value,
+        u_expanded=spread.u_expanded,
+        k=spread.k,
+        probability=probability,
+        point=cell.point,
+    )
+
+
+def _invalid(reason: str, cell: Cell, value: float = nan) -> Judged:
+    return Judged(decision=Decision.INVALID, reason=reason, value=value, point=cell.point)
+
+
+def _row(run_id: str, limit: Limit, judged: Judged) -> Row:
+    point = judged.point
+    cells: Row = {
+        "run_id": run_id,
+        "part_id": limit.part_id,
+        "stage": limit.stage,
+        "quantity": limit.quantity,
+        "frequency_hz": point.frequency_hz if point else _number(limit.frequency_hz),
+        "level_v": point.level_v if point else _number(limit.level_v),
+        "bias_v": point.bias_v if point else _number(limit.bias_v),
+        "bias_a": point.bias_a if point else _number(limit.bias_a),
+        "voltage_v": nan,
+        "since_voltage_s": nan,
+        "value": judged.value,
+        "u_expanded": judged.u_expanded,
+        "coverage_k": judged.k,
+        "unit": QUANTITIES[limit.quantity].unit,
+        "limit_min": _number(limit.minimum),
+        "limit_max": _number(limit.maximum),
+        "limit_source": limit.source,
+        "decision": judged.decision,
+        "reason": judged.reason,
+    }
+    return {name: cells[name] for name in RESULT_COLUMNS}
+
+
+def _number(value: float | None) -> float:
+    return nan if value is None else value

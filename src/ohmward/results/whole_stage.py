@@ -1,0 +1,138 @@
+"""Quantities that have one value for a whole stage: the self-resonance."""
+
+from math import isnan
+
+from ohmward.metrology.decide import decide
+from ohmward.metrology.resonance import Resonance, self_resonance
+from ohmward.results import reasons
+from ohmward.results.cells import Cell
+from ohmward.results.judged import Judged, Rule, matches
+from ohmward.terms.condition import Point
+from ohmward.terms.decision import Decision
+from ohmward.terms.kind import Kind
+from ohmward.terms.limit import Limit
+from ohmward.terms.part import Part
+from ohmward.units.values import format_quantity
+
+_NAME = "self_resonance_hz"
+# the sign of the reactance that a part has below its self-resonance; a resistor has either
+_SIGN_BELOW = {Kind.CAPACITOR: -1, Kind.INDUCTOR: 1}
+
+
+def judge_resonance(part: Part, cells: list[Cell], limit: Limit, rule: Rule, drift: str) -> Judged:
+    """A limit on the self-resonance, also where the sweep ends before it or begins beyond it.
+
+    Without a sign change it is known to be above the highest frequency whose sign is sure, or,
+    where the part already behaves as its opposite there, below the lowest.
+    """
+    covered = _one_setting([cell for cell in cells if matches(limit, cell.point)])
+    if len(covered) < 2:
+        few = f"{_NAME} needs two frequencies with good readings in stage {limit.stage!r}"
+        return Judged(decision=Decision.INVALID, reason=few)
+    if drift:
+        return Judged(decision=Decision.INVALID, reason=f"{_NAME}: {drift}")
+    found = _resonance(covered)
+    point = _point(covered)
+    if isnan(found.lowest_hz):
+        doubt = f"{_NAME}: the sign of the reactance is in doubt at every point"
+        return Judged(decision=Decision.UNDECIDED, reason=f"{doubt}, {reasons.bounds(limit)}")
+    if isnan(found.frequency_hz):
+        return _without_change(part, found, limit, point)
+    u, k = found.u_hz, rule.coverage_k
+    decision, probability = decide(
+        found.frequency_hz, u, k, limit.minimum, limit.maximum, rule.guard
+    )
+    said = reasons.measured(_NAME, found.frequency_hz, k * u, k)
+    return Judged(
+        decision=decision,
+        reason=reasons.judged(said, limit, decision, probability),
+        value=found.frequency_hz,
+        u_expanded=k * u,
+        k=k,
+        probability=probability,
+        point=point,
+    )
+
+
+def report_resonance(cells: list[Cell], rule: Rule) -> Judged | None:
+    """The self-resonance if the sweep shows one; None if it does not."""
+    covered = _one_setting(cells)
+    if len(covered) < 2:
+        return None
+    found = _resonance(covered)
+    if isnan(found.frequency_hz):
+        return None
+    expanded = rule.coverage_k * found.u_hz
+    return Judged(
+        decision=Decision.REPORTED,
+        reason=reasons.measured(_NAME, found.frequency_hz, expanded, rule.coverage_k),
+        value=found.frequency_hz,
+        u_expanded=expanded,
+        k=rule.coverage_k,
+        point=_point(covered),
+    )
+
+
+def _one_setting(cells: list[Cell]) -> list[Cell]:
+    """The good cells at the level and bias of the first: a resonance is of one setting."""
+    good = [cell for cell in cells if cell.good and not isnan(cell.type_b[1])]
+    if not good:
+        return []
+    first = good[0].point
+    alike = [
+        cell
+        for cell in good
+        if (cell.point.level_v, cell.point.bias_v, cell.point.bias_a)
+        == (first.level_v, first.bias_v, first.bias_a)
+    ]
+    return alike if len({cell.point.frequency_hz for cell in alike}) > 1 else []
+
+
+def _resonance(cells: list[Cell]) -> Resonance:
+    once = {cell.point.frequency_hz: cell for cell in reversed(cells)}
+    spread = [cell.covariance() for cell in once.values()]
+    return self_resonance(
+        list(once),
+        [cell.r for cell in once.values()],
+        [cell.x for cell in once.values()],
+        [u_r for u_r, _, _ in spread],
+        [u_x for _, u_x, _ in spread],
+        [rho for _, _, rho in spread],
+    )
+
+
+def _point(cells: list[Cell]) -> Point:
+    """The setting without a frequency: the value is a frequency itself."""
+    first = cells[0].point
+    return Point(
+        frequency_hz=float("nan"),
+        level_v=first.level_v,
+        bias_v=first.bias_v,
+        bias_a=first.bias_a,
+    )
+
+
+def _without_change(part: Part, found: Resonance, limit: Limit, point: Point) -> Judged:
+    beyond = _SIGN_BELOW.get(part.kind, found.first_sign) != found.first_sign
+    low, high = (0.0, found.lowest_hz) if beyond else (found.highest_hz, float("inf"))
+    bound = (
+        f"below {format_quantity(high, 'Hz')}" if beyond else f"above {format_quantity(low, 'Hz')}"
+    )
+    minimum = -1.0 if limit.minimum is None else limit.minimum
+    maximum = float("inf") if limit.maximum is None else limit.maximum
+    if minimum <= low and high <= maximum:
+        decision = Decision.ACCEPT
+    elif high < minimum or low > maximum:
+        decision = Decision.REJECT
+    else:
+        decision = Decision.UNDECIDED
+    how = {
+        Decision.ACCEPT: "within",
+        Decision.REJECT: "outside",
+        Decision.UNDECIDED: "which leaves open",
+    }[decision]
+    return Judged(
+        decision=decision,
+        reason=f"{_NAME} is {bound}, no sign change in the sweep: {how} {reasons.bounds(limit)}",
+        point=point,
+    )
