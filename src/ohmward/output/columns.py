@@ -114,6 +114,7 @@ CONDITIONS = (
     _number("frequency_hz", "Hz", "frequency of the value; empty where it has none"),
     _number("level_v", "V", "AC level of the value, rms"),
     _number("bias_v", "V", "DC bias of the value"),
+    _number("bias_a", "A", "DC bias current of the value"),
     _number("voltage_v", "V", "DC voltage under which a current was read"),
     _number("since_voltage_s", "s", "time since that voltage was reached"),
 )
