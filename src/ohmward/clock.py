@@ -83,11 +83,13 @@ def run_in_real_time(main: Callable[[Clock], Awaitable[T]]) -> T:
     return trio.run(start)
 
 
-def run_in_virtual_time(main: Callable[[Clock], Awaitable[T]]) -> T:
+def run_in_virtual_time(
+    main: Callable[[Clock], Awaitable[T]], *, start_utc: datetime = DRY_RUN_START_UTC
+) -> T:
     """Run ``main(clock)`` in a trio loop whose time jumps to the next deadline."""
 
     async def start() -> T:
-        return await main(VirtualClock(trio.current_time()))
+        return await main(VirtualClock(trio.current_time(), start_utc))
 
     return trio.run(start, clock=trio.testing.MockClock(autojump_threshold=0))
 

@@ -158,7 +158,7 @@ async def _note_identities(order: Order, bench: OpenBench, recorder: Recorder) -
             address=instrument.address,
             identity=identity,
             driver=driver.name,
-            sha256=driver.sha256,
+            sha256=driver.digest,
         )
 
 

@@ -1,0 +1,162 @@
+"""From a run's journal to its tables: everything derived is computed here, and can be again."""
+
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from ohmward.journal import schema
+from ohmward.journal.store import Row, Store
+from ohmward.output import columns
+from ohmward.output.tables import TableWriter
+from ohmward.results.derive import derive_impedance
+from ohmward.results.judge import judge
+from ohmward.results.judged import Rule
+from ohmward.sequence.brief import Brief
+from ohmward.setup.driver import Driver
+from ohmward.terms.accuracy import ImpedanceAccuracy
+
+Arrays = dict[str, NDArray[Any]]
+ResultRow = dict[str, object]
+Truth = Callable[[ResultRow], tuple[float, str]]
+
+_TEXT = {"range", "integration", "status", "pair", "instrument"}
+_KEPT_OF_JOURNAL = (
+    "reading",
+    "point",
+    "part_id",
+    "stage",
+    "status",
+    "range",
+    "integration",
+    "instrument",
+    "frequency_hz",
+    "level_set_v",
+    "level_v",
+    "bias_set_v",
+    "bias_set_a",
+    "temperature_c",
+)
+_KEPT_OF_DERIVED = (
+    "resistance_ohm",
+    "reactance_ohm",
+    "u_resistance_ohm",
+    "u_reactance_ohm",
+    "r_rx",
+)
+
+
+def tabulate(
+    folder: Path,
+    brief: Brief,
+    drivers: Mapping[str, Driver],
+    cable_m: Mapping[str, float],
+    truth: Truth | None = None,
+) -> list[ResultRow]:
+    """Write impedance.csv, results.csv, events.csv (and truth.csv) of a run; returns the results.
+
+    The journal must be closed. Readings pass through in batches, so that memory does not grow
+    with the number of columns.
+    """
+    store = Store.read(folder / "journal.sqlite")
+    try:
+        facts = store.facts()
+        run_id, simulated = facts["run_id"], facts["simulated"] == "yes"
+        kept: list[tuple[Arrays, Arrays]] = []
+        with TableWriter(folder, columns.IMPEDANCE) as table:
+            for readings in journal_columns(store):
+                derived = derive_impedance(
+                    readings,
+                    brief.parts,
+                    accuracies_of(drivers),
+                    run_id=run_id,
+                    simulated=simulated,
+                    cable_m=cable_m,
+                )
+                table.arrays(derived)
+                kept.append(_needed(readings, derived))
+        _write_events(folder, run_id, store.events())
+    finally:
+        store.abandon()
+    readings, derived = _together(kept)
+    closures = {stage.stage for stage in brief.stages if stage.closure}
+    rule = Rule(guard=brief.guard, coverage_k=brief.coverage_k)
+    results = judge(
+        readings, derived, brief.parts, brief.limits, rule=rule, closures=closures, run_id=run_id
+    )
+    with TableWriter(folder, columns.RESULTS) as table:
+        table.rows(results)
+    if truth is not None:
+        with TableWriter(folder, columns.TRUTH) as table:
+            table.rows(_truth_rows(results, truth))
+    return results
+
+
+def accuracies_of(drivers: Mapping[str, Driver]) -> dict[str, ImpedanceAccuracy]:
+    """The impedance meters' accuracies, by the bench's name of the instrument."""
+    found = ((name, driver.impedance_accuracy) for name, driver in drivers.items())
+    return {name: accuracy for name, accuracy in found if accuracy is not None}
+
+
+def journal_columns(store: Store, rows_at_once: int = 8192) -> Iterator[Arrays]:
+    """The journal's readings as arrays by column, batch by batch, in order."""
+    stages = store.stages()
+    names = ("reading", *schema.IMPEDANCE_COLUMNS)
+    for batch in store.impedance(rows_at_once):
+        by_name = dict(zip(names, zip(*batch, strict=True), strict=True))
+        arrays: Arrays = {}
+        for name, values in by_name.items():
+            if name == "stage":
+                continue
+            arrays[name] = _array(name, values)
+        arrays["time_utc"] = arrays.pop("time_us").astype("datetime64[us]")
+        begun = [stages[number] for number in by_name["stage"]]
+        for name, key in (("stage", "name"), ("part_id", "part_id"), ("position", "position")):
+            arrays[name] = np.array([stage[key] for stage in begun], dtype=object)
+        yield arrays
+
+
+def _array(name: str, values: Sequence[Any]) -> NDArray[Any]:
+    if name in _TEXT or name == "reply":
+        return np.array(values, dtype=object)
+    if name in ("reading", "point", "repeat", "time_us"):
+        return np.array(values, dtype=np.int64)
+    return np.array(values, dtype=np.float64)  # None becomes NaN
+
+
+def _needed(readings: Arrays, derived: Mapping[str, NDArray[Any]]) -> tuple[Arrays, Arrays]:
+    return (
+        {name: readings[name] for name in _KEPT_OF_JOURNAL},
+        {name: derived[name] for name in _KEPT_OF_DERIVED},
+    )
+
+
+def _together(kept: list[tuple[Arrays, Arrays]]) -> tuple[Arrays, Arrays]:
+    if not kept:
+        empty = np.array([], dtype=np.float64)
+        return dict.fromkeys(_KEPT_OF_JOURNAL, empty), dict.fromkeys(_KEPT_OF_DERIVED, empty)
+    return (
+        {name: np.concatenate([one[name] for one, _ in kept]) for name in _KEPT_OF_JOURNAL},
+        {name: np.concatenate([two[name] for _, two in kept]) for name in _KEPT_OF_DERIVED},
+    )
+
+
+def _write_events(folder: Path, run_id: str, events: list[Row]) -> None:
+    names = ("event", *schema.EVENT_COLUMNS)
+    with TableWriter(folder, columns.EVENTS) as table:
+        table.rows(
+            {
+                **(row := dict(zip(names, event, strict=True))),
+                "run_id": run_id,
+                "time_utc": f"{np.datetime64(row['time_us'], 'us')}Z",
+            }
+            for event in events
+        )
+
+
+def _truth_rows(results: list[ResultRow], truth: Truth) -> Iterator[ResultRow]:
+    for row in results:
+        true_value, fault = truth(row)
+        yield {**row, "true_value": true_value, "fault": fault}
