@@ -47,7 +47,8 @@ def _one(text: str, found: str, *, decimal_comma: bool) -> Rating:
     try:
         volts = parse_quantity(value, "V", decimal_comma=decimal_comma)
     except UnitError as error:
-        raise UnitError(expected=_EXPECTED, found=found) from error
+        asked = f"; {error.expected}" if "?" in error.expected else ""
+        raise UnitError(expected=f"{_EXPECTED}{asked}", found=found) from error
     if volts <= 0:
         raise UnitError(expected=f"{_EXPECTED} above zero", found=found)
     if match and match["ac"]:

@@ -77,9 +77,12 @@ def parse_tolerance(
             high = share(both["value"])
             low = -high
         else:
-            raise UnitError(expected=_EXPECTED, found=found)
+            low = high = 0.0
     except UnitError as error:
-        raise UnitError(expected=_EXPECTED, found=found) from error
+        asked = f"; {error.expected}" if "?" in error.expected else ""
+        raise UnitError(expected=f"{_EXPECTED}{asked}", found=found) from error
+    if two is None and both is None:
+        raise UnitError(expected=_EXPECTED, found=found)
     if low > 0 or high < 0 or low == high or low <= -1:
         raise UnitError(expected=f"{_EXPECTED} around the nominal value", found=found)
     return low, high
