@@ -1,0 +1,44 @@
+"""What an instrument sees of the bench: the ends of its leads, and the room it stands in."""
+
+from typing import Protocol
+
+
+class Connection(Protocol):
+    """What lies between an impedance meter's leads, the fixture included."""
+
+    key: str
+    """Names what is connected: the part ids, joined; empty for an open fixture."""
+
+    def impedance(
+        self, frequency_hz: float, level_v: float, bias_v: float, bias_a: float
+    ) -> complex:
+        """Impedance in ohm at this rms level and DC bias; infinite when there is nothing."""
+
+    def resistance_dc_ohm(self) -> float:
+        """Resistance to direct current, in ohm; infinite when there is nothing."""
+
+    def short_impedance(self, frequency_hz: float) -> complex:
+        """What the meter sees with the fixture shorted in place of the part, in ohm."""
+
+    def open_impedance(self, frequency_hz: float) -> complex:
+        """What the meter sees with the fixture empty, in ohm."""
+
+
+class Terminals(Protocol):
+    """The ends of one impedance meter's leads."""
+
+    def connection(self, now_s: float) -> Connection:
+        """What is connected now."""
+
+    def changed_s(self, now_s: float) -> float:
+        """When a contact moved last."""
+
+
+class Room(Protocol):
+    """The air around the bench."""
+
+    def temperature_c(self, now_s: float) -> float:
+        """Air temperature in °C."""
+
+    def humidity_pct(self, now_s: float) -> float:
+        """Relative humidity in %."""
