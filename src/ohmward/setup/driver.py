@@ -98,6 +98,7 @@ class TimingTable(Model):
     )
     least_periods: float = Field(0.0, ge=0, description="periods of the test signal at least")
     settling: Seconds = Field(0.0, description="after a change of frequency, level or bias")
+    settling_periods: float = Field(0.0, ge=0, description="periods of the test signal besides")
 
 
 class MeterTable(Model):
@@ -238,6 +239,11 @@ class Driver(Model):
         """How long one reading takes at this integration and frequency; 0 when not stated."""
         stated = self.timing.reading.get(integration, 0.0)
         return max(stated, self.timing.least_periods / frequency_hz if frequency_hz else 0.0)
+
+    def settling_time_s(self, frequency_hz: float) -> float:
+        """How long it settles after a change of frequency, level or bias; 0 when not stated."""
+        periods = self.timing.settling_periods / frequency_hz if frequency_hz else 0.0
+        return self.timing.settling + periods
 
 
 def load_driver(name_or_path: str, beside: Path, problems: Problems) -> Driver | None:

@@ -107,6 +107,9 @@ class Setting(NumberStyle):
     allowed: tuple[float, ...] = Field(
         (), description="the only values that there are", examples=[["100 Hz", "1 kHz"]]
     )
+    between: Literal["refused", "up", "down", "nearest"] = Field(
+        "refused", description="what is set for a value between two allowed ones"
+    )
     tolerance: Fraction = Field(
         1e-6,
         description="share of the value by which the read-back may differ",
@@ -162,6 +165,25 @@ class Setting(NumberStyle):
         if self.reply is not None and not any(f.name == "value" for f in self.reply.fields):
             raise wrong("a field named 'value' in the reply", "none")
         return self
+
+    def settable(self, value: float) -> float | None:
+        """The number that is sent for this one; None where the limits do not let it be set.
+
+        A value that an allowed one stands for within the tolerance is that one.
+        """
+        room = self.tolerance * abs(value) + self.tolerance_absolute
+        if self.minimum is not None and value < self.minimum - room:
+            return None
+        if self.maximum is not None and value > self.maximum + room:
+            return None
+        if not self.allowed:
+            return value
+        near = min(self.allowed, key=lambda one: abs(one - value))
+        if abs(near - value) <= room:
+            return near
+        above = min((one for one in self.allowed if one > value), default=None)
+        below = max((one for one in self.allowed if one < value), default=None)
+        return {"refused": None, "up": above, "down": below, "nearest": near}[self.between]
 
     @property
     def layout(self) -> Reply:
