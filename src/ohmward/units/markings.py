@@ -188,7 +188,7 @@ def _of_value(text: str, code: _Code) -> Iterator[Marking]:
             nominal = parse_quantity(match["rest"], code.unit)
             low, high = parse_tolerance(match["tolerance"], nominal, code.unit)
             yield Marking(nominal=nominal, tolerance_low=low, tolerance_high=high)
-        elif text.endswith(code.unit) or not _LETTERED.fullmatch(text):
+        elif text[-2:-1].isalpha() or not _LETTERED.fullmatch(text):
             yield Marking(nominal=parse_quantity(text, code.unit))
     except UnitError:
         return
