@@ -97,9 +97,8 @@ def _check_ranges(kind: str, fields: dict[str, str | None]) -> None:
         len(numbers) != 4 or any(int(number) > 255 for number in numbers)
     ):
         raise AddressError("a host name or four numbers from 0 to 255")
-    if kind == "gpib":
-        if int(fields["primary"] or 0) > 30 or int(fields["secondary"] or 0) > 30:
-            raise AddressError("a primary and secondary GPIB address from 0 to 30")
+    if kind == "gpib" and max(int(fields["primary"] or 0), int(fields["secondary"] or 0)) > 30:
+        raise AddressError("a primary and secondary GPIB address from 0 to 30")
     for name in ("maker", "model"):
         value = fields.get(name)
         if value is not None and int(value, 16 if value[:2].lower() == "0x" else 10) > 0xFFFF:

@@ -65,12 +65,16 @@ def validate(model: type[M], data: Mapping[str, Any], file: object, problems: Pr
         return None
 
 
-def salvage(model: type[M], data: Mapping[str, Any]) -> M | None:
+def salvage(
+    model: type[M], data: Mapping[str, Any], stand_ins: Mapping[str, Any] | None = None
+) -> M | None:
     """The model of the parts of the table that are right, or None where too little is.
 
-    What is refused is left out, and where that leaves a gap, the table around it too. Only
-    checks that cannot be misled by what is missing may look at it.
+    What is refused is left out, and where that leaves a gap, the table around it too; a
+    top key that must be there is replaced by its stand-in. Only checks that cannot be misled
+    by what is missing may look at the result.
     """
+    spare = dict(stand_ins or {})
     rest: Any = deepcopy(dict(data))
     for _ in range(200):
         try:
@@ -80,9 +84,13 @@ def salvage(model: type[M], data: Mapping[str, Any]) -> M | None:
             where = _path_in(rest, first["loc"])
             if first["type"] == "missing" and where and _at(rest, where) is None:
                 where = where[:-1]
-            if not where:
+            if len(where) <= 1 and first["loc"] and first["loc"][0] in spare:
+                top = first["loc"][0]
+                rest[top] = spare.pop(top)
+            elif where:
+                _remove(rest, where)
+            else:
                 return None
-            _remove(rest, where)
     return None
 
 
