@@ -59,7 +59,7 @@ def show_brief(console: Console, brief: Brief) -> None:
         console,
         "This bench cannot reach",
         [
-            f"{left.part_id}, {left.stage}: {left.what}; {left.reason}"
+            f"{left.who}, {left.stage}: {left.what}; {left.reason}"
             for left in brief.cannot_reach
         ],
     )

@@ -65,10 +65,17 @@ class PlannedSweep(PlannedStage):
 class CannotReach:
     """Something that the sequence allows to be left out, and that this bench leaves out."""
 
-    part_id: str
+    part_ids: tuple[str, ...]
     stage: str
     what: str
     reason: str
+
+    @property
+    def who(self) -> str:
+        """The parts that it concerns, in few words."""
+        first = ", ".join(self.part_ids[:3])
+        more = len(self.part_ids) - 3
+        return f"{first} and {more} more" if more > 0 else first
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -128,7 +135,7 @@ class Brief:
 def as_plain(value: Any) -> Any:
     """A model, a mapping or a sequence of them, in types that JSON has; missing is null."""
     if isinstance(value, PlannedStage):
-        return {"kind": value.kind} | _fields_as_plain(value)
+        return {"kind": value.kind} | _fields_as_plain(value) | {"part": value.part.part_id}
     if hasattr(value, "__dataclass_fields__"):
         return _fields_as_plain(value)
     if isinstance(value, Mapping):

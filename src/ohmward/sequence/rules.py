@@ -109,7 +109,7 @@ def tan_delta_limit(rated_v: float, capacitance_f: float) -> float:
     below = [row for row in TAN_DELTA_BY_RATING if row[0] <= rated_v * (1.0 + 1e-9)]
     above = [row for row in TAN_DELTA_BY_RATING if row[0] >= rated_v * (1.0 - 1e-9)]
     if not below or not above:
-        raise NotStated(f"tan delta is stated for 6.3 V to 450 V, not for {rated_v:g} V")
+        raise NotStated(f"stated for 6.3 V to 450 V, not for {rated_v:g} V")
     base = min(below[-1][1], above[0][1])
     further_thousands = max(0, floor((capacitance_f * 1e6 - 1000.0) / 1000.0 + 1e-9))
     return base + TAN_DELTA_PER_FURTHER_1000_UF * further_thousands
@@ -196,7 +196,7 @@ def _dissipation_bounds(part: Part, frequency_hz: float) -> Bounds:
     for stated_hz, dissipation in DISSIPATION_BY_DIELECTRIC.get(_dielectric_of(part), ()):
         if same_frequency(stated_hz, frequency_hz):
             return None, dissipation
-    raise NotStated(f"no dissipation is stated for {part.dielectric} at {frequency_hz:g} Hz")
+    raise NotStated(f"not stated for {part.dielectric} at {frequency_hz:g} Hz")
 
 
 # --- the registry ----------------------------------------------------------------------------

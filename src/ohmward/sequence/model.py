@@ -1,0 +1,244 @@
+"""The tables of a sequence file; what they hold is checked here, how they fit in `check`."""
+
+import re
+from math import floor, log10
+from typing import Annotated, Any, ClassVar, Literal, Self
+
+from pydantic import AfterValidator, Field, PrivateAttr, ValidationInfo, field_validator
+
+from ohmward.sequence.rules import same_frequency
+from ohmward.sequence.values import Bias, BiasSetting, Bound, NominalValue, read_bound
+from ohmward.setup.quantities import (
+    Model,
+    OneOrMany,
+    PositiveHertz,
+    PositiveOhms,
+    PositiveVolts,
+    Seconds,
+    quantity,
+    wrong,
+)
+from ohmward.setup.toml import one_of
+from ohmward.terms.kind import Kind, Polarity
+from ohmward.terms.quantity import QUANTITIES
+from ohmward.terms.role import Role
+
+Share = Annotated[float, quantity("1", above=0, maximum=1)]
+Times = Annotated[float, quantity("1", above=0, maximum=1000)]
+Coverage = Annotated[float, quantity("1", above=0, maximum=10)]
+Guard = Annotated[float, quantity("1", minimum=0, maximum=10)]
+SIGNIFICANT_DIGITS = 6  # of the frequencies of a range: more than any meter sets
+
+
+STAGE_NAME = r"^[a-z0-9][a-z0-9 ._-]{0,39}$"
+
+
+def _stage_name(value: str) -> str:
+    if re.fullmatch(STAGE_NAME, value) is None:
+        raise wrong("a name of lower-case letters, digits, spaces and . _ -", value)
+    return value
+
+
+StageName = Annotated[
+    str, AfterValidator(_stage_name), Field(json_schema_extra={"pattern": STAGE_NAME})
+]
+
+
+class Table(Model):
+    """A table of a list of tables, which knows its place so that problems can name it.
+
+    ``whole`` is False for what could be saved of a table with something wrong in it: a check
+    must not report what is only missing because it was wrong.
+    """
+
+    _place: int = PrivateAttr(default=1)
+    _whole: bool = PrivateAttr(default=True)
+
+    @property
+    def place(self) -> int:
+        """Its place in the file, counted from 1."""
+        return self._place
+
+    @property
+    def whole(self) -> bool:
+        """Whether nothing was wrong with it."""
+        return self._whole
+
+    def placed(self, place: int, *, whole: bool = True) -> Self:
+        """Itself, told where it stands."""
+        self._place, self._whole = place, whole
+        return self
+
+
+class PartFilter(Model):
+    """Which parts something applies to; every key that is there must fit."""
+
+    kind: OneOrMany[Kind] = Field((), description="kinds of part")
+    dielectric: OneOrMany[str] = Field(
+        (), description="dielectrics, as the parts list names them", examples=["PP"]
+    )
+    polarity: Polarity | None = Field(None, description="polar or nonpolar parts only")
+    above: NominalValue | None = Field(None, description="nominal value above this")
+    up_to: NominalValue | None = Field(None, description="nominal value up to and with this")
+
+
+class FrequencyRange(Model):
+    """Frequencies evenly spaced on a logarithmic scale, both ends included."""
+
+    start: PositiveHertz = Field(alias="from", description="first frequency")
+    stop: PositiveHertz = Field(alias="to", description="last frequency")
+    per_decade: int = Field(ge=1, le=1000, description="points per decade", examples=[10])
+    clip: bool = Field(
+        False, description="leave out what the meter cannot reach, instead of refusing"
+    )
+
+    def unroll(self) -> tuple[float, ...]:
+        """``from`` · 10^(i/per_decade) to six digits as far as ``to``, which is always last."""
+        count = floor(log10(self.stop / self.start) * self.per_decade + 1e-9)
+        grid = [_rounded(self.start * 10 ** (i / self.per_decade)) for i in range(count + 1)]
+        if not same_frequency(grid[-1], self.stop):
+            grid.append(self.stop)
+        return tuple(grid)
+
+
+def _rounded(frequency_hz: float) -> float:
+    return float(f"{frequency_hz:.{SIGNIFICANT_DIGITS - 1}e}")
+
+
+class SettleRule(Model):
+    """A point is read once its last few readings agree."""
+
+    tolerance: Share = Field(description="share by which they may differ", examples=["0.1 %"])
+    readings: int = Field(3, ge=2, le=100, description="how many must agree")
+    at_most: Seconds = Field(description="then the point is unsettled", examples=["10 s"])
+
+
+class StageTable(Table):
+    """What every kind of stage has."""
+
+    roles: ClassVar[frozenset[Role]] = frozenset()
+    energises: ClassVar[bool] = False  # whether it exists to put a high voltage on a part
+
+    name: StageName = Field(
+        description="what limits and tables call this stage: lower case", examples=["sweep"]
+    )
+    parts: PartFilter = Field(PartFilter(), description="which parts get this stage")
+
+
+class SweepStage(StageTable):
+    """Impedance over frequency × level × bias: bias changes least often, frequency most."""
+
+    roles: ClassVar[frozenset[Role]] = frozenset({Role.IMPEDANCE_METER})
+
+    kind: Literal["sweep"]
+    frequency: FrequencyRange | OneOrMany[PositiveHertz] = Field(
+        description="a frequency, a list, or { from, to, per_decade }"
+    )
+    level: OneOrMany[PositiveVolts] = Field(description="AC level, rms", examples=["1 V"])
+    bias: OneOrMany[BiasSetting] = Field(
+        (Bias(0.0, "V"),), description="DC bias: voltages, currents or shares of the rating"
+    )
+    repeats: int = Field(1, ge=1, le=10_000_000, description="readings kept at each point")
+    interval: Seconds = Field(
+        0.0, description="from one repeat to the next; 0 for as fast as the meter goes"
+    )
+    dwell: Seconds = Field(0.0, description="wait at each point before it is read")
+    settle: SettleRule | None = Field(None, description="read only once readings agree")
+    closure: bool = Field(False, description="back to the first point at the end: shows drift")
+    integration: str = Field("medium", description="a word of the driver: short, medium, long")
+    pair: str | None = Field(
+        None, description="what the meter sends; the driver's choice if left out", examples=["R-X"]
+    )
+    range: PositiveOhms | None = Field(
+        None, description="range to hold; left out, the meter ranges by itself", examples=["1 kohm"]
+    )
+
+    @property
+    def frequencies_hz(self) -> tuple[float, ...]:
+        """The frequencies as asked for, in order."""
+        if isinstance(self.frequency, FrequencyRange):
+            return self.frequency.unroll()
+        return self.frequency
+
+
+# Every kind of stage, by its word in the file. With a second one, AnyStage becomes
+# Annotated[SweepStage | …, Field(discriminator="kind")] and `plan` gets a row in its table.
+STAGE_TABLES: dict[str, type[SweepStage]] = {"sweep": SweepStage}
+AnyStage = SweepStage
+
+
+class Condition(Model):
+    """Where a limit holds; what is left out holds at every value that the stage measures."""
+
+    frequency: PositiveHertz | None = Field(None, examples=["1 kHz"])
+    level: PositiveVolts | None = Field(None, examples=["1 V"])
+    bias: BiasSetting | None = Field(None, examples=["0 V"])
+
+
+class LimitTable(Table):
+    """One limit: bounds on a quantity, or a named rule that knows them."""
+
+    stage: OneOrMany[str] = Field(description="names of the stages that measure it")
+    quantity: str = Field(
+        description="a column of the tables", json_schema_extra={"enum": [*sorted(QUANTITIES)]}
+    )
+    at: Condition = Field(Condition(), description="where it holds")
+    minimum: Bound | None = Field(
+        None,
+        alias="min",
+        description="least: a value with unit, or a share of nominal with its sign",
+        examples=["90 nF", "-5 %"],
+    )
+    maximum: Bound | None = Field(
+        None,
+        alias="max",
+        description="greatest: a value with unit, or a share of nominal with its sign",
+        examples=["47 mohm", "+5 %"],
+    )
+    rule: str | None = Field(None, description="a named rule instead of min and max")
+    times: Times = Field(1.0, description="multiplies what the rule allows", examples=[1.5])
+    source: str = Field(min_length=1, description="which standard or practice says so")
+    parts: PartFilter = Field(PartFilter(), description="which parts it judges")
+
+    @field_validator("quantity")
+    @classmethod
+    def _known(cls, value: str) -> str:
+        if value not in QUANTITIES:
+            raise wrong(one_of(value, list(QUANTITIES)), value, "limit-unknown-quantity")
+        return value
+
+    @field_validator("minimum", "maximum", mode="before", json_schema_input_type=str | float)
+    @classmethod
+    def _in_unit(cls, value: Any, info: ValidationInfo) -> Any:
+        name = info.data.get("quantity")
+        return None if name is None else read_bound(value, QUANTITIES[name].unit)
+
+
+class DecisionTable(Model):
+    """How sure a decision must be: JCGM 106 with a guard band of guard × U, U = coverage × u."""
+
+    coverage: Coverage = Field(2.0, description="coverage factor k")
+    guard: Guard = Field(1.0, description="guard band as a multiple of U; 1 as in ILAC-G8")
+
+
+class SequenceHead(Model):
+    """A sequence file without its stages and limits."""
+
+    format: Literal[1]
+    name: str = Field(min_length=1, max_length=80, description="what this sequence is called")
+    purpose: str = Field(min_length=1, description="what it is for, in a sentence")
+    follows: str = Field(
+        min_length=1, description="whose conditions it follows, and what is from memory"
+    )
+    kinds: OneOrMany[Kind] = Field(description="kinds of part that it is for")
+    rating_allowed: Share = Field(
+        1.0, description="share of its rating to which a part may be stressed", examples=["80 %"]
+    )
+    decision: DecisionTable = DecisionTable()
+
+
+class Sequence(SequenceHead):
+    """A sequence file."""
+
+    stage: Annotated[tuple[AnyStage, ...], Field(min_length=1)]
+    limit: tuple[LimitTable, ...] = ()

@@ -1,0 +1,141 @@
+"""What an impedance meter can set, as its driver says, against what a stage asks for."""
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+from ohmward.sequence.model import FrequencyRange, SweepStage
+from ohmward.sequence.notes import Notes
+from ohmward.sequence.rules import same_frequency
+from ohmward.sequence.values import Bias
+from ohmward.setup.driver import Driver, Setting
+from ohmward.units.values import format_quantity
+
+BIAS_SETTINGS = {"V": "bias_voltage", "A": "bias_current"}
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class Reach:
+    """One meter's limits: asks of each setting whether a value can be set."""
+
+    name: str
+    driver: Driver
+
+    def can(self, setting: str, value: float) -> bool:
+        """Whether the meter takes this value; False for a setting that it does not have."""
+        found = self.driver.setting.get(setting)
+        return found is not None and _takes(found, value)
+
+    def span(self, setting: str, unit: str) -> str:
+        """What the meter takes, in words."""
+        found = self.driver.setting.get(setting)
+        if found is None:
+            return f"a meter that has this setting: {self.name} has none"
+        if found.allowed:
+            return "one of " + ", ".join(_shown(value, unit) for value in found.allowed)
+        if found.minimum is not None and found.maximum is not None:
+            return f"{_shown(found.minimum, unit)} to {_shown(found.maximum, unit)} ({self.name})"
+        if found.maximum is not None:
+            return f"at most {_shown(found.maximum, unit)} ({self.name})"
+        if found.minimum is not None:
+            return f"at least {_shown(found.minimum, unit)} ({self.name})"
+        return f"a value that {self.name} takes"
+
+
+def _takes(setting: Setting, value: float) -> bool:
+    if setting.allowed:
+        return any(same_frequency(value, one) for one in setting.allowed)
+    slack = 1e-9 * abs(value)
+    return (setting.minimum is None or value >= setting.minimum - slack) and (
+        setting.maximum is None or value <= setting.maximum + slack
+    )
+
+
+def _shown(value: float, unit: str) -> str:
+    return format_quantity(value, unit, 6)
+
+
+def reachable_frequencies(stage: SweepStage, reach: Reach) -> tuple[float, ...]:
+    """The stage's frequencies, without those of a clipped range that the meter lacks."""
+    if isinstance(stage.frequency, FrequencyRange) and stage.frequency.clip:
+        return tuple(f for f in stage.frequencies_hz if reach.can("frequency", f))
+    return stage.frequencies_hz
+
+
+def check_reach(stage: SweepStage, reach: Reach, notes: Notes) -> None:
+    """Note everything that the stage asks of the meter and that the meter cannot do."""
+    key = f"stage[{stage.place}]"
+    _check_frequencies(stage, reach, notes, key)
+    for place, level in enumerate(stage.level, start=1):
+        if not reach.can("level", level):
+            notes.sequence(
+                "level-beyond-meter",
+                _item(f"{key}.level", place, len(stage.level)),
+                expected=reach.span("level", "V"),
+                found=_shown(level, "V"),
+            )
+    for place, bias in enumerate(stage.bias, start=1):
+        if not can_bias(bias, reach):
+            notes.sequence(
+                "bias-beyond-meter",
+                _item(f"{key}.bias", place, len(stage.bias)),
+                expected=reach.span(BIAS_SETTINGS[bias.unit], bias.unit),
+                found=str(bias),
+            )
+    _check_words(stage, reach, notes, key)
+    if stage.range is not None and not reach.can("range", stage.range):
+        notes.sequence(
+            "range-beyond-meter",
+            f"{key}.range",
+            expected=reach.span("range", "ohm"),
+            found=_shown(stage.range, "ohm"),
+        )
+
+
+def can_bias(bias: Bias, reach: Reach) -> bool:
+    """Whether the meter can set this bias; a share of the rating is looked at part by part."""
+    return bias.unit == "1" or bias.value == 0 or reach.can(BIAS_SETTINGS[bias.unit], bias.value)
+
+
+def _check_frequencies(stage: SweepStage, reach: Reach, notes: Notes, key: str) -> None:
+    wanted = stage.frequencies_hz
+    beyond = [frequency for frequency in wanted if not reach.can("frequency", frequency)]
+    if not beyond:
+        return
+    expected = reach.span("frequency", "Hz")
+    if isinstance(stage.frequency, FrequencyRange):
+        if stage.frequency.clip and len(beyond) < len(wanted):
+            return
+        span = f"{_shown(stage.frequency.start, 'Hz')} to {_shown(stage.frequency.stop, 'Hz')}"
+        notes.sequence("frequency-beyond-meter", f"{key}.frequency", expected=expected, found=span)
+        return
+    for place, frequency in enumerate(wanted, start=1):
+        if frequency in beyond:
+            notes.sequence(
+                "frequency-beyond-meter",
+                _item(f"{key}.frequency", place, len(wanted)),
+                expected=expected,
+                found=_shown(frequency, "Hz"),
+            )
+
+
+def _check_words(stage: SweepStage, reach: Reach, notes: Notes, key: str) -> None:
+    fixed = reach.driver.meter.pair if reach.driver.meter is not None else ""
+    for name, asked, only in (
+        ("integration", stage.integration, ""),
+        ("pair", stage.pair, fixed),
+    ):
+        setting = reach.driver.setting.get(name)
+        words: Mapping[str, str] = setting.words if setting is not None else {}
+        known = tuple(words) or ((only,) if only else ())
+        if asked is not None and known and asked not in known:
+            notes.sequence(
+                f"{name}-unknown",
+                f"{key}.{name}",
+                expected=f"one of {', '.join(known)}",
+                found=asked,
+            )
+
+
+def _item(key: str, place: int, count: int) -> str:
+    """The key of one value of a list; a list of one may have been written as a value."""
+    return f"{key}[{place}]" if count > 1 else key
