@@ -7,7 +7,7 @@ L and one C, whatever the spacing of the points.
 """
 
 from dataclasses import dataclass
-from math import inf, nan
+from math import nan
 
 import numpy as np
 from numpy.typing import ArrayLike
@@ -46,8 +46,8 @@ def self_resonance(
     f0² = (f1²·g2 − f2²·g1)/(g2 − g1), ∂f0²/∂g1 = (f0² − f2²)/(g2 − g1) and
     ∂f0²/∂g2 = (f1² − f0²)/(g2 − g1). The errors of neighbouring points of one meter are
     correlated in an unknown degree: their contributions are added in magnitude, which is the
-    most they can make. What a straight line misses is judged by a parabola through the
-    next-nearest point; the difference is a rectangular half-width.
+    most they can make. What a straight line misses is judged from the points beside the bracket
+    (`_bend`) and is a rectangular half-width.
     Raises TooFewPoints, ShapeMismatch, BadFrequency, BadCovariance.
     """
     arrays = together(frequency_hz, r, x, u_r, u_x, r_rx)
@@ -112,15 +112,28 @@ def _crossing(
 
 
 def _bend(f: FloatArray, g: FloatArray, left: int, right: int, s0: float) -> float:
-    """How far a parabola through the next-nearest point moves the zero, in f²."""
-    s1, s2 = f[left] ** 2, f[right] ** 2
-    around = [i for i in (left - 1, right + 1) if 0 <= i < f.size and s1 != f[i] ** 2 != s2]
-    if not around:
+    """How far the zero, in f², may be moved by a C or an L that changes with frequency.
+
+    Within g = A·f² − B the neighbour below the bracket shows how B (the capacitance's part)
+    changes per log f, the one above how A (the inductance's) does; the zero is found once more
+    with either going on like that through the bracket, and the shifts are added as squares.
+    """
+    s = f * f
+    slope = (g[right] - g[left]) / (s[right] - s[left])
+    offset = slope * s[left] - g[left]
+    across, to_zero = np.log(f[right] / f[left]), 0.5 * np.log(s0 / s[left])
+    shifts = []
+    if left > 0 and s[left - 1] < s[left]:
+        was = slope * s[left - 1] - g[left - 1]
+        rate = (offset - was) / np.log(f[left] / f[left - 1])
+        steeper = slope + rate * across / (s[right] - s[left])
+        shifts.append((offset + rate * to_zero) / steeper - s0)
+    if right + 1 < f.size and s[right + 1] > s[right]:
+        will_be = (g[right + 1] + offset) / s[right + 1]
+        rate = (will_be - slope) / np.log(f[right + 1] / f[right])
+        lower = slope - rate * (across - to_zero)
+        shifts.append(offset / lower - s0 if lower > 0 else s[right] - s0)
+    if not shifts:
         # nothing says that one L and one C is all there is: anywhere in the bracket, then
-        return float(s2 - s1) / 2
-    nearest = min(around, key=lambda i: abs(np.log(f[i] ** 2 / s0)) if s0 > 0 else inf)
-    s3, g3 = f[nearest] ** 2, g[nearest]
-    straight = g[left] + (g[right] - g[left]) * (s3 - s1) / (s2 - s1)
-    curvature = (g3 - straight) / ((s3 - s1) * (s3 - s2))
-    slope = (g[right] - g[left]) / (s2 - s1)
-    return float(abs(curvature * (s0 - s1) * (s0 - s2) / slope))
+        return float(s[right] - s[left]) / 2
+    return float(np.hypot(*shifts) if len(shifts) == 2 else abs(shifts[0]))
