@@ -3,6 +3,7 @@
 import cmath
 import hashlib
 import math
+from itertools import pairwise
 from statistics import NormalDist, fmean, pstdev
 
 import pytest
@@ -309,7 +310,7 @@ def test_the_error_depends_smoothly_on_frequency() -> None:
     error = MeterError(figures, normal, 5, "m")
     frequencies = [20.0 * 10 ** (k / 100) for k in range(500)]
     shares = [error.share("C1", f)[0] for f in frequencies]
-    steps = [abs(b - a) for a, b in zip(shares, shares[1:], strict=False)]
+    steps = [abs(b - a) for a, b in pairwise(shares)]
     assert max(steps) < 0.08, "no step within a hundredth of a decade"
     assert max(shares) - min(shares) > 0.05, "and yet not the same everywhere"
 
