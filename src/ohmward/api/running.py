@@ -1,0 +1,268 @@
+"""Runs a prepared brief: dry in virtual time, or on the real bench; and goes on after a stop."""
+
+import json
+import secrets
+from collections.abc import Callable, Mapping
+from contextlib import nullcontext
+from dataclasses import dataclass
+from datetime import timedelta
+from importlib.metadata import version
+from pathlib import Path
+
+from rich.console import Console
+
+from ohmward import __version__
+from ohmward.api import simulation
+from ohmward.api.operator import TerminalOperator
+from ohmward.api.preparing import Prepared, prepare
+from ohmward.api.tabulating import Truth, tabulate
+from ohmward.clock import (
+    DRY_RUN_START_UTC,
+    Clock,
+    run_in_real_time,
+    run_in_virtual_time,
+    today_utc,
+)
+from ohmward.errors import BadInput, OhmwardError, Problems
+from ohmward.journal.store import Store
+from ohmward.journal.writer import InlineWriter, ThreadWriter
+from ohmward.output import manifest
+from ohmward.output.screen import ProgressBar
+from ohmward.output.verdicts import PartVerdict, verdicts
+from ohmward.run import folder as run_folder
+from ohmward.run.bench import Connections
+from ohmward.run.recorder import Recorder
+from ohmward.run.resuming import Progress, note_differences, progress_of
+from ohmward.run.runner import Order, carry_out
+from ohmward.run.watcher import Silent, Watcher
+
+RECORDED_PACKAGES = ("pyvisa", "pyvisa-py", "numpy", "scipy", "pandas", "pydantic", "trio")
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class Outcome:
+    """A finished run: its folder and the decision on every part."""
+
+    folder: Path
+    run_id: str
+    simulated: bool
+    verdicts: list[PartVerdict]
+    notes: tuple[str, ...] = ()
+
+
+def dry_run(prepared: Prepared, *, out: Path, seed: int = 0, watch: bool = False) -> Outcome:
+    """Carry the brief out on a simulated bench in virtual time; same seed, same bytes.
+
+    Opens none of the bench's addresses. Raises BadInput when ``out`` exists.
+    """
+    run_id = f"dry-{prepared.brief.hash[:12]}-{seed}"
+    journal = run_folder.make(out, prepared.sources, prepared.brief)
+    facts = _facts(prepared, run_id=run_id, simulated=True, seed=seed)
+    return _go(_Task(prepared, out, journal, facts, seed=seed), watch=watch)
+
+
+def run(prepared: Prepared, *, out: Path, watch: bool = False) -> Outcome:
+    """Carry the brief out on the real bench.
+
+    Raises BadInput when ``out`` exists or a stage energises, and whatever ended the run early;
+    what was measured until then is in the folder.
+    """
+    refuse_energising(prepared)
+    now = today_utc()
+    run_id = f"{now:%Y%m%dT%H%M%SZ}-{secrets.token_hex(2)}"
+    journal = run_folder.make(out, prepared.sources, prepared.brief)
+    facts = _facts(prepared, run_id=run_id, simulated=False, seed=None)
+    return _go(_Task(prepared, out, journal, facts), watch=watch)
+
+
+def resume(folder: Path, *, watch: bool = False) -> Outcome:
+    """Go on with a run that was stopped or killed; readings that were taken are kept.
+
+    Raises BadInput naming every difference when sequence, bench, parts or drivers are not those
+    that the run began with, or another instrument answers.
+    """
+    progress = progress_of(folder)
+    facts = dict(progress.facts)
+    if not {"paths", "hashes", "brief_sha256", "run_id"} <= set(facts):
+        raise OhmwardError(f"{folder}: this run never began; start it again in a new folder")
+    paths = json.loads(facts["paths"])
+    prepared = prepare(paths["sequence"], bench=paths["bench"], parts=paths["parts"])
+    problems = Problems()
+    note_differences(
+        progress, prepared.brief, prepared.drivers, json.loads(facts["hashes"]), problems
+    )
+    problems.raise_if_any()
+    seed = int(facts["seed"]) if progress.simulated else 0
+    task = _Task(prepared, folder, folder / run_folder.JOURNAL, facts, seed=seed, progress=progress)
+    if progress.finished:
+        return _finish(task, _truth_of(task))
+    return _go(task, watch=watch)
+
+
+def refuse_energising(prepared: Prepared) -> None:
+    """Raise BadInput naming each stage that puts a hazardous voltage on a part."""
+    problems = Problems()
+    for stage in prepared.brief.energising:
+        problems.add(
+            id="stage-energises",
+            file=prepared.sequence_path,
+            key=f"stage '{stage}'",
+            expected="no stage that energises: this version runs those on simulated benches only",
+            found="one that does",
+        )
+    problems.raise_if_any()
+
+
+@dataclass(frozen=True, slots=True)
+class _Task:
+    """One run, new or taken up again."""
+
+    prepared: Prepared
+    folder: Path
+    journal: Path
+    facts: Mapping[str, str]
+    seed: int = 0
+    progress: Progress | None = None
+
+    @property
+    def simulated(self) -> bool:
+        return self.facts["simulated"] == "yes"
+
+
+def _go(task: _Task, *, watch: bool) -> Outcome:
+    """Run, then make tables of whatever was measured, also when the run ended early."""
+    console = Console(stderr=True, highlight=False)
+    bar = ProgressBar(console) if watch else nullcontext(Silent())
+    truth: Truth | None = None
+    try:
+        with bar as watcher:
+            if task.simulated:
+                truth = _run_dry(task, watcher)
+            else:
+                _run_real(task, watcher)
+    except OhmwardError as error:
+        if not isinstance(error, BadInput):
+            _finish_what_there_is(task, error)
+        raise
+    return _finish(task, truth)
+
+
+def _run_dry(task: _Task, watcher: Watcher) -> Truth:
+    bench = simulation.build(task.prepared, seed=task.seed)
+    last_s = task.progress.last_elapsed_s if task.progress else 0.0
+
+    async def main(clock: Clock) -> None:
+        connections = simulation.connections(bench)
+        recorder = Recorder(InlineWriter(_store(task)), clock, elapsed_offset_s=last_s)
+        await _carry_out(task, connections, recorder, watcher)
+
+    run_in_virtual_time(main, start_utc=DRY_RUN_START_UTC + timedelta(seconds=last_s))
+    return simulation.truth_of(bench)
+
+
+def _truth_of(task: _Task) -> Truth | None:
+    if not task.simulated:
+        return None
+    return simulation.truth_of(simulation.build(task.prepared, seed=task.seed))
+
+
+def _run_real(task: _Task, watcher: Watcher) -> None:
+    from pyvisa import ResourceManager
+
+    from ohmward.links.thread_waiter import ThreadWaiter
+
+    async def main(clock: Clock) -> None:
+        elapsed_s = task.progress.elapsed_now_s(clock.utc()) if task.progress else 0.0
+        manager = ResourceManager("@py")
+        connections = Connections(
+            manager=manager, waiter=ThreadWaiter(), operator=TerminalOperator()
+        )
+        recorder = Recorder(ThreadWriter(_store(task)), clock, elapsed_offset_s=elapsed_s)
+        try:
+            await _carry_out(task, connections, recorder, watcher)
+        finally:
+            manager.close()
+
+    run_in_real_time(main)
+
+
+def _store(task: _Task) -> Store:
+    open_store: Callable[..., Store] = Store.open if task.progress else Store.create
+    return open_store(task.journal, durable=not task.simulated)
+
+
+async def _carry_out(
+    task: _Task, connections: Connections, recorder: Recorder, watcher: Watcher
+) -> None:
+    progress, brief = task.progress, task.prepared.brief
+    ended = progress.ended if progress else frozenset()
+    behind_s = sum(stage.duration_s for stage in brief.stages if stage.number in ended)
+    if progress is None:
+        for key, value in task.facts.items():
+            await recorder.fact(key, value)
+    order = Order(
+        brief=brief,
+        bench=task.prepared.bench,
+        drivers=task.prepared.drivers,
+        ended=ended,
+        taken=progress.taken if progress else {},
+        identities=(
+            {name: one["identity"] for name, one in progress.instruments.items()}
+            if progress
+            else {}
+        ),
+    )
+    watcher.begun(brief, behind_s=behind_s)
+    await carry_out(order, connections, recorder, watcher)
+
+
+def _facts(prepared: Prepared, *, run_id: str, simulated: bool, seed: int | None) -> dict[str, str]:
+    brief = prepared.brief
+    paths = {
+        "sequence": str(prepared.sequence_path.absolute()),
+        "bench": str(prepared.bench.path.absolute()),
+        "parts": str(prepared.parts_path.absolute()),
+    }
+    return {
+        "run_id": run_id,
+        "simulated": "yes" if simulated else "no",
+        "seed": "" if seed is None else str(seed),
+        "sequence": brief.name,
+        "purpose": brief.purpose,
+        "brief_sha256": brief.hash,
+        "hashes": json.dumps(dict(brief.hashes), sort_keys=True),
+        "paths": json.dumps(paths, sort_keys=True),
+        "ohmward": __version__,
+        "packages": json.dumps({name: version(name) for name in RECORDED_PACKAGES}),
+        "state": "begun",
+    }
+
+
+def _finish(task: _Task, truth: Truth | None) -> Outcome:
+    """Tables and manifest of a run's folder, made anew from its journal."""
+    run_folder.forget_derived(task.folder)
+    prepared = task.prepared
+    results = tabulate(task.folder, prepared.brief, prepared.drivers, prepared.cable_m, truth)
+    manifest.write(
+        task.folder,
+        {
+            "run_id": task.facts["run_id"],
+            "ohmward": task.facts["ohmward"],
+            "brief_sha256": task.facts["brief_sha256"],
+        },
+    )
+    return Outcome(
+        folder=task.folder,
+        run_id=task.facts["run_id"],
+        simulated=task.simulated,
+        verdicts=verdicts(prepared.parts, results),
+        notes=simulation.notes(prepared) if task.simulated else (),
+    )
+
+
+def _finish_what_there_is(task: _Task, error: OhmwardError) -> None:
+    """Tables of a run that ended early; a failure here must not hide what ended it."""
+    try:
+        _finish(task, None)
+    except (OhmwardError, OSError) as second:
+        error.add_note(f"its tables could not be written either: {second}")
