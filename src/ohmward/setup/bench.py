@@ -1,6 +1,5 @@
 """The bench file: which instrument is at which address, and how the meter reaches each part."""
 
-import re
 from collections.abc import Iterator
 from datetime import date
 from pathlib import Path
@@ -10,33 +9,12 @@ from pydantic import BeforeValidator, Field, PrivateAttr
 
 from ohmward.errors import Problems
 from ohmward.setup.address import Address, AddressError, read_address
+from ohmward.setup.high_voltage import HighVoltage
+from ohmward.setup.high_voltage_check import findings, missing
+from ohmward.setup.names import INSTRUMENT_NAME, Channel, Name
 from ohmward.setup.quantities import Metres, Model, PositiveAmperes, PositiveVolts, wrong
 from ohmward.setup.toml import one_of, read_toml, salvage, validate
 from ohmward.terms.role import Role
-
-_NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9_.-]*")
-_CHANNEL = re.compile(r"[A-Za-z0-9][A-Za-z0-9_.:!-]*")
-
-
-def _word(value: object) -> object:
-    """A whole number is taken for its digits: ``meter_channels = [101, 201]``."""
-    return str(value) if isinstance(value, int) and not isinstance(value, bool) else value
-
-
-def _check_channel(value: object) -> object:
-    value = _word(value)
-    if isinstance(value, str) and _CHANNEL.fullmatch(value) is None:
-        raise wrong("one channel such as '101'", f"'{value}'")
-    return value
-
-
-def _check_name(value: object) -> object:
-    value = _word(value)
-    if isinstance(value, str):
-        value = value.strip()
-        if not value or len(value) > 60 or not value.isprintable():
-            raise wrong("a short name", f"'{value[:20]}'" if value else "nothing")
-    return value
 
 
 def _check_address(value: object) -> object:
@@ -46,10 +24,6 @@ def _check_address(value: object) -> object:
         except AddressError as error:
             raise wrong(error.expected, f"'{value}'", "wrong-address") from None
     return value
-
-
-Channel = Annotated[str, BeforeValidator(_check_channel)]
-Name = Annotated[str, BeforeValidator(_check_name)]
 
 
 class BenchInstrument(Model):
@@ -120,6 +94,9 @@ class Bench(Model):
     level_ceiling_v: PositiveVolts | None = Field(
         None, alias="level_ceiling", description="no part sees a higher AC level (rms)"
     )
+    high_voltage: HighVoltage | None = Field(
+        None, description="how high voltage reaches the parts and how they are freed of it"
+    )
     simulation: Simulation | None = None
 
     _path: Path = PrivateAttr(default_factory=Path)
@@ -181,12 +158,19 @@ def _across(bench: Bench, data: dict[str, Any], *, whole: bool) -> Iterator[_Fin
         if physical is not None and not physical.is_file():
             yield "file-missing", "simulation.physical_file", "a file", f"none at {physical}"
 
+    if bench.high_voltage is not None:
+        contacts = {place.name: place.meter_channels for place in bench.positions}
+        yield from findings(bench.high_voltage, meter_channels=contacts)
+        if whole:
+            roles = {one.role for one in bench.instruments.values()}
+            yield from missing(bench.high_voltage, roles)
+
 
 def _instrument_findings(bench: Bench) -> Iterator[_Finding]:
     roles: dict[Role, str] = {}
     links: dict[str, str] = {}
     for name, one in bench.instruments.items():
-        if _NAME.fullmatch(name) is None:
+        if INSTRUMENT_NAME.fullmatch(name) is None:
             yield "wrong-name", f"instrument.{name}", "letters, digits, '-' and '_'", f"'{name}'"
         other = roles.setdefault(one.role, name)
         if other != name:
