@@ -73,6 +73,8 @@ class Link:
         self._reopen = False
         self._ended: LinkError | None = None
         self._free_at_s = float("-inf")
+        self.recoveries = 0
+        """Counts up with every recovery: what was set before it may be forgotten since."""
         self._unanswered = 0
 
     @property
@@ -262,6 +264,7 @@ class Link:
             await self._drop()
             raise
         self._dirt, self._reopen = "", False
+        self.recoveries += 1
 
     async def _resynchronised(self) -> bool:
         """Drain, and let the session prove that its replies belong to their queries."""
