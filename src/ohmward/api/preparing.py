@@ -58,7 +58,7 @@ def prepare(sequence: str | Path, *, bench: str | Path, parts: str | Path) -> Pr
     drivers = load_drivers(loaded_bench, problems)
     loaded_parts = load_parts(parts_path, loaded_bench, problems)
     brief = None
-    if loaded_sequence is not None and loaded_bench is not None:
+    if loaded_sequence is not None:
         brief = unroll(
             loaded_sequence,
             bench=loaded_bench,

@@ -185,13 +185,12 @@ class Checker:
                 expected=f"a quantity of every {' and '.join(sorted(kinds))} that it judges",
                 found=f"{limit.quantity}, which no {' and no '.join(sorted(lacking))} has",
             )
-        at = limit.at
-        if quantity.per == "part" and any((at.frequency, at.level, at.bias)):
+        if quantity.per == "part" and limit.at.frequency is not None:
             self.note(
                 "limit-condition-of-part",
-                f"{key}.at",
-                expected=f"no condition: {limit.quantity} is one value for the whole stage",
-                found="a condition",
+                f"{key}.at.frequency",
+                expected=f"no frequency: {limit.quantity} is one value for all of them",
+                found=_hertz(limit.at.frequency),
             )
 
     def _bounds(self, limit: LimitTable, key: str, kinds: frozenset[Kind]) -> None:
@@ -249,10 +248,9 @@ class Checker:
     def _condition(self, at: Condition, stage: StageTable, key: str, limit: LimitTable) -> None:
         if not isinstance(stage, SweepStage) or not stage.whole:
             return
-        if QUANTITIES[limit.quantity].per == "part":
-            return
-        frequencies = stage.frequencies_hz
-        self._measured(f"{key}.at.frequency", at.frequency, frequencies, same_frequency, _hertz)
+        if QUANTITIES[limit.quantity].per == "point":
+            frequencies = stage.frequencies_hz
+            self._measured(f"{key}.at.frequency", at.frequency, frequencies, same_frequency, _hertz)
         self._measured(f"{key}.at.level", at.level, stage.level, same_value, _volts)
         self._measured(f"{key}.at.bias", at.bias, stage.bias, same_bias, str)
 

@@ -180,7 +180,7 @@ def _bounds(
     key: str,
     notes: Notes,
 ) -> Bounds | None:
-    """Minimum and maximum in SI units; None where there is none to be had, with the reason noted."""
+    """Minimum and maximum in SI units; None with the reason noted where there are none."""
     if rule is None:
         if table.minimum is None and table.maximum is None:
             return None  # noted when the sequence was read

@@ -33,6 +33,7 @@ class Allowance:
     share: float
     ceiling_v: float | None = None
     ceiling_a: float | None = None
+    ceiling_level_v: float | None = None
 
 
 def resolve_bias(bias: Bias, part: Part, key: str, notes: Notes) -> tuple[float, float] | None:
@@ -67,6 +68,7 @@ def resolve_bias(bias: Bias, part: Part, key: str, notes: Notes) -> tuple[float,
 
 def check_stress(stress: Stress, part: Part, key: str, notes: Notes, allowance: Allowance) -> None:
     """Note every way in which this is too much for the part or for the bench."""
+    _check_ceilings(stress, key, notes, allowance)
     if stress.bias_a:
         _check_current(stress, part, key, notes, allowance)
     else:
@@ -101,13 +103,22 @@ def _check_voltage(
             expected=f"at most {_volts(part.rated_ac_v * allowance.share)} AC on {part.part_id}",
             found=_volts(stress.level_v),
         )
-    if allowance.ceiling_v is not None and stress.peak_v > allowance.ceiling_v * (1 + SLACK):
-        notes.sequence(
-            "bias-beyond-bench",
-            key,
-            expected=f"at most {_volts(allowance.ceiling_v)}, the bench's own ceiling",
-            found=_peak_text(stress),
-        )
+
+
+def _check_ceilings(stress: Stress, key: str, notes: Notes, allowance: Allowance) -> None:
+    """The bench's own ceilings on DC voltage, DC current and AC level."""
+    for problem_id, ceiling, asked, unit in (
+        ("bias-beyond-bench", allowance.ceiling_v, abs(stress.bias_v), "V"),
+        ("bias-beyond-bench", allowance.ceiling_a, abs(stress.bias_a), "A"),
+        ("level-beyond-bench", allowance.ceiling_level_v, stress.level_v, "V"),
+    ):
+        if ceiling is not None and asked > ceiling * (1 + SLACK):
+            notes.sequence(
+                problem_id,
+                key,
+                expected=f"at most {format_quantity(ceiling, unit)}, the bench's own ceiling",
+                found=format_quantity(asked, unit),
+            )
 
 
 def _check_peak(stress: Stress, key: str, notes: Notes, allowance: Allowance, part: Part) -> None:
@@ -135,13 +146,6 @@ def _check_current(
             "bias-beyond-rating",
             key,
             expected=f"at most {_amperes(part.rated_a * allowance.share)} through {part.part_id}",
-            found=_amperes(stress.bias_a),
-        )
-    if allowance.ceiling_a is not None and abs(stress.bias_a) > allowance.ceiling_a * (1 + SLACK):
-        notes.sequence(
-            "bias-beyond-bench",
-            key,
-            expected=f"at most {_amperes(allowance.ceiling_a)}, the bench's own ceiling",
             found=_amperes(stress.bias_a),
         )
 

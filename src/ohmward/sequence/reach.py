@@ -15,19 +15,42 @@ BIAS_SETTINGS = {"V": "bias_voltage", "A": "bias_current"}
 
 @dataclass(frozen=True, kw_only=True, slots=True)
 class Reach:
-    """One meter's limits: asks of each setting whether a value can be set."""
+    """One meter's limits: asks of each setting whether a value can be set.
+
+    Without a driver (what is wrong with it was noted) nothing is held against the meter, so
+    that everything else can still be checked in the same go.
+    """
 
     name: str
-    driver: Driver
+    driver: Driver | None
+
+    def setting(self, name: str) -> Setting | None:
+        """The meter's setting of that name, if it has one."""
+        return None if self.driver is None else self.driver.setting.get(name)
 
     def can(self, setting: str, value: float) -> bool:
         """Whether the meter takes this value; False for a setting that it does not have."""
-        found = self.driver.setting.get(setting)
-        return found is not None and _takes(found, value)
+        found = self.setting(setting)
+        return self.driver is None or (found is not None and _takes(found, value))
+
+    def reading_s(self, integration: str, frequency_hz: float) -> float:
+        """How long one reading takes."""
+        return 0.0 if self.driver is None else self.driver.reading_time_s(integration, frequency_hz)
+
+    @property
+    def settling_s(self) -> float:
+        """How long the meter settles after a change."""
+        return 0.0 if self.driver is None else self.driver.timing.settling
+
+    @property
+    def fixed_pair(self) -> str:
+        """The pair that it always sends, '' if it can be chosen."""
+        meter = None if self.driver is None else self.driver.meter
+        return "" if meter is None else meter.pair
 
     def span(self, setting: str, unit: str) -> str:
         """What the meter takes, in words."""
-        found = self.driver.setting.get(setting)
+        found = self.setting(setting)
         if found is None:
             return f"a meter that has this setting: {self.name} has none"
         if found.allowed:
@@ -119,12 +142,11 @@ def _check_frequencies(stage: SweepStage, reach: Reach, notes: Notes, key: str) 
 
 
 def _check_words(stage: SweepStage, reach: Reach, notes: Notes, key: str) -> None:
-    fixed = reach.driver.meter.pair if reach.driver.meter is not None else ""
     for name, asked, only in (
         ("integration", stage.integration, ""),
-        ("pair", stage.pair, fixed),
+        ("pair", stage.pair, reach.fixed_pair),
     ):
-        setting = reach.driver.setting.get(name)
+        setting = reach.setting(name)
         words: Mapping[str, str] = setting.words if setting is not None else {}
         known = tuple(words) or ((only,) if only else ())
         if asked is not None and known and asked not in known:

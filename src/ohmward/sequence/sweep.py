@@ -109,8 +109,8 @@ def _point_s(stage: SweepStage, point: Point, reach: Reach) -> float:
 
     A settle rule is reckoned at the fewest readings that can meet it.
     """
-    reading_s = reach.driver.reading_time_s(stage.integration, point.frequency_hz)
-    settling_s = reach.driver.timing.settling + stage.dwell
+    reading_s = reach.reading_s(stage.integration, point.frequency_hz)
+    settling_s = reach.settling_s + stage.dwell
     if stage.settle is not None:
         settling_s += stage.settle.readings * reading_s
     return settling_s + (stage.repeats - 1) * max(stage.interval, reading_s) + reading_s
