@@ -52,7 +52,13 @@ COMMANDS: list[tuple[str, str, str, dict[str, Value], bytes]] = [
     ("thermometer", "reading", "humidity", {}, b"MEAS:HUM?"),
 ]
 
-GOOD = {"first": 1.234567e-7, "second": 1.5e-3, "status": "0", "level_v": 1.0, "bias_v": -2.5}
+GOOD: dict[str, Value] = {
+    "first": 1.234567e-7,
+    "second": 1.5e-3,
+    "status": "0",
+    "level_v": 1.0,
+    "bias_v": -2.5,
+}
 
 # driver, table, name, the reply's values, its bytes, and what the reading is worth
 REPLIES: list[tuple[str, str, str, dict[str, Value], bytes, Status]] = [

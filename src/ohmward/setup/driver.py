@@ -43,7 +43,7 @@ class LinkTable(Model):
     opening_delay: Seconds = Field(0.0, description="rest after opening")
     banner: bool = Field(False, description="whether it speaks unasked when it is opened")
     gap: Seconds = Field(0.0, description="rest between two commands")
-    drain: Seconds = Field(0.2, description="how long silence proves that nothing is left")
+    drain: PositiveSeconds = Field(0.1, description="how long silence proves that nothing is left")
     reopen_budget: Seconds = Field(60.0, description="how long to try to get a link back")
     baud_rate: int = Field(9600, ge=50, le=4_000_000)
     data_bits: Literal[7, 8] = 8
@@ -86,7 +86,7 @@ class ErrorsTable(Model):
     """The instrument's error queue."""
 
     ask: str = Field("SYST:ERR?", description="takes the oldest entry from the queue")
-    after: Literal["settings", "never"] = Field("settings", description="when it is read")
+    after: Literal["settings", "differences"] = Field("settings", description="when it is read")
     at_most: int = Field(30, ge=1, le=1000, description="entries, no queue is longer")
 
 
