@@ -36,6 +36,8 @@ class ScpiDevice:
         self._messages: deque[bytes] = deque()
         self._units: deque[Unit | Refusal] = deque()
         self._replies: list[str] = []
+        self._in_message = False
+        self._unwanted = 0
         self._running: Later | None = None
         self._output = bytearray()
         self._operation_ends_s = 0.0
@@ -76,9 +78,14 @@ class ScpiDevice:
     # -- the interface's side
 
     def opened(self, now_s: float) -> None:
-        """A controller has connected: input that came half is forgotten."""
+        """A controller has connected.
+
+        Commands of the last connection are still obeyed, but nobody gets their answers.
+        """
         self._advance(now_s)
         self._input.clear()
+        self._output.clear()
+        self._unwanted = len(self._messages) + self._in_message
 
     def refuses(self, now_s: float) -> bool:
         """Never: this instrument is there."""
@@ -112,7 +119,7 @@ class ScpiDevice:
         if self._output:
             return self._clock_s
         running = self._running
-        if running is None:
+        if running is None or self._unwanted > len(self._messages):
             return None
         if running.replies or self._replies or self._query_waits():
             return running.due_s
@@ -147,6 +154,8 @@ class ScpiDevice:
         self._replies.clear()
         self._output.clear()
         self._running = None
+        self._in_message = False
+        self._unwanted = 0
         self._completion_asked = False
 
     # -- execution
@@ -161,6 +170,7 @@ class ScpiDevice:
             self._units.clear()
             self._replies.clear()
             self._running = None
+            self._in_message = False
 
     def _query_waits(self) -> bool:
         if any(isinstance(unit, Unit) and unit.is_query for unit in self._units):
@@ -179,16 +189,26 @@ class ScpiDevice:
                 self._reply(running.finish(running.due_s))
             elif self._units:
                 self._execute(self._units.popleft())
-            elif self._replies:
-                self._output += ";".join(self._replies).encode("latin-1") + b"\n"
-                self._replies.clear()
+            elif self._in_message:
+                self._end_message()
             elif self._messages:
+                self._in_message = True
                 self._units.extend(self.tree.compile(self._messages.popleft()))
             else:
                 break
         if self._completion_asked and now_s >= self._operation_ends_s:
             self._completion_asked = False
             self.status.standard_event |= OPERATION_COMPLETE
+
+    def _end_message(self) -> None:
+        """Every unit is executed: the replies leave as one message."""
+        self._in_message = False
+        if self._replies:
+            if not self._unwanted:
+                self._output += ";".join(self._replies).encode("latin-1") + b"\n"
+            self._replies.clear()
+        if self._unwanted:
+            self._unwanted -= 1
 
     def _execute(self, unit: Unit | Refusal) -> None:
         if isinstance(unit, Refusal):

@@ -1,0 +1,202 @@
+"""The served bench over real sockets, with plain PyVISA and plain sockets on the other side."""
+
+import queue
+import socket
+import threading
+from collections.abc import Iterator, Mapping
+from types import SimpleNamespace
+
+import pytest
+import pyvisa
+import trio
+from pyvisa.constants import StatusCode
+from pyvisa.errors import VisaIOError
+from pyvisa.resources import MessageBasedResource
+
+from ohmward.sim.backend import InProcessLibrary
+from ohmward.sim.faults import Fault, FaultLayer
+from ohmward.sim.scanner import Contacts, Scanner
+from ohmward.sim.scpi_device import ScpiDevice
+from ohmward.sim.scpi_tree import Later
+from ohmward.sim.server import serve
+
+pytestmark = pytest.mark.processes
+
+
+class Slow(ScpiDevice):
+    def __init__(self) -> None:
+        super().__init__("SLOW", "5")
+        self.tree.add("READ?", lambda now_s: Later(now_s + 0.05, lambda at_s: "+1.5E+00", True))
+
+
+class Bench:
+    """Three instruments, the second behind a layer of faults."""
+
+    def __init__(self) -> None:
+        self.layer = FaultLayer(Slow())
+        self.named = {
+            "meter": Slow(),
+            "faulty": self.layer,
+            "scanner": Scanner("scanner", "9", Contacts(("101", "201"))),
+        }
+
+
+class Serving:
+    def __init__(self) -> None:
+        self.bench = Bench()
+        self._ready: queue.Queue[tuple[dict[str, str], trio.lowlevel.TrioToken]] = queue.Queue()
+        self._scope = trio.CancelScope()
+        self._thread = threading.Thread(target=trio.run, args=(self._main,))
+        self._thread.start()
+        self.addresses, self._token = self._ready.get(timeout=10)
+
+    async def _main(self) -> None:
+        token = trio.lowlevel.current_trio_token()
+        with self._scope:
+            await serve(self.bench, ready=lambda found: self._ready.put((found, token)))
+
+    def stop(self) -> None:
+        self._token.run_sync_soon(self._scope.cancel)
+        self._thread.join(timeout=10)
+        assert not self._thread.is_alive()
+
+    def port(self, name: str) -> int:
+        return int(self.addresses[name].split("::")[2])
+
+
+@pytest.fixture(scope="module")
+def serving() -> Iterator[Serving]:
+    started = Serving()
+    yield started
+    started.stop()
+
+
+@pytest.fixture
+def manager() -> Iterator[pyvisa.ResourceManager]:
+    made = pyvisa.ResourceManager("@py")
+    yield made
+    made.close()
+
+
+def opened(
+    manager: pyvisa.ResourceManager, address: str, **settings: object
+) -> MessageBasedResource:
+    found = manager.open_resource(address, **settings)
+    assert isinstance(found, MessageBasedResource)
+    return found
+
+
+LINES = {"read_termination": "\n", "write_termination": "\n"}
+
+
+def talk_on(link: socket.socket) -> None:
+    """Read until the other side has closed, then talk on."""
+    while link.recv(100) != b"":
+        pass
+    link.sendall(b"*IDN?\n")
+    link.recv(100)
+
+
+def test_a_plain_pyvisa_script(serving: Serving, manager: pyvisa.ResourceManager) -> None:
+    with opened(manager, serving.addresses["meter"], **LINES, timeout=2000) as meter:
+        assert meter.query("*IDN?") == "GENERIC,SLOW,5,1.0"
+        assert meter.query("READ?") == "+1.5E+00"
+    with opened(manager, serving.addresses["scanner"], **LINES, timeout=2000) as scanner:
+        scanner.write("ROUT:CLOS (@101)")
+        assert scanner.query("*OPC?;:ROUT:CLOS:STAT?") == "1;(@101)"
+
+
+def test_one_connection_after_another(serving: Serving, manager: pyvisa.ResourceManager) -> None:
+    for _ in range(3):
+        with opened(manager, serving.addresses["meter"], **LINES, timeout=2000) as meter:
+            assert meter.query("*IDN?").startswith("GENERIC,")
+
+
+def test_a_new_connection_takes_over_from_a_half_open_one(serving: Serving) -> None:
+    with (
+        socket.create_connection(("127.0.0.1", serving.port("meter")), timeout=5) as first,
+        socket.create_connection(("127.0.0.1", serving.port("meter")), timeout=5) as second,
+    ):
+        second.sendall(b"*IDN?\n")
+        assert second.recv(100) == b"GENERIC,SLOW,5,1.0\n"
+        with pytest.raises(ConnectionError):
+            talk_on(first)
+
+
+def test_a_script_that_closes_its_side_still_gets_its_reply(serving: Serving) -> None:
+    with socket.create_connection(("127.0.0.1", serving.port("meter")), timeout=5) as link:
+        link.sendall(b"READ?\n")
+        link.shutdown(socket.SHUT_WR)
+        received = b""
+        while chunk := link.recv(100):
+            received += chunk
+    assert received == b"+1.5E+00\n"
+
+
+def test_only_this_machine_can_connect(serving: Serving) -> None:
+    assert {address.split("::")[1] for address in serving.addresses.values()} == {"127.0.0.1"}
+
+
+def test_a_port_can_be_chosen_and_an_unknown_name_is_refused() -> None:
+    with socket.socket() as probe:
+        probe.bind(("127.0.0.1", 0))
+        free = probe.getsockname()[1]
+    found: list[Mapping[str, str]] = []
+
+    async def main(ports: Mapping[str, int]) -> None:
+        with trio.CancelScope() as scope:
+
+            def ready(addresses: dict[str, str]) -> None:
+                found.append(addresses)
+                scope.cancel()
+
+            await serve(Bench(), ports=ports, ready=ready)
+
+    trio.run(main, {"meter": free})
+    assert found[0]["meter"] == f"TCPIP::127.0.0.1::{free}::SOCKET"
+    with pytest.raises(ValueError, match="oscilloscope"):
+        trio.run(main, {"oscilloscope": 0})
+
+
+def test_a_forgotten_termination_fails_served_as_it_does_in_process(
+    serving: Serving, manager: pyvisa.ResourceManager
+) -> None:
+    now_s = [0.0]
+
+    def wait(until_s: float) -> None:
+        now_s[0] = until_s
+
+    library = InProcessLibrary(
+        SimpleNamespace(devices={serving.addresses["meter"]: Slow()}), lambda: now_s[0], wait
+    )
+    simulated = pyvisa.ResourceManager(library)
+    for each in (manager, simulated):
+        with opened(each, serving.addresses["meter"], write_termination="\n", timeout=100) as meter:
+            with pytest.raises(VisaIOError) as failed:
+                meter.query("*IDN?")
+            assert failed.value.error_code == StatusCode.error_timeout
+    simulated.close()
+
+
+def test_faults_reach_the_other_side_of_a_socket(
+    serving: Serving, manager: pyvisa.ResourceManager
+) -> None:
+    layer = serving.bench.layer
+    with opened(manager, serving.addresses["faulty"], **LINES, timeout=2000) as meter:
+        assert meter.query("*IDN?") == "GENERIC,SLOW,5,1.0"
+        layer.inject(Fault(kind="comma"))
+        assert meter.query("READ?") == "+1,5E+00"
+        layer.inject(Fault(kind="trickle", delay_s=0.002))
+        assert meter.query("READ?") == "+1.5E+00"
+    layer.inject(Fault(kind="identity"))
+    with opened(manager, serving.addresses["faulty"], **LINES, timeout=2000) as meter:
+        assert meter.query("*IDN?") == "GENERIC,SLOW,999999,1.0"
+
+
+def test_a_dropped_connection_is_seen(serving: Serving) -> None:
+    layer = serving.bench.layer
+    layer.inject(Fault(kind="disconnect", delay_s=0.0))
+    with socket.create_connection(("127.0.0.1", serving.port("faulty")), timeout=5) as link:
+        link.sendall(b"READ?\n")
+        with pytest.raises(ConnectionError):
+            talk_on(link)
