@@ -163,3 +163,21 @@ def test_widening_multiplies_the_allowance() -> None:
 
 def test_every_rule_says_where_it_comes_from() -> None:
     assert all(rule.source and rule.meaning and rule.quantities for rule in RULES.values())
+
+
+# Arithmetic: a 100 nF capacitor is 1591.549 ohm at 1 kHz, 10 mH are 628.3185 ohm at 10 kHz.
+@pytest.mark.parametrize(
+    ("kind", "nominal", "frequency_hz", "ideal_ohm"),
+    [
+        (Kind.CAPACITOR, 100e-9, 1e3, 1591.5494309),
+        (Kind.INDUCTOR, 10e-3, 1e4, 628.31853072),
+        (Kind.RESISTOR, 470.0, 1e3, 470.0),
+    ],
+)
+def test_nominal_impedance_is_a_factor_of_three_both_ways(
+    kind: Kind, nominal: float, frequency_hz: float, ideal_ohm: float
+) -> None:
+    part = Part(part_id="X1", position="P1", kind=kind, nominal=nominal)
+    assert RULES["nominal-impedance"].bounds(part, frequency_hz) == pytest.approx(
+        (ideal_ohm / 3, ideal_ohm * 3), rel=1e-9
+    )

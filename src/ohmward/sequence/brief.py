@@ -97,7 +97,8 @@ class CannotDecide:
 class Brief:
     """What will be done, how long it takes, and what it cannot tell.
 
-    ``stages`` are in order of execution: part by part, each part's stages in their order.
+    ``parts`` are those that are measured; ``warnings`` name the others. ``stages`` are in order
+    of execution: part by part, each part's stages in their order.
     ``energising`` names the stages that put a hazardous voltage on a part. ``hash`` is the
     SHA-256 of everything that changes what is done; ``hashes`` are those of each input, so
     that a later difference can be named.

@@ -237,6 +237,20 @@ class Checker:
                 expected=" or ".join(sorted(rule.quantities)),
                 found=limit.quantity,
             )
+        elif rule.needs_frequency and limit.at.frequency is None:
+            self.note(
+                "rule-needs-frequency",
+                f"{key}.at.frequency",
+                expected=f"the frequency at which {name} is to hold",
+                found="nothing",
+            )
+        elif not rule.widens and limit.times != 1:
+            self.note(
+                "times-without-rule",
+                f"{key}.times",
+                expected=f"no factor: {name} has its own",
+                found=limit.times,
+            )
         elif kinds - rule.kinds:
             self.note(
                 "rule-other-kind",

@@ -91,10 +91,14 @@ def resolve_limits(sequence: Sequence, planned: Listed[PlannedSweep], notes: Not
         if len(limits) + len(missed) == before and table.whole:
             notes.warn(f"limit {table.place} ({table.quantity}) judges no part of this lot")
     judged = {limit.part_id for limit in limits}
-    for part in {stage.part.part_id: stage.part for stage in planned}.values():
-        if part.part_id not in judged and all(table.whole for table in sequence.limit):
-            notes.warn(f"{part.part_id} is measured, but no limit judges it: it cannot be accepted")
+    idle = [part_id for part_id in _measured(planned) if part_id not in judged]
+    if idle and all(table.whole for table in sequence.limit):
+        notes.warn(f"measured, but judged by no limit, so never accepted: {', '.join(idle)}")
     return Resolved(limits=tuple(limits), cannot_reach=tuple(missed))
+
+
+def _measured(planned: Listed[PlannedSweep]) -> tuple[str, ...]:
+    return tuple(dict.fromkeys(stage.part.part_id for stage in planned))
 
 
 def _judges(table: LimitTable, stage: PlannedSweep) -> bool:

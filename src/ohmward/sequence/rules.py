@@ -40,6 +40,8 @@ class Rule:
     ``bounds(part, frequency_hz)`` returns (minimum, maximum) in the quantity's SI unit, or
     raises RuleLacks (a cell is empty) or NotStated (the source does not cover the part);
     ``frequencies(part)`` lists where the source states it, first choice first, empty for any.
+    ``needs_frequency`` says that the limit must name one; ``widens`` that a limit may multiply
+    what the rule allows.
     """
 
     name: str
@@ -49,6 +51,8 @@ class Rule:
     quantities: frozenset[str]
     bounds: Callable[[Part, float], Bounds]
     frequencies: Callable[[Part], tuple[float, ...]] = _any_frequency
+    needs_frequency: bool = False
+    widens: bool = True
 
 
 def _dielectric_of(part: Part) -> str:
@@ -72,6 +76,27 @@ def marked_tolerance(part: Part, frequency_hz: float) -> Bounds:
         part.nominal * (1.0 + part.tolerance_low),
         part.nominal * (1.0 + part.tolerance_high),
     )
+
+
+# --- short, open, or another part altogether ---
+
+NOMINAL_IMPEDANCE_FACTOR = 3.0
+
+
+def nominal_impedance_ohm(part: Part, frequency_hz: float) -> float:
+    """|Z| in ohm of the ideal part: R, 2πfL or 1/(2πfC)."""
+    match part.kind:
+        case Kind.CAPACITOR:
+            return 1.0 / (2.0 * pi * frequency_hz * part.nominal)
+        case Kind.INDUCTOR:
+            return 2.0 * pi * frequency_hz * part.nominal
+        case Kind.RESISTOR:
+            return part.nominal
+
+
+def _nominal_impedance_bounds(part: Part, frequency_hz: float) -> Bounds:
+    nominal = nominal_impedance_ohm(part, frequency_hz)
+    return nominal / NOMINAL_IMPEDANCE_FACTOR, nominal * NOMINAL_IMPEDANCE_FACTOR
 
 
 # --- aluminium electrolytics -----------------------------------------------------------------
@@ -217,6 +242,16 @@ RULES: dict[str, Rule] = {
                 | {"resistance_ohm", "rs_ohm", "rp_ohm", "impedance_ohm"}
             ),
             bounds=marked_tolerance,
+        ),
+        Rule(
+            name="nominal-impedance",
+            meaning="|Z| within a factor of 3 of the ideal part's: neither shorted nor open",
+            source="arithmetic from the nominal value; the factor is common practice",
+            kinds=frozenset(Kind),
+            quantities=frozenset({"impedance_ohm"}),
+            bounds=_nominal_impedance_bounds,
+            needs_frequency=True,
+            widens=False,
         ),
         Rule(
             name="tan-delta-electrolytic",

@@ -55,16 +55,13 @@ def unroll(
     if len(problems) or bench is None or given.reach.driver is None:
         return None
     hashes = input_hashes(sequence, bench, drivers, tuple(parts), resolved.limits)
-    meter = MeterAccuracy(
-        accuracy=given.reach.driver.impedance_accuracy,
-        cable_m=bench.instruments[given.reach.name].cable_m,
-    )
+    meter = _meter_accuracy(given.reach.driver, bench.instruments[given.reach.name].cable_m)
     return Brief(
         name=sequence.name,
         purpose=sequence.purpose,
         follows=sequence.follows,
         bench=bench.name,
-        parts=tuple(parts),
+        parts=tuple({stage.part.part_id: stage.part for stage in planned}.values()),
         stages=planned,
         limits=resolved.limits,
         coverage_k=sequence.decision.coverage,
@@ -125,15 +122,26 @@ def _given(sequence: Sequence, bench: Bench | None, drivers: Mapping[str, Driver
     )
 
 
+def _meter_accuracy(driver: Driver, cable_m: float) -> MeterAccuracy:
+    fields = {field.name for field in driver.reading["impedance"].fields}
+    sags = driver.meter is not None and "level_v" in fields
+    return MeterAccuracy(
+        accuracy=driver.impedance_accuracy,
+        cable_m=cable_m,
+        source_ohm=driver.meter.source_resistance if driver.meter and sags else 0.0,
+    )
+
+
 def _plan(
     sequence: Sequence, parts: Listed[Part], given: Given, notes: Notes
 ) -> tuple[tuple[PlannedSweep, ...], tuple[CannotReach, ...]]:
     """All stages in order of execution: part by part, each part's stages in their order."""
     planned: list[PlannedSweep] = []
     biases: dict[tuple[str, str], list[str]] = {}
+    unmeasured: dict[str, list[str]] = {}
     for part in parts:
         if part.kind not in sequence.kinds:
-            notes.warn(f"{part.part_id} is not measured: this sequence is for no {part.kind}")
+            unmeasured.setdefault(f"this sequence is for no {part.kind}", []).append(part.part_id)
             continue
         mine = [stage for stage in sequence.stage if fits(stage.parts, part)]
         for stage in mine:
@@ -145,7 +153,9 @@ def _plan(
             for bias in left_out:
                 biases.setdefault((stage.name, _bias_text(bias)), []).append(part.part_id)
         if not mine and all(stage.whole for stage in sequence.stage):
-            notes.warn(f"{part.part_id} is not measured: no stage is for it")
+            unmeasured.setdefault("no stage is for them", []).append(part.part_id)
+    for why, part_ids in unmeasured.items():
+        notes.warn(f"not measured, because {why}: {', '.join(part_ids)}")
     for stage in sequence.stage:
         check_reach(stage, given.reach, notes)
     if parts and not planned and not len(notes.problems):
