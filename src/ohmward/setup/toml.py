@@ -163,6 +163,8 @@ def _note(
             len(deeper) > len(where) and deeper[: len(where)] == where for _, deeper in items
         ):
             continue  # a union wanted one value, but what is wrong is inside the list
+        if item["type"] == "too_short" and len(item["input"]) >= item["ctx"]["min_length"]:
+            continue  # pydantic counts only the items that are right
         kind, expected, found = _told(item, model, data, where)
         wanted = gathered.setdefault((kind, dotted(where), found), [])
         if expected not in wanted:
