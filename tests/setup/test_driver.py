@@ -3,6 +3,7 @@
 import tomllib
 from pathlib import Path
 
+import jsonschema  # type: ignore[import-untyped]  # ships no types
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
@@ -10,6 +11,7 @@ from hypothesis import strategies as st
 from ohmward.errors import Problem, Problems
 from ohmward.setup.driver import Driver, load_driver
 from ohmward.setup.resources import shipped
+from ohmward.setup.schema import schema
 from ohmward.setup.template import TemplateError, read_template
 from ohmward.terms.role import Role
 
@@ -54,6 +56,17 @@ def test_every_shipped_driver_loads(name: str) -> None:
     assert driver.summary
     head = driver.path.read_text(encoding="utf-8").splitlines()[0]
     assert head.startswith("#:schema ")
+
+
+@pytest.mark.parametrize("name", SHIPPED)
+def test_every_shipped_driver_fits_the_schema(name: str) -> None:
+    """What an editor says of a file is what the loader says of it; jsonschema is the referee."""
+    path = shipped("drivers") / f"{name}.toml"
+    data = tomllib.loads(path.read_text(encoding="utf-8"))
+    if "extends" in data:
+        return  # what a variation leaves out is in the file that it extends
+    validator = jsonschema.Draft202012Validator(schema("driver"))
+    assert [error.message for error in validator.iter_errors(data)] == []
 
 
 def test_values_carry_their_units(tmp_path: Path) -> None:

@@ -2,7 +2,7 @@
 
 from typing import Annotated, Any, Literal
 
-from pydantic import BeforeValidator, Field, model_validator
+from pydantic import Discriminator, Field, Tag, model_validator
 
 from ohmward.setup.quantities import (
     Celsius,
@@ -54,7 +54,6 @@ class LevelShare(Model):
 class ImpedanceAccuracyTable(Model):
     """The accuracy of an impedance meter; see `terms.accuracy` for the formula."""
 
-    kind: Literal["impedance"] = "impedance"
     distribution: Distribution = Field(
         "rectangular", description="rectangular: limits; normal: a k = 2 value"
     )
@@ -117,7 +116,6 @@ class ScalarRange(Model):
 class ScalarAccuracyTable(Model):
     """The accuracy of an instrument that reads one number."""
 
-    kind: Literal["scalar"]
     distribution: Distribution = "rectangular"
     range: tuple[ScalarRange, ...] = Field(min_length=1)
 
@@ -132,15 +130,16 @@ class ScalarAccuracyTable(Model):
         )
 
 
-def _kind_from_shape(value: Any) -> Any:
-    """``[[accuracy.range]]`` means a scalar table, so that nobody has to say so."""
-    if isinstance(value, dict) and "kind" not in value:
-        return {**value, "kind": "scalar" if "range" in value else "impedance"}
-    return value
+def _shape(value: Any) -> str:
+    """``[[accuracy.range]]`` makes it a table of one number's accuracy."""
+    scalar = isinstance(value, ScalarAccuracyTable) or (
+        isinstance(value, dict) and "range" in value
+    )
+    return "of one number" if scalar else "of impedance"
 
 
-AccuracyTable = Annotated[
-    ImpedanceAccuracyTable | ScalarAccuracyTable,
-    Field(discriminator="kind"),
+AnyAccuracy = Annotated[
+    Annotated[ImpedanceAccuracyTable, Tag("of impedance")]
+    | Annotated[ScalarAccuracyTable, Tag("of one number")],
+    Discriminator(_shape),
 ]
-AnyAccuracy = Annotated[AccuracyTable, BeforeValidator(_kind_from_shape)]

@@ -2,7 +2,14 @@
 
 from typing import Annotated, Any, Literal
 
-from pydantic import AfterValidator, Field, ValidationInfo, field_validator, model_validator
+from pydantic import (
+    AfterValidator,
+    Field,
+    ValidationInfo,
+    WithJsonSchema,
+    field_validator,
+    model_validator,
+)
 
 from ohmward.setup.driver_replies import (
     FieldKind,
@@ -13,6 +20,10 @@ from ohmward.setup.driver_replies import (
 from ohmward.setup.quantities import Fraction, Model, PositiveSeconds, Seconds, quantity, wrong
 from ohmward.setup.template import TemplateError, read_template
 
+# A value in the setting's own unit: what unit that is only the setting knows.
+InItsUnit = Annotated[
+    float, WithJsonSchema({"anyOf": [{"type": "number"}, {"type": "string", "pattern": "[0-9]"}]})
+]
 Unit = Literal["F", "H", "ohm", "V", "A", "Hz", "s", "degC", "pct", "W", "J", "m", "1"]
 
 
@@ -98,13 +109,9 @@ class Setting(NumberStyle):
     set_and_ask: CommandText = Field(
         "", description="one message that sets and asks, where the instrument answers it"
     )
-    minimum: float | None = Field(
-        None, description="least value", json_schema_extra={"type": ["number", "string"]}
-    )
-    maximum: float | None = Field(
-        None, description="greatest value", json_schema_extra={"type": ["number", "string"]}
-    )
-    allowed: tuple[float, ...] = Field(
+    minimum: InItsUnit | None = Field(None, description="least value", examples=["20 Hz"])
+    maximum: InItsUnit | None = Field(None, description="greatest value", examples=["2 MHz"])
+    allowed: tuple[InItsUnit, ...] = Field(
         (), description="the only values that there are", examples=[["100 Hz", "1 kHz"]]
     )
     between: Literal["refused", "up", "down", "nearest"] = Field(
@@ -115,11 +122,9 @@ class Setting(NumberStyle):
         description="share of the value by which the read-back may differ",
         examples=["0.01 %"],
     )
-    tolerance_absolute: float = Field(
+    tolerance_absolute: InItsUnit = Field(
         0.0,
-        ge=0,
         description="amount by which the read-back may differ besides",
-        json_schema_extra={"type": ["number", "string"]},
         examples=["0.1 mV"],
     )
     words: dict[str, str] = Field(
@@ -162,6 +167,8 @@ class Setting(NumberStyle):
             raise wrong("a kind of number, switch, word or text", self.kind)
         if self.minimum is not None and self.maximum is not None and self.minimum > self.maximum:
             raise wrong(f"a minimum of at most {self.maximum}", self.minimum)
+        if self.tolerance < 0 or self.tolerance_absolute < 0:
+            raise wrong("tolerances of 0 or more", "a negative one")
         if self.reply is not None and not any(f.name == "value" for f in self.reply.fields):
             raise wrong("a field named 'value' in the reply", "none")
         return self
