@@ -4,7 +4,7 @@ import pytest
 import trio
 import trio.testing
 
-from ohmward.errors import LinkError, LinkLost, NotProvenSafe, SafetyTrip
+from ohmward.errors import InstrumentRefused, LinkError, LinkLost, NotProvenSafe, SafetyTrip
 from ohmward.safety.handle import Ending
 from ohmward.safety.inprocess import HandLoadedWarden, ScannerWarden
 
@@ -110,6 +110,23 @@ def test_a_contact_that_does_not_close_trips():
             await warden.lease("1")
         assert relays.really_closed == set()
         assert (await warden.stop()).proven
+
+    virtual(main)
+
+
+def test_a_scanner_that_says_by_itself_that_it_did_not_obey_trips():
+    class Refusing(Relays):
+        async def close(self, channels: tuple[str, ...]) -> None:
+            await super().close(channels)
+            raise InstrumentRefused("relay 201 is not closed")
+
+    async def main() -> None:
+        relays = Refusing()
+        warden = warden_of(relays)
+        await warden.start()
+        with pytest.raises(SafetyTrip, match="did not close as told"):
+            await warden.lease("1")
+        assert relays.really_closed == set()
 
     virtual(main)
 

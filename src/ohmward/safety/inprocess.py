@@ -1,10 +1,11 @@
 """Wardens that live in the runner's own process, for benches on which nothing energises."""
 
 from collections.abc import Mapping
+from typing import NoReturn
 
 import trio
 
-from ohmward.errors import LinkError, NotProvenSafe, OhmwardError, SafetyTrip
+from ohmward.errors import InstrumentRefused, LinkError, NotProvenSafe, OhmwardError, SafetyTrip
 from ohmward.safety.equipment import Operator, Scanner
 from ohmward.safety.handle import Ending
 
@@ -47,6 +48,8 @@ class ScannerWarden:
                 self._leased = position
                 await self._scanner.close(channels)
                 after = await self._scanner.closed()
+        except InstrumentRefused as error:
+            await self._trip(f"the contacts for {position} did not close as told: {error}")
         except LinkError as error:
             await self._open_everything(f"after a fault on the scanner's link ({error})")
             raise
@@ -67,6 +70,8 @@ class ScannerWarden:
         try:
             await self._scanner.open(channels)
             after = await self._scanner.closed()
+        except InstrumentRefused as error:
+            await self._trip(f"the contacts of {position} did not open as told: {error}")
         except LinkError as error:
             await self._open_everything(f"after a fault on the scanner's link ({error})")
             raise
@@ -83,7 +88,7 @@ class ScannerWarden:
                 return Ending(proven=False, reasons=(str(error),))
         return Ending(proven=True)
 
-    async def _trip(self, reason: str) -> None:
+    async def _trip(self, reason: str) -> NoReturn:
         """Open everything, then raise SafetyTrip, or NotProvenSafe if it will not open."""
         await self._open_everything(f"after this: {reason}")
         raise SafetyTrip(reason)

@@ -47,6 +47,7 @@ class Laws:
     bypass_share: the bypass opens below this share of the meter's range (half).
     meter_foreign_v: the impedance meter stands this foreign voltage (1 V unless its driver
         says otherwise).
+    path_ohm: what a direct short through contacts and leads still has (ohm, common practice).
     """
 
     limit_share: float = 0.8
@@ -69,6 +70,7 @@ class Laws:
     proof_valid_s: float = 300.0
     bypass_share: float = 0.5
     meter_foreign_v: float = 1.0
+    path_ohm: float = 0.05
 
     def __post_init__(self) -> None:
         if not 0.0 < self.injection_v <= self.test_ceiling_v <= 1.0:
@@ -222,6 +224,23 @@ def check_relay_move(contact: Contact, *, voltage_v: float, current_a: float) ->
             f"{contact.switch_a:g} A; there may be {abs(voltage_v):.6g} V and "
             f"{abs(current_a):.6g} A",
         )
+
+
+def closing_current_a(laws: Laws, *, voltage_v: float, resistance_ohm: float) -> float:
+    """Current that a closing contact starts: V/R; up to the test voltage it closes dry (A)."""
+    if abs(voltage_v) <= laws.test_ceiling_v:
+        return 0.0
+    return abs(voltage_v) / max(resistance_ohm, laws.path_ohm)
+
+
+def short_target_v(laws: Laws, wired: PositionWiring) -> float:
+    """The voltage down to which a part is discharged before its direct short may close (V).
+
+    The least of the general target, the short's hot-switch voltage, and what its hot-switch
+    current allows; never below the test voltage, where it closes dry.
+    """
+    by_current_v = wired.short.switch_a * max(wired.short_ohm, laws.path_ohm)
+    return max(min(laws.target_v, wired.short.switch_v, by_current_v), laws.test_ceiling_v)
 
 
 def check_bypass_opening(laws: Laws, *, predicted_a: float, range_a: float) -> None:

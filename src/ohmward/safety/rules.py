@@ -31,6 +31,7 @@ class Action(StrEnum):
     DISCONNECT = "take the part off the rail"
     CLOSE_DISCHARGE = "close the discharge"
     OPEN_DISCHARGE = "open the discharge"
+    OPEN_SENSE = "open the sense contacts"
     CLOSE_SHORT = "close the short"
     OPEN_SHORT = "open the short"
     CLOSE_METER = "close the meter path"
@@ -123,6 +124,7 @@ class PositionEvent(StrEnum):
     CHANGE = "change"
     STOP = "stop"
     RECOVER = "recover"
+    GIVE_UP = "give up"  # nothing more can be done from here: a person must
     LEAVE = "leave the rail"  # another position needs it
     EXPIRED = "expired"
     END = "end"
@@ -269,9 +271,16 @@ def _position_pairs() -> dict[tuple[PositionState, PositionEvent], Step[Position
         (_P.DEAD, _V.EXPIRED): Step(_P.UNKNOWN),
         (_P.DEAD, _V.MAKE_SAFE): discharge,
         (_P.DEAD, _V.LEASE): Step(
-            _P.LEASED, (_A.OPEN_SHORT, _A.OPEN_DISCHARGE, _A.DISCONNECT, _A.CLOSE_METER)
+            _P.LEASED,
+            (
+                _A.OPEN_SHORT,
+                _A.OPEN_DISCHARGE,
+                _A.DISCONNECT,
+                _A.OPEN_SENSE,  # its divider would be measured along with the part
+                _A.CLOSE_METER,
+            ),
         ),
-        (_P.LEASED, _V.RELEASE): Step(_P.UNKNOWN, (_A.OPEN_METER,)),
+        (_P.LEASED, _V.RELEASE): Step(_P.UNKNOWN, (_A.CLOSE_SENSE, _A.OPEN_METER)),
         (_P.DEAD, _V.JOIN): Step(_P.JOINED, (_A.CLOSE_SENSE, _A.CONNECT, _A.OPEN_DISCHARGE)),
         (_P.JOINED, _V.CHECKED): Step(_P.READY),
         (_P.JOINED, _V.CHECK_FAILED): discharge,
@@ -291,6 +300,7 @@ def _position_pairs() -> dict[tuple[PositionState, PositionEvent], Step[Position
     for state in _P:
         if state not in (_P.ENDED_PROVEN, _P.ENDED_UNPROVEN):
             pairs[state, _V.TRIP] = trip
+            pairs[state, _V.GIVE_UP] = unproven
     return pairs
 
 

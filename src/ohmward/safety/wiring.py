@@ -3,6 +3,9 @@
 from dataclasses import dataclass, field
 from math import inf
 
+from ohmward.setup.high_voltage import Contact as DescribedContact
+from ohmward.setup.high_voltage import HighVoltage
+
 
 @dataclass(frozen=True, kw_only=True, slots=True)
 class Contact:
@@ -82,3 +85,46 @@ class Wiring:
             self.bypass,
             *(contact for wired in self.positions for contact in wired.contacts()),
         )
+
+    def node_capacitance_f(self) -> float:
+        """What lies on the rail beside the part (F)."""
+        return self.supply_capacitance_f + self.rail_capacitance_f
+
+
+def wiring_of(path: HighVoltage) -> Wiring:
+    """The wiring that a bench file describes; ValueError where it has no bypass."""
+    if path.bypass is None:
+        raise ValueError("the current meter has no bypass")
+
+    def contact(described: DescribedContact) -> Contact:
+        relay = path.relay_of(described)
+        return Contact(
+            channel=described.channel,
+            switch_v=relay.switch_v,
+            switch_a=relay.switch_a,
+            stand_off_v=relay.stand_off_v,
+            made_unpowered=described.made_unpowered,
+        )
+
+    return Wiring(
+        supply=contact(path.supply),
+        bypass=contact(path.bypass),
+        divider_ohm=path.divider_ohm,
+        supply_capacitance_f=path.supply_capacitance_f,
+        rail_capacitance_f=path.rail_capacitance_f,
+        meter_survives_a=inf if path.meter_survives_a is None else path.meter_survives_a,
+        positions=tuple(
+            PositionWiring(
+                position=place.name,
+                connect=contact(place.connect),
+                series_ohm=place.series.resistance_ohm,
+                discharge=contact(place.discharge),
+                discharge_ohm=place.discharge_resistor.resistance_ohm,
+                short=contact(place.short),
+                short_ohm=place.short_ohm,
+                sense=tuple(contact(each) for each in place.sense),
+                meter=tuple(contact(each) for each in place.meter),
+            )
+            for place in path.positions
+        ),
+    )
