@@ -9,7 +9,7 @@ import numpy as np
 from ohmward.errors import BadInput, Problem, Problems
 from ohmward.metrology.immittance import PAIRS, covariance_of_pair, impedance_of_pair, views
 from ohmward.terms.kind import Kind
-from ohmward.units.markings import MarkingError, read_marking
+from ohmward.units.markings import MarkingAmbiguous, read_marking
 from ohmward.units.values import UnitError, format_quantity, parse_quantity
 
 COVERAGE_K = 2.0
@@ -155,10 +155,10 @@ def _marking(text: str, kind: str | None) -> Converted:
         raise BadInput((_problem("kind-missing", "--kind", expected, kind or "none"),))
     try:
         marking = read_marking(text, kind)
-    except MarkingError as error:
-        raise BadInput(
-            (_problem("ambiguous-marking", "marking", error.expected, error.found),)
-        ) from error
+    except UnitError as error:
+        ambiguous = isinstance(error, MarkingAmbiguous)
+        id = "ambiguous-marking" if ambiguous else "unreadable-marking"  # noqa: A001
+        raise BadInput((_problem(id, "marking", error.expected, error.found),)) from error
     values = {"nominal": (marking.nominal, nan)}
     units = {"nominal": Kind(kind).unit, "tolerance_low": "1", "tolerance_high": "1"}
     for name in ("tolerance_low", "tolerance_high"):
