@@ -3,11 +3,11 @@
 from importlib.resources import files
 from pathlib import Path
 
-FOLDERS = ("drivers", "sequences", "simulators")
+FOLDERS = ("drivers", "sequences", "simulators", "schemas")
 
 
 def shipped(folder: str) -> Path:
-    """The folder of shipped files: ``drivers``, ``sequences`` or ``simulators``.
+    """The folder of shipped files: ``drivers``, ``sequences``, ``simulators``, ``schemas``.
 
     A wheel carries it inside the package, a checkout at the top of the repository.
     Raises ValueError for any other name.
