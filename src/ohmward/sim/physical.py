@@ -1,0 +1,140 @@
+"""Reads what is really there: part models, and a bench's physical file.
+
+This is the simulator's own reader: it shares nothing with the one for the files that people
+write, so that a mistake in one cannot hide in the other. Numbers are in SI units, the unit in
+the key.
+"""
+
+import tomllib
+from collections.abc import Mapping
+from dataclasses import dataclass, field, fields
+from pathlib import Path
+from typing import Any, TypeVar
+
+
+class PhysicalFileError(ValueError):
+    """A physical file or part model that cannot be used; says which key."""
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class PartModel:
+    """How parts of one make are, before one of them is drawn.
+
+    Capacitors: ``loss`` is tan δ of the dielectric around each decade (frequency in Hz, tan δ);
+    ``esr_ohm_f`` times 1/C is the resistance of plates and electrolyte at 20 °C (ohm·farad),
+    ``esr_least_ohm`` its floor; ``tau_s`` is the insulation's time constant R·C;
+    ``bias_half_v`` the DC voltage that halves C (0: none), relative to the rated voltage where
+    ``bias_half_rated`` is given instead. Inductors: ``q_peak`` sets the core loss,
+    ``saturation_rated`` is the bias current, over the rated one, at which L has lost 30 %;
+    ``winding_ohm_h`` times L the winding's resistance (ohm per henry), ``winding_least_ohm``
+    its floor; ``self_resonance_hz_h`` is f0·√L (Hz·√H), which gives the self-capacitance.
+    All kinds: ``esl_h`` in series, ``stray_f`` across; ``temperature_per_k`` of the value.
+    ``spread`` is the standard deviation of the value over the marked tolerance, and no part is
+    further off than ``spread_most`` of the tolerance.
+    """
+
+    kind: str
+    spread: float = 0.25
+    spread_most: float = 0.6
+    temperature_per_k: float = 0.0
+    loss: tuple[tuple[float, float], ...] = ()
+    esr_ohm_f: float = 0.0
+    esr_least_ohm: float = 0.0
+    esr_per_k: float = 0.0
+    esr_spread: float = 0.1
+    esl_h: float = 0.0
+    tau_s: float = 0.0
+    bias_half_v: float = 0.0
+    bias_half_rated: float = 0.0
+    stray_f: float = 0.0
+    q_peak: float = 0.0
+    saturation_rated: float = 0.0
+    winding_ohm_h: float = 0.0
+    winding_least_ohm: float = 0.0
+    self_resonance_hz_h: float = 0.0
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class PartTruth:
+    """What one part of the lot really is: its model, its fault and what overrides the draw."""
+
+    model: str
+    fault: str = ""
+    severity: float = 1.0
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class FixtureTruth:
+    """The leads and clips of one position: in series R and L, across it C and G."""
+
+    series_ohm: float = 0.0
+    series_h: float = 0.0
+    stray_f: float = 0.0
+    stray_s: float = 0.0
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class RoomTruth:
+    """The air around the bench: mean, and a slow swing with the day."""
+
+    temperature_c: float = 23.0
+    swing_k: float = 0.5
+    humidity_pct: float = 45.0
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class Physical:
+    """A physical file: parts by id, the fixture, the room, and figures of instruments."""
+
+    parts: Mapping[str, PartTruth] = field(default_factory=dict)
+    fixture: FixtureTruth = FixtureTruth()
+    room: RoomTruth = RoomTruth()
+    instruments: Mapping[str, Mapping[str, Any]] = field(default_factory=dict)
+
+
+T = TypeVar("T")
+
+
+def read_model(path: Path) -> PartModel:
+    """A part model from simulators/parts. Raises PhysicalFileError."""
+    data = _read(path)
+    if "loss" in data:
+        data["loss"] = tuple((float(f), float(d)) for f, d in data["loss"])
+    return _make(PartModel, data, str(path))
+
+
+def read_physical(path: Path) -> Physical:
+    """A physical file. Raises PhysicalFileError naming the key."""
+    data = _read(path)
+    known = {"part", "fixture", "room", "instrument"}
+    unknown = set(data) - known
+    if unknown:
+        raise PhysicalFileError(f"{path}: unknown {', '.join(sorted(unknown))}")
+    parts = data.get("part", {})
+    return Physical(
+        parts={name: _make(PartTruth, one, f"{path}: part.{name}") for name, one in parts.items()},
+        fixture=_make(FixtureTruth, data.get("fixture", {}), f"{path}: fixture"),
+        room=_make(RoomTruth, data.get("room", {}), f"{path}: room"),
+        instruments=data.get("instrument", {}),
+    )
+
+
+def _read(path: Path) -> dict[str, Any]:
+    try:
+        data = tomllib.loads(path.read_text("utf-8"))
+    except (OSError, ValueError) as error:
+        raise PhysicalFileError(f"{path}: {error}") from error
+    if data.pop("format", None) != 1:
+        raise PhysicalFileError(f"{path}: expected format = 1")
+    return data
+
+
+def _make(model: type[T], data: Mapping[str, Any], where: str) -> T:
+    known = {one.name for one in fields(model)}  # type: ignore[arg-type]  # T is a dataclass
+    unknown = set(data) - known
+    if unknown:
+        raise PhysicalFileError(f"{where}: unknown {', '.join(sorted(unknown))}")
+    try:
+        return model(**data)
+    except TypeError as error:
+        raise PhysicalFileError(f"{where}: {error}") from error
