@@ -2,7 +2,6 @@
 
 import tomllib
 from pathlib import Path
-from typing import Any
 
 import pytest
 from hypothesis import given
@@ -172,26 +171,6 @@ def test_the_physical_file_stands_beside_the_bench(tmp_path: Path) -> None:
 @pytest.mark.parametrize("text", ["", "format = 1", "format = 2\nname = 3", "instrument = 3"])
 def test_a_file_that_is_hardly_a_bench(tmp_path: Path, text: str) -> None:
     assert told(tmp_path, text)
-
-
-leaves: st.SearchStrategy[Any] = st.sampled_from(
-    [
-        "",
-        "x",
-        "1 V",
-        "scanner",
-        "by hand",
-        "TCPIP::h::1::SOCKET",
-        0,
-        1,
-        -1,
-        True,
-        1.5,
-        [],
-        {},
-        ["1"],
-    ]
-)
 
 
 @given(st.data())
