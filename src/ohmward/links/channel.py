@@ -46,6 +46,7 @@ class Channel:
         self.abandoned = False
         """A hung thread still uses the session, and closes it if it ever ends."""
         self._count = settings.max_reply_bytes + len(settings.read_termination) + 1
+        self._timeout_s = 0.0
         self._warnings = ExitStack()
         resource = manager.open_resource(address, open_timeout=round(1e3 * settings.open_timeout_s))
         if not isinstance(resource, MessageBasedResource):
@@ -59,9 +60,8 @@ class Channel:
         except BaseException:
             self.close()
             raise
-        self.endless = not settings.read_termination and isinstance(
-            resource, TCPIPSocket | SerialInstrument
-        )
+        self._stream = isinstance(resource, TCPIPSocket | SerialInstrument)
+        self.endless = self._stream and not settings.read_termination
         """Nothing marks the end of a message."""
         session = getattr(self.library, "sessions", {}).get(self.handle)
         self.patient: PatientSession | None = (
@@ -109,7 +109,9 @@ class Channel:
 
     def set_timeout(self, timeout_s: float) -> None:
         """Give every following PyVISA call ``timeout_s``, and at least a millisecond."""
-        self.resource.timeout = max(1.0, round(1e3 * timeout_s))
+        if timeout_s != self._timeout_s:
+            self.resource.timeout = max(1.0, round(1e3 * timeout_s))
+            self._timeout_s = timeout_s
 
     def write(self, message: bytes) -> None:
         """Write all of ``message``, or raise."""
@@ -128,7 +130,7 @@ class Channel:
         end = self.settings.read_termination
         if end and message.endswith(end):
             return bytes(message[: -len(end)])
-        if status == StatusCode.success:
+        if status == StatusCode.success and not (self._stream and end):
             return bytes(message)  # the interface itself marked the end
         if status == StatusCode.success_max_count_read:
             expected = f"at most {self.settings.max_reply_bytes} bytes"

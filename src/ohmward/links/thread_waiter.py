@@ -34,7 +34,7 @@ PROMPT_S = 0.0005
 
 SETTLE_S = 0.2
 GRACE_S = 1.0
-"""A thread that does not end so soon after it was cancelled is hung in a library."""
+"""A thread that does not end within this after it was cancelled is hung in a library."""
 
 
 class _Left(Exception):
@@ -82,8 +82,9 @@ class _Job(Generic[T]):
 class ThreadWaiter:
     """Waits for real links; share one among all links of a process."""
 
-    def __init__(self) -> None:
+    def __init__(self, grace_s: float = GRACE_S) -> None:
         self._limiter = trio.CapacityLimiter(64)
+        self._grace_s = grace_s
 
     async def open(
         self, address: str, settings: LinkSettings, manager: pyvisa.ResourceManager
@@ -212,7 +213,7 @@ class ThreadWaiter:
             job.stop = True
             stop()
             with trio.CancelScope(shield=True):
-                give_up_s = stopwatch_s() + GRACE_S
+                give_up_s = stopwatch_s() + self._grace_s
                 while job.started and not job.done and stopwatch_s() < give_up_s:
                     await trio.sleep(0.005)
             if job.leave():

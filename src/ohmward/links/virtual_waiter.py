@@ -11,7 +11,7 @@ import trio
 from pyvisa.constants import StatusCode
 from pyvisa.errors import VisaIOError
 
-from ohmward.errors import LinkTimeout, OhmwardError
+from ohmward.errors import OhmwardError
 from ohmward.links.channel import Channel, SimulatedLibrary
 from ohmward.links.foreign import foreign_errors, translated
 from ohmward.links.settings import LinkSettings
@@ -47,6 +47,7 @@ class VirtualWaiter:
 
     async def read(self, channel: Channel, timeout_s: float) -> bytes:
         """Read a message when it is due; one that trickles in is waited for until it is whole."""
+        channel.set_timeout(timeout_s)
         library = cast(SimulatedLibrary, channel.library)
         now_s = trio.current_time()
         deadline_s = now_s + timeout_s
@@ -55,8 +56,7 @@ class VirtualWaiter:
             due_s = library.reply_due(channel.handle)
             # bytes that were there at the last look, and no more to come: never whole
             if due_s is None or due_s > deadline_s or due_s <= looked_s:
-                await trio.sleep_until(deadline_s)
-                raise LinkTimeout(f"no whole reply in {timeout_s:g} s", address=channel.address)
+                due_s = deadline_s
             if due_s > now_s:
                 await trio.sleep_until(due_s)
             else:
@@ -65,7 +65,7 @@ class VirtualWaiter:
             try:
                 return channel.read()
             except VisaIOError as error:
-                if error.error_code != StatusCode.error_timeout:
+                if error.error_code != StatusCode.error_timeout or now_s >= deadline_s:
                     raise translated(error, channel.address) from error
             except Exception as error:
                 raise translated(error, channel.address) from error
@@ -74,15 +74,18 @@ class VirtualWaiter:
         """Clear the channel whenever something is there, until it was silent for ``quiet_s``."""
         library = cast(SimulatedLibrary, channel.library)
         end_s = trio.current_time() + at_most_s
+        cleared_s = float("-inf")
         while True:
             silent_at_s = trio.current_time() + quiet_s
             due_s = library.reply_due(channel.handle)
             if due_s is None or due_s > silent_at_s:
                 await trio.sleep_until(silent_at_s)
                 return True
-            if due_s > end_s or trio.current_time() > end_s:
+            # something that is there again at once cannot be cleared: a lost session
+            if due_s > end_s or due_s <= cleared_s:
                 return False
             await trio.sleep_until(due_s)
+            cleared_s = trio.current_time()
             with foreign_errors(channel.address):
                 channel.resource.flush(pyvisa.constants.BufferOperation.discard_read_buffer)
 
