@@ -89,13 +89,13 @@ def netlist(network: Network, top: str = "1", bottom: str = "0") -> list[str]:
 def _lines(network: Network, top: str, bottom: str, name: str) -> Iterator[str]:
     if isinstance(network, Parallel):
         for index, member in enumerate(network.members):
-            yield from _lines(member, top, bottom, f"{name}{index}")
+            yield from _lines(member, top, bottom, f"{name}_{index}")
     elif isinstance(network, Series):
         last = len(network.members) - 1
         upper = top
         for index, member in enumerate(network.members):
-            lower = bottom if index == last else f"{name}_{index}"
-            yield from _lines(member, upper, lower, f"{name}{index}")
+            lower = bottom if index == last else f"n{name}_{index}"
+            yield from _lines(member, upper, lower, f"{name}_{index}")
             upper = lower
     elif isinstance(network, R):
         yield f"R{name} {top} {bottom} {network.ohm!r}"

@@ -85,6 +85,7 @@ class PhysicalPart:
         bias_a: float = 0.0,
     ) -> complex:
         """Impedance in ohm at the part's terminals; ``level_v`` is too small to matter here."""
+        temperature_c = round(temperature_c, 2)  # a room drifts; a hundredth of a kelvin is nothing
         key = (frequency_hz, bias_v, temperature_c, bias_a)
         found = self._solved.get(key)
         if found is None:
