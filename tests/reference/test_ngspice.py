@@ -89,5 +89,5 @@ def test_part_models_agree_with_ngspice(name: str, tmp_path: Path) -> None:
             for frequency, z in zip(FREQUENCIES_HZ, foreign, strict=True):
                 ours = network.impedance(2j * math.pi * frequency)
                 assert abs(abs(ours) - abs(z)) <= 1e-6 * abs(z), (fault, frequency, ours, z)
-                # the foreign matrix loses the small part of an open part's 8 Gohm
-                assert abs(ours - z) <= 1e-3 * abs(z), (fault, frequency, ours, z)
+                if fault != "open":  # of 8 Gohm the foreign matrix loses the small part
+                    assert abs(ours - z) <= 1e-6 * abs(z), (fault, frequency, ours, z)
