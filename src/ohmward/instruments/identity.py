@@ -3,7 +3,8 @@
 from collections.abc import Callable
 
 from ohmward.errors import WrongIdentity
-from ohmward.setup.driver import Driver, IdentityTable
+from ohmward.setup.driver import Driver
+from ohmward.setup.driver_tables import IdentityTable
 
 
 def identity_check(

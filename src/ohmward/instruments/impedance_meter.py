@@ -1,7 +1,7 @@
 """The impedance meter: points set with read-back, readings that are numbers only when good."""
 
 from collections.abc import Awaitable, Callable, Mapping
-from math import nan
+from math import isclose, nan
 from typing import TypeVar
 
 from ohmward.errors import (
@@ -50,6 +50,9 @@ class ImpedanceMeter:
         self._pair = talker.driver.meter.pair if talker.driver.meter else ""
         self._integration = ""
         self._query, self._layout = talker.reading("impedance")
+        self._reported = {one.name for one in talker.driver.reading["impedance"].fields}
+        self._sees = bool(self._reported & {"pair", "frequency_hz"})
+        self._asked_pair: str | None = None
         self._stated_timeout_s = talker.driver.reading["impedance"].timeout
         self._timeout_s = self._stated_timeout_s or talker.driver.link.timeout
         self._ranges: dict[Value, str] = {}
@@ -84,8 +87,12 @@ class ImpedanceMeter:
         """
         self._preparation = self._prepared(pair, integration, range_ohm)
         self._integration = integration
+        self._asked_pair = pair
         self._point = None
         self._forget()
+        if self._talker.codec.unasked:
+            # a message that is on its way was measured before: on another part, maybe
+            self._talker.discards = max(self._talker.discards, 1)
         return await self._persist(self._prepare, restore=False)
 
     def _prepared(
@@ -97,7 +104,7 @@ class ImpedanceMeter:
             words = self.limits["pair"].words
             self._pair = pair or ("R-X" if "R-X" in words else next(iter(words), ""))
             wanted["pair"] = self._pair
-        elif pair and pair != self._pair:
+        elif pair and pair != self._pair and "pair" not in self._reported:
             raise InstrumentRefused(f"the meter sends {self._pair or 'no pair known'}, not {pair}")
         if can_set("integration"):
             wanted["integration"] = integration
@@ -170,10 +177,41 @@ class ImpedanceMeter:
                     wanted.append((output, value != 0.0))
             elif value:
                 raise InstrumentRefused(f"the meter has no {name.replace('_', ' ')} of its own")
+        self._see_what_cannot_be_set(point)
         for name, value in (("level", point.level_v), ("frequency", point.frequency_hz)):
             if self._talker.can_set(name):
                 wanted.append((name, value))
         return wanted
+
+    def _see_what_cannot_be_set(self, point: Point) -> None:
+        """Refuse a point that a person would have to turn the meter to, unless it tells us."""
+        table = self._talker.driver.meter
+        level_v = None if table is None else table.level
+        if not self._talker.can_set("frequency") and "frequency_hz" not in self._reported:
+            fixed = table.frequencies if table is not None else ()
+            if len(fixed) != 1 or not isclose(point.frequency_hz, fixed[0], rel_tol=1e-3):
+                raise InstrumentRefused(
+                    f"the meter can neither be set to {point.frequency_hz:g} Hz nor asked for it"
+                )
+        held = level_v is not None and not self._talker.can_set("level")
+        if held and not isclose(point.level_v, level_v or 0.0, rel_tol=0.01):
+            raise InstrumentRefused(f"the meter's level is {level_v:g} V and cannot be set")
+
+    def _as_asked(self, values: Mapping[str, Value]) -> bool:
+        """Whether a meter that a person sets by hand is set to what was asked for."""
+        frequency_hz = values.get("frequency_hz")
+        asked_hz = self._point.frequency_hz if self._point is not None else frequency_hz
+        if isinstance(frequency_hz, float) and not isclose(
+            frequency_hz,
+            asked_hz,  # type: ignore[arg-type]
+            rel_tol=1e-3,
+        ):
+            return False
+        pair = values.get("pair")
+        if pair is None:
+            return True
+        self._pair = str(pair)
+        return self._asked_pair is None or self._asked_pair == pair
 
     def _in_order(self, changes: dict[str, Value]) -> list[dict[str, Value]]:
         """The changes in two goes: the frequency and what falls, then what rises."""
@@ -266,6 +304,8 @@ class ImpedanceMeter:
         if link.recoveries != self._recoveries:
             # it was recovered within the exchange: the meter may have been off in between
             return self._bad(Status.STALE, reply)
+        if self._sees and not self._as_asked(values):
+            return self._bad(Status.NOT_SET, reply)
         good = status is Status.OK
         get = values.get
         return ImpedanceReading(

@@ -2,15 +2,15 @@
 
 from collections.abc import Mapping
 from math import isclose
-from typing import NamedTuple, Protocol
+from typing import NamedTuple
 
 import pyvisa
 import trio
 
 from ohmward.errors import InstrumentRefused, LinkError, LinkTimeout, ReplyMalformed
 from ohmward.instruments.identity import identity_check
-from ohmward.links.link import Hello, Link
-from ohmward.links.settings import LinkSettings
+from ohmward.instruments.line import Wire, hello_of, link_settings, read_end
+from ohmward.links.link import Link
 from ohmward.links.waiter import Waiter
 from ohmward.protocol.codec import Codec, Command, Decoded, Layout, Value, codec_of
 from ohmward.protocol.receiver import NEED_DATA
@@ -19,37 +19,9 @@ from ohmward.setup.driver import Driver
 from ohmward.setup.driver_commands import Setting, Wait
 from ohmward.terms.status import Status
 
-
-class Wire(Protocol):
-    """What a talker needs of a link."""
-
-    @property
-    def dirty(self) -> bool:
-        """Whether the next command will first have to recover the link."""
-
-    recoveries: int
-    """How often the link has recovered: what was set before it may be forgotten since."""
-
-    async def open(self) -> bytes:
-        """Open the link and return the identity."""
-
-    async def write(self, message: bytes) -> None:
-        """Send a command that is not answered."""
-
-    async def query(self, message: bytes, timeout_s: float | None = None) -> bytes:
-        """Send a command and return its one reply."""
-
-    async def receive(self, timeout_s: float | None = None) -> bytes:
-        """Return the next message without asking for it."""
-
-    def distrust(self, reason: str) -> None:
-        """Say that the last reply cannot be right."""
-
-    async def recover(self) -> None:
-        """Recover a dirty link now."""
-
-    async def aclose(self) -> None:
-        """Close the link."""
+NOW_S = 1e-3
+"""How long is waited to learn that nothing waits."""
+MOST_WAITING = 10_000
 
 
 class Answer(NamedTuple):
@@ -83,7 +55,8 @@ class Talker:
         self.discards = 0
         """Readings that are still to be thrown away because of what was set."""
         self._serial_number = serial_number
-        self._end = driver.link.read_termination.encode("latin-1")
+        self._end = read_end(driver)
+        self._unasked = codec.receiver()
         self._settings = {name: self._words(one) for name, one in driver.setting.items()}
         self._readings = {
             name: (codec.command(one.ask), codec.layout(one), one.timeout)
@@ -207,15 +180,25 @@ class Talker:
         return message
 
     async def _next_unasked(self, timeout_s: float | None) -> bytes:
-        """The next whole message that an instrument sends of its own accord."""
-        receiver = self.codec.receiver()
+        """The next whole message that an instrument sends of its own accord, none older."""
         deadline_s = trio.current_time() + (timeout_s or self.driver.link.timeout)
-        while (message := receiver.next()) is NEED_DATA:
+        await self._skip_what_waits()
+        while (message := self._unasked.next()) is NEED_DATA:
             left_s = deadline_s - trio.current_time()
             if left_s <= 0:
                 raise LinkTimeout("nothing whole came in time")
-            receiver.feed(await self.link.receive(left_s) + self._end)
+            self._unasked.feed(await self.link.receive(left_s) + self._end)
         return message
+
+    async def _skip_what_waits(self) -> None:
+        """Throw away what came while nobody listened: it was measured before it was asked for."""
+        for _ in range(MOST_WAITING):
+            try:
+                self._unasked.feed(await self.link.receive(NOW_S) + self._end)
+            except LinkTimeout:
+                return
+            while self._unasked.next() is not NEED_DATA:
+                pass
 
     # --- settings ---
 
@@ -386,49 +369,6 @@ def _same(setting: Setting, sent: Value, found: Value) -> bool:
 
 def _room(setting: Setting, value: float) -> float:
     return setting.tolerance * abs(value) + setting.tolerance_absolute
-
-
-_FLOW = {"none": "none", "software": "xon/xoff", "hardware": "rts/cts"}
-
-
-def link_settings(driver: Driver, codec: Codec) -> LinkSettings:
-    """The link's settings that a driver states."""
-    table = driver.link
-    return LinkSettings(
-        read_termination=table.read_termination.encode("latin-1"),
-        write_termination=table.write_termination.encode("latin-1"),
-        timeout_s=table.timeout,
-        open_timeout_s=table.open_timeout,
-        opening_delay_s=table.opening_delay,
-        drain_s=table.drain,
-        gap_s=table.gap,
-        reopen_budget_s=table.reopen_budget,
-        max_reply_bytes=table.longest_reply,
-        free_running=codec.unasked,
-        baud_rate=table.baud_rate,
-        data_bits=table.data_bits,
-        parity=table.parity,
-        stop_bits=table.stop_bits,
-        flow_control=_FLOW[table.flow],  # type: ignore[arg-type]
-    )
-
-
-def hello_of(driver: Driver, codec: Codec, *, address: str, serial_number: str) -> Hello:
-    """How a link knows the instrument again after a fault."""
-    check = identity_check(driver, address=address, serial_number=serial_number)
-    if driver.identity is None or (driver.link.echo and not driver.link.prompt):
-        return Hello(query=b"", check=check)
-    query = driver.identity.ask.encode("ascii")
-    if not codec.talks_back:
-        return Hello(query=query, check=check)
-
-    def check_whole(answer: bytes) -> None:
-        receiver = codec.receiver(query)
-        receiver.feed(answer + driver.link.read_termination.encode("latin-1"))
-        message = receiver.next()
-        check(b"" if message is NEED_DATA else message)
-
-    return Hello(query=query, check=check_whole)
 
 
 def open_talker(

@@ -11,7 +11,9 @@ from ohmward.protocol.scpi import read_channels, read_string, write_channels
 from ohmward.setup.driver_replies import ReplyField
 from ohmward.terms.status import Status
 
-Value = float | str | bool | tuple[int, ...] | tuple[bool, ...] | tuple[float, ...]
+Value = (
+    float | str | bool | tuple[int, ...] | tuple[bool, ...] | tuple[float, ...] | tuple[str, ...]
+)
 Read = tuple[Value, float, Status]
 FieldReader = Callable[[bytes], Read]
 FieldWriter = Callable[[Value], str]
@@ -38,6 +40,8 @@ def writer_of(field: ReplyField, manner: Manner) -> FieldWriter:
         return lambda value: '"{}"'.format(str(value).replace('"', '""'))
     if field.kind == "channels":
         return _write_channel_list
+    if field.kind == "flags":
+        return lambda value: _write_flags(field, value)
     return str
 
 
@@ -198,6 +202,21 @@ def _code(text: str) -> str:
     return text
 
 
+def _flags_reader(field: ReplyField, manner: Manner) -> FieldReader:
+    """The names of the bits that are set; a set bit without a name is not understood."""
+    names = sorted(field.flags, key=lambda name: field.flags[name])
+    known = sum({1 << bit for bit in field.flags.values()})
+
+    def read(data: bytes) -> Read:
+        text = _text(data).strip(" ")
+        if not re.fullmatch(r"\+?[0-9]{1,10}", text) or int(text) & ~known:
+            raise ReplyMalformed(f"{data!r} sets bits that the driver does not name")
+        number = int(text)
+        return tuple(name for name in names if number >> field.flags[name] & 1), 0.0, _OK
+
+    return read
+
+
 def _read_text(data: bytes) -> Read:
     return read_string(_text(data).strip(" ")), 0.0, _OK
 
@@ -212,6 +231,12 @@ def _write_channel_list(value: Value) -> str:
     return write_channels(int(channel) for channel in value)
 
 
+def _write_flags(field: ReplyField, value: Value) -> str:
+    if not isinstance(value, tuple):
+        raise TypeError("flags are a tuple of names")
+    return str(sum(1 << field.flags[str(name)] for name in value))
+
+
 def _ignore(data: bytes) -> Read:
     return _text(data), 0.0, _OK
 
@@ -221,6 +246,7 @@ _MAKERS: dict[str, Callable[[ReplyField, Manner], FieldReader]] = {
     "switch": _switch_reader,
     "word": _word_reader,
     "status": _status_reader,
+    "flags": _flags_reader,
     "text": lambda field, manner: _read_text,
     "channels": lambda field, manner: _read_channel_list,
     "ignored": lambda field, manner: _ignore,

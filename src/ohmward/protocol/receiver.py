@@ -67,6 +67,11 @@ class LineReceiver:
         """Bytes that came and belong to no line yet."""
         return bytes(self._buffer)
 
+    def skip(self, count: int) -> None:
+        """Take so many bytes away that are no line."""
+        del self._buffer[:count]
+        self._searched = 0
+
     def _drop(self) -> None:
         self._buffer.clear()
         self._searched = 0

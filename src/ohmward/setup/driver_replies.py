@@ -6,7 +6,7 @@ from pydantic import BeforeValidator, Field, model_validator
 
 from ohmward.setup.quantities import Model, wrong
 
-FieldKind = Literal["number", "switch", "word", "text", "channels", "status", "ignored"]
+FieldKind = Literal["number", "switch", "word", "text", "channels", "status", "flags", "ignored"]
 NumberForm = Literal["any", "NR1", "NR2", "NR3"]
 StatusWord = Literal["ok", "overload", "unbalanced", "unsettled", "refused", "malformed"]
 
@@ -52,6 +52,11 @@ class ReplyField(NumberStyle):
         default_factory=dict,
         description="for a status: code as sent = what it means; instead of the driver's [status]",
     )
+    flags: dict[str, int] = Field(
+        default_factory=dict,
+        description="name = bit, for a whole number whose set bits each mean something",
+        examples=[{"current_limit": 0, "tripped": 1}],
+    )
     repeats: bool = Field(
         False, description="this field takes all that is left of the reply; the last one only"
     )
@@ -64,6 +69,12 @@ class ReplyField(NumberStyle):
     bits: tuple[int, int] | None = Field(
         None, description="first and last bit that are meant, 0 is the lowest of the number"
     )
+    numbers: dict[str, float] = Field(
+        default_factory=dict, description="the number (SI unit) that each code stands for"
+    )
+    negative_by: str = Field(
+        "", description="name of the switch field that says that this number is negative"
+    )
     scaled_by: str = Field(
         "", description="name of the field whose 'factors' say what this one is multiplied by"
     )
@@ -75,8 +86,12 @@ class ReplyField(NumberStyle):
     def _consistent(self) -> "ReplyField":
         if self.kind == "word" and not self.words:
             raise wrong("'words' for a field of kind 'word'", "none")
+        if (self.kind == "flags") != bool(self.flags):
+            raise wrong("kind 'flags' and 'flags' together", "one of them")
         if self.suffix and self.suffixes:
             raise wrong("either 'suffix' or 'suffixes'", "both")
+        if self.kind == "number" and self.factors:
+            raise wrong("kind 'ignored' for a field that only scales others", self.kind)
         if self.bits is not None and not 0 <= self.bits[0] <= self.bits[1] <= 255:
             raise wrong("the lowest and the highest bit, in this order", list(self.bits))
         if self.minimum is not None and self.maximum is not None and self.minimum > self.maximum:
@@ -128,8 +143,11 @@ def _check_offsets(fields: tuple[ReplyField, ...]) -> None:
     for field in fields:
         if field.at is None or field.length is None:
             raise wrong("'at' and 'length' for every field of a frame", f"{field.name} without")
-        if field.scaled_by and not by_name.get(field.scaled_by, field).factors:
+        scale = by_name.get(field.scaled_by)
+        if field.scaled_by and (scale is None or not scale.factors):
             raise wrong(f"a field with 'factors' that scales {field.name}", field.scaled_by)
+        if field.negative_by and field.negative_by not in by_name:
+            raise wrong(f"a field that says whether {field.name} is negative", field.negative_by)
         if field.coding == "float" and field.length not in (2, 4, 8):
             raise wrong(f"2, 4 or 8 bytes for the float {field.name}", field.length)
         if field.coding in ("float", "text") and field.bits is not None:
