@@ -155,7 +155,8 @@ class FixtureTerminals:
                 if channels <= closed:
                     parts |= self._parts[name]
             found = self._known[closed] = Connected(parts, self._clips)
-        found.temperature_c = self._air.temperature_c(now_s)
+        # in steps that a part does not feel, so that it need not be solved anew each time
+        found.temperature_c = round(self._air.temperature_c(now_s), 2)
         return found
 
     def changed_s(self, now_s: float) -> float:
