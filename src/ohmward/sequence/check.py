@@ -89,18 +89,8 @@ class Checker:
             self._sweep(stage, key)
 
     def _sweep(self, stage: SweepStage, key: str) -> None:
-        frequency = stage.frequency
-        if isinstance(frequency, FrequencyRange):
-            if frequency.start >= frequency.stop:
-                self.note(
-                    "range-backwards",
-                    f"{key}.frequency",
-                    expected="'from' below 'to'",
-                    found=f"from {format_quantity(frequency.start, 'Hz')}"
-                    f" to {format_quantity(frequency.stop, 'Hz')}",
-                )
-        else:
-            self._repeated(f"{key}.frequency", frequency, same_frequency, _hertz)
+        if not isinstance(stage.frequency, FrequencyRange):
+            self._repeated(f"{key}.frequency", stage.frequency, same_frequency, _hertz)
         self._repeated(f"{key}.level", stage.level, same_value, _volts)
         self._repeated(f"{key}.bias", stage.bias, same_bias, str)
         for place, bias in enumerate(stage.bias, start=1):
@@ -172,8 +162,9 @@ class Checker:
         return found
 
     def _kinds_of(self, limit: LimitTable, stages: list[SweepStage]) -> frozenset[Kind]:
+        """The kinds of part that the limit judges; none where its stages are not known."""
         among = [kinds_of(stage.parts, self._sequence.kinds) for stage in stages]
-        return kinds_of(limit.parts, frozenset().union(*among) if among else self._sequence.kinds)
+        return kinds_of(limit.parts, frozenset[Kind]().union(*among))
 
     def _quantity(self, limit: LimitTable, key: str, kinds: frozenset[Kind]) -> None:
         quantity = QUANTITIES[limit.quantity]

@@ -114,8 +114,10 @@ def _resolve(table: LimitTable, stage: PlannedSweep, notes: Notes) -> Limit | Ca
     key = f"limit[{table.place}]"
     rule = None if table.rule is None else RULES.get(table.rule)
     where = _where(table, rule, stage, key, notes)
+    if where is None:
+        return None
     bounds = _bounds(table, rule, where, stage.part, key, notes)
-    if where is None or bounds is None:
+    if bounds is None:
         return None
     per_part = QUANTITIES[table.quantity].per == "part"
     if not per_part and not any(where.holds_at(point) for point in stage.points):
@@ -152,6 +154,8 @@ def _where(
             return None
         bias_v, bias_a = bias
     frequency = table.at.frequency
+    if rule is not None and rule.needs_frequency and frequency is None:
+        return None  # noted when the sequence was read
     stated = () if rule is None else rule.frequencies(stage.part)
     if frequency is not None and stated and not _among(frequency, stated):
         notes.sequence(
@@ -179,7 +183,7 @@ def _where(
 def _bounds(
     table: LimitTable,
     rule: Rule | None,
-    where: Where | None,
+    where: Where,
     part: Part,
     key: str,
     notes: Notes,
@@ -199,7 +203,7 @@ def _bounds(
             return None
         return low, high
     try:
-        found = rule.bounds(part, 0.0 if where is None else where.frequency_hz or 0.0)
+        found = rule.bounds(part, where.frequency_hz or 0.0)
     except RuleLacks as lack:
         notes.cell(
             "rule-lacks-cell",

@@ -15,8 +15,18 @@ from ohmward.sequence.model import (
     Table,
 )
 from ohmward.setup.toml import read_toml, salvage, validate
+from ohmward.terms.kind import Kind
 
 T = TypeVar("T", bound=Table)
+
+# What stands for a key of the head that is missing or wrong while the rest is looked at.
+_STAND_INS = {
+    "format": 1,
+    "name": "-",
+    "purpose": "-",
+    "follows": "-",
+    "kinds": [kind.value for kind in Kind],
+}
 
 
 def load_sequence(path: Path, problems: Problems) -> Sequence | None:
@@ -43,7 +53,7 @@ def load_sequence(path: Path, problems: Problems) -> Sequence | None:
 def _saved(data: Mapping[str, Any]) -> Sequence | None:
     """What is right in a file with something wrong in it; each table keeps its place."""
     rest = {key: value for key, value in data.items() if key not in {"stage", "limit"}}
-    head = salvage(SequenceHead, rest)
+    head = salvage(SequenceHead, rest, _STAND_INS)
     if head is None:
         return None
     stages: list[SweepStage] = []

@@ -4,9 +4,18 @@ import re
 from math import floor, log10
 from typing import Annotated, Any, ClassVar, Literal, Self
 
-from pydantic import AfterValidator, Field, PrivateAttr, ValidationInfo, field_validator
+from pydantic import (
+    AfterValidator,
+    Discriminator,
+    Field,
+    PrivateAttr,
+    Tag,
+    ValidationInfo,
+    field_validator,
+    model_validator,
+)
 
-from ohmward.sequence.rules import same_frequency
+from ohmward.sequence.rules import RULES, same_frequency
 from ohmward.sequence.values import Bias, BiasSetting, Bound, NominalValue, read_bound
 from ohmward.setup.quantities import (
     Model,
@@ -18,10 +27,12 @@ from ohmward.setup.quantities import (
     quantity,
     wrong,
 )
+from ohmward.setup.schema import register
 from ohmward.setup.toml import one_of
 from ohmward.terms.kind import Kind, Polarity
 from ohmward.terms.quantity import QUANTITIES
 from ohmward.terms.role import Role
+from ohmward.units.values import format_quantity
 
 Share = Annotated[float, quantity("1", above=0, maximum=1)]
 Times = Annotated[float, quantity("1", above=0, maximum=1000)]
@@ -73,9 +84,11 @@ class Table(Model):
 class PartFilter(Model):
     """Which parts something applies to; every key that is there must fit."""
 
-    kind: OneOrMany[Kind] = Field((), description="kinds of part")
+    kind: OneOrMany[Kind] = Field(default_factory=tuple, description="kinds of part")
     dielectric: OneOrMany[str] = Field(
-        (), description="dielectrics, as the parts list names them", examples=["PP"]
+        default_factory=tuple,
+        description="dielectrics, as the parts list names them",
+        examples=["PP"],
     )
     polarity: Polarity | None = Field(None, description="polar or nonpolar parts only")
     above: NominalValue | None = Field(None, description="nominal value above this")
@@ -92,6 +105,13 @@ class FrequencyRange(Model):
         False, description="leave out what the meter cannot reach, instead of refusing"
     )
 
+    @model_validator(mode="after")
+    def _rising(self) -> Self:
+        if self.start >= self.stop:
+            ends = (format_quantity(self.start, "Hz"), format_quantity(self.stop, "Hz"))
+            raise wrong("'from' below 'to'", f"from {ends[0]} to {ends[1]}", "range-backwards")
+        return self
+
     def unroll(self) -> tuple[float, ...]:
         """``from`` · 10^(i/per_decade) to six digits as far as ``to``, which is always last."""
         count = floor(log10(self.stop / self.start) * self.per_decade + 1e-9)
@@ -103,6 +123,17 @@ class FrequencyRange(Model):
 
 def _rounded(frequency_hz: float) -> float:
     return float(f"{frequency_hz:.{SIGNIFICANT_DIGITS - 1}e}")
+
+
+def _shape(value: object) -> str:
+    """A table is a range, anything else a list or one value; in brackets: not a key of the file."""
+    return "[range]" if isinstance(value, dict | FrequencyRange) else "[list]"
+
+
+Frequencies = Annotated[
+    Annotated[FrequencyRange, Tag("[range]")] | Annotated[OneOrMany[PositiveHertz], Tag("[list]")],
+    Discriminator(_shape),
+]
 
 
 class SettleRule(Model):
@@ -122,7 +153,7 @@ class StageTable(Table):
     name: StageName = Field(
         description="what limits and tables call this stage: lower case", examples=["sweep"]
     )
-    parts: PartFilter = Field(PartFilter(), description="which parts get this stage")
+    parts: PartFilter = Field(default_factory=PartFilter, description="which parts get this stage")
 
 
 class SweepStage(StageTable):
@@ -131,12 +162,11 @@ class SweepStage(StageTable):
     roles: ClassVar[frozenset[Role]] = frozenset({Role.IMPEDANCE_METER})
 
     kind: Literal["sweep"]
-    frequency: FrequencyRange | OneOrMany[PositiveHertz] = Field(
-        description="a frequency, a list, or { from, to, per_decade }"
-    )
+    frequency: Frequencies = Field(description="a frequency, a list, or { from, to, per_decade }")
     level: OneOrMany[PositiveVolts] = Field(description="AC level, rms", examples=["1 V"])
     bias: OneOrMany[BiasSetting] = Field(
-        (Bias(0.0, "V"),), description="DC bias: voltages, currents or shares of the rating"
+        default_factory=lambda: (Bias(0.0, "V"),),
+        description="DC bias: voltages, currents or shares of the rating; none if left out",
     )
     repeats: int = Field(1, ge=1, le=10_000_000, description="readings kept at each point")
     interval: Seconds = Field(
@@ -182,7 +212,7 @@ class LimitTable(Table):
     quantity: str = Field(
         description="a column of the tables", json_schema_extra={"enum": [*sorted(QUANTITIES)]}
     )
-    at: Condition = Field(Condition(), description="where it holds")
+    at: Condition = Field(default_factory=Condition, description="where it holds")
     minimum: Bound | None = Field(
         None,
         alias="min",
@@ -195,10 +225,14 @@ class LimitTable(Table):
         description="greatest: a value with unit, or a share of nominal with its sign",
         examples=["47 mohm", "+5 %"],
     )
-    rule: str | None = Field(None, description="a named rule instead of min and max")
+    rule: str | None = Field(
+        None,
+        description="a named rule instead of min and max",
+        json_schema_extra={"enum": [*sorted(RULES)]},
+    )
     times: Times = Field(1.0, description="multiplies what the rule allows", examples=[1.5])
     source: str = Field(min_length=1, description="which standard or practice says so")
-    parts: PartFilter = Field(PartFilter(), description="which parts it judges")
+    parts: PartFilter = Field(default_factory=PartFilter, description="which parts it judges")
 
     @field_validator("quantity")
     @classmethod
@@ -234,11 +268,14 @@ class SequenceHead(Model):
     rating_allowed: Share = Field(
         1.0, description="share of its rating to which a part may be stressed", examples=["80 %"]
     )
-    decision: DecisionTable = DecisionTable()
+    decision: DecisionTable = Field(default_factory=DecisionTable)
 
 
 class Sequence(SequenceHead):
     """A sequence file."""
 
     stage: Annotated[tuple[AnyStage, ...], Field(min_length=1)]
-    limit: tuple[LimitTable, ...] = ()
+    limit: tuple[LimitTable, ...] = Field(default_factory=tuple)
+
+
+register("sequence", lambda: Sequence)

@@ -31,16 +31,28 @@ class Reach:
     def can(self, setting: str, value: float) -> bool:
         """Whether the meter takes this value; False for a setting that it does not have."""
         found = self.setting(setting)
-        return self.driver is None or (found is not None and _takes(found, value))
+        if self.driver is None:
+            return True
+        if found is None:
+            return any(same_frequency(value, one) for one in self._fixed(setting))
+        return _takes(found, value)
+
+    def _fixed(self, setting: str) -> tuple[float, ...]:
+        """The values that there are where the driver cannot set this: a person or nobody does."""
+        meter = None if self.driver is None else self.driver.meter
+        if meter is None or setting not in {"frequency", "level"}:
+            return ()
+        if setting == "frequency":
+            return meter.frequencies
+        return () if meter.level is None else (meter.level,)
 
     def reading_s(self, integration: str, frequency_hz: float) -> float:
         """How long one reading takes."""
         return 0.0 if self.driver is None else self.driver.reading_time_s(integration, frequency_hz)
 
-    @property
-    def settling_s(self) -> float:
+    def settling_s(self, frequency_hz: float) -> float:
         """How long the meter settles after a change."""
-        return 0.0 if self.driver is None else self.driver.timing.settling
+        return 0.0 if self.driver is None else self.driver.settling_time_s(frequency_hz)
 
     @property
     def fixed_pair(self) -> str:
@@ -51,10 +63,13 @@ class Reach:
     def span(self, setting: str, unit: str) -> str:
         """What the meter takes, in words."""
         found = self.setting(setting)
+        fixed = self._fixed(setting)
+        if found is None and fixed:
+            return _one_of(fixed, unit, self.name)
         if found is None:
             return f"a meter that has this setting: {self.name} has none"
         if found.allowed:
-            return "one of " + ", ".join(_shown(value, unit) for value in found.allowed)
+            return _one_of(found.allowed, unit, self.name)
         if found.minimum is not None and found.maximum is not None:
             return f"{_shown(found.minimum, unit)} to {_shown(found.maximum, unit)} ({self.name})"
         if found.maximum is not None:
@@ -71,6 +86,10 @@ def _takes(setting: Setting, value: float) -> bool:
     return (setting.minimum is None or value >= setting.minimum - slack) and (
         setting.maximum is None or value <= setting.maximum + slack
     )
+
+
+def _one_of(values: tuple[float, ...], unit: str, name: str) -> str:
+    return f"one of {', '.join(_shown(value, unit) for value in values)} ({name})"
 
 
 def _shown(value: float, unit: str) -> str:

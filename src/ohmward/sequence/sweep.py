@@ -110,7 +110,7 @@ def _point_s(stage: SweepStage, point: Point, reach: Reach) -> float:
     A settle rule is reckoned at the fewest readings that can meet it.
     """
     reading_s = reach.reading_s(stage.integration, point.frequency_hz)
-    settling_s = reach.settling_s + stage.dwell
+    settling_s = reach.settling_s(point.frequency_hz) + stage.dwell
     if stage.settle is not None:
         settling_s += stage.settle.readings * reading_s
     return settling_s + (stage.repeats - 1) * max(stage.interval, reading_s) + reading_s
