@@ -1,0 +1,91 @@
+"""Serves a simulated bench on this machine, for ``run`` and for anybody's PyVISA scripts."""
+
+import json
+import sys
+
+import trio
+
+from ohmward.api.preparing import load_drivers
+from ohmward.api.simulation import build_bench
+from ohmward.errors import OhmwardError, Problems
+from ohmward.setup.bench import Bench, load_bench
+from ohmward.setup.driver import Driver
+from ohmward.setup.parts import load_parts
+from ohmward.setup.resources import find_file
+from ohmward.sim.server import serve as serve_devices
+
+
+def serve(bench: str, *, parts: str | None, seed: int, as_json_line: bool) -> None:
+    """Serve the bench until stopped; prints, once all listens, where each instrument is.
+
+    As TOML this is the bench file that ``run`` needs; as JSON one line with each instrument's
+    address, role and whether it speaks SCPI. Raises BadInput with every problem.
+    """
+    problems = Problems()
+    loaded = load_bench(find_file(bench, "simulators"), problems)
+    drivers = load_drivers(loaded, problems)
+    rows = load_parts(find_file(parts, "simulators", ".csv"), loaded, problems) if parts else ()
+    problems.raise_if_any()
+    if loaded is None:
+        raise OhmwardError(f"{bench} was refused without a problem that says why")
+    simulated = build_bench(loaded, drivers, rows, seed=seed)
+
+    def ready(addresses: dict[str, str]) -> None:
+        text = (
+            json.dumps(_as_json(loaded, drivers, addresses))
+            if as_json_line
+            else bench_file(loaded, drivers, addresses)
+        )
+        sys.stdout.write(text + "\n")
+        sys.stdout.flush()
+
+    async def main() -> None:
+        await serve_devices(simulated, ready=ready)
+
+    trio.run(main)
+
+
+def _as_json(
+    bench: Bench, drivers: dict[str, Driver], addresses: dict[str, str]
+) -> dict[str, object]:
+    return {
+        name: {
+            "address": addresses[name],
+            "role": one.role.value,
+            "scpi": drivers[name].codec == "scpi",
+        }
+        for name, one in bench.instruments.items()
+    }
+
+
+def bench_file(bench: Bench, drivers: dict[str, Driver], addresses: dict[str, str]) -> str:
+    """The bench file of a served bench, as TOML: the same bench at the served addresses."""
+    lines = ["format = 1", f"name = {json.dumps(bench.name)}"]
+    for key, value in (
+        ("bias_ceiling", bench.bias_ceiling_v),
+        ("bias_current_ceiling", bench.bias_current_ceiling_a),
+        ("level_ceiling", bench.level_ceiling_v),
+    ):
+        if value is not None:
+            lines.append(f'{key} = "{value!r} {"A" if "current" in key else "V"}"')
+    for name, one in bench.instruments.items():
+        driver = one.driver if "/" not in one.driver else str(drivers[name].path.absolute())
+        if driver.endswith(".toml"):
+            driver = str(drivers[name].path.absolute())
+        lines += [
+            "",
+            f"[instrument.{name}]",
+            f"role = {json.dumps(one.role.value)}",
+            f"driver = {json.dumps(driver)}",
+            f"address = {json.dumps(addresses[name])}",
+            f'cable = "{one.cable_m!r} m"',
+        ]
+        if one.serial_number:
+            lines.append(f"serial_number = {json.dumps(one.serial_number)}")
+    lines += ["", "[fixture]", f"loading = {json.dumps(bench.fixture.loading)}"]
+    lines.append(f"name = {json.dumps(bench.fixture.name)}")
+    for place in bench.positions:
+        lines += ["", "[[position]]", f"name = {json.dumps(place.name)}"]
+        if place.meter_channels:
+            lines.append(f"meter_channels = {json.dumps(list(place.meter_channels))}")
+    return "\n".join(lines)

@@ -1,0 +1,118 @@
+"""Puts a simulated bench behind a brief: the one place where ohmward meets its simulator."""
+
+from collections.abc import Callable, Mapping
+from dataclasses import fields
+from math import isnan, nan
+
+import pyvisa
+import trio
+
+from ohmward.api.preparing import Prepared
+from ohmward.links.virtual_waiter import VirtualWaiter
+from ohmward.run.bench import Connections
+from ohmward.setup.bench import Bench
+from ohmward.setup.driver import Driver
+from ohmward.setup.resources import shipped
+from ohmward.sim.backend import InProcessLibrary
+from ohmward.sim.bench import SIMULATORS, InstrumentAt, SimulatedBench
+from ohmward.terms.part import Part
+
+ResultRow = dict[str, object]
+
+
+class SimulatedOperator:
+    """The person at a hand-loaded fixture, who is at once and always right."""
+
+    def __init__(self, bench: SimulatedBench) -> None:
+        self._bench = bench
+
+    async def place(self, part_id: str, position: str) -> None:
+        """Put the part into the position."""
+        self._bench.place(part_id, position, trio.current_time())
+
+
+def build(prepared: Prepared, *, seed: int) -> SimulatedBench:
+    """The simulated bench for a prepared brief: its parts, wiring and instruments, by seed."""
+    return build_bench(prepared.bench, prepared.drivers, prepared.parts, seed=seed)
+
+
+def build_bench(
+    bench: Bench, drivers: Mapping[str, Driver], parts: tuple[Part, ...], *, seed: int
+) -> SimulatedBench:
+    """The simulated bench that stands behind a bench file."""
+    instruments = [
+        InstrumentAt(
+            name=name,
+            address=one.address,
+            simulator=simulator_of(drivers[name]),
+            driver=drivers[name].merged,
+            serial_number=one.serial_number,
+        )
+        for name, one in bench.instruments.items()
+    ]
+    return SimulatedBench(
+        bench.physical_path,
+        instruments,
+        {place.name: place.meter_channels for place in bench.positions},
+        [_plain(part) for part in parts],
+        seed,
+        models=shipped("simulators") / "parts",
+    )
+
+
+def simulator_of(driver: Driver) -> str:
+    """The simulated instrument that a driver meets in a dry run; empty for a home-made driver."""
+    return driver.simulated_by if driver.simulated_by in SIMULATORS else ""
+
+
+def connections(bench: SimulatedBench) -> Connections:
+    """Links to the simulated instruments within this process, under trio's clock."""
+    library = InProcessLibrary(bench, trio.current_time)
+    return Connections(
+        manager=pyvisa.ResourceManager(library),
+        waiter=VirtualWaiter(),
+        operator=SimulatedOperator(bench),
+    )
+
+
+def truth_of(bench: SimulatedBench) -> Callable[[ResultRow], tuple[float, str]]:
+    """What the simulated part of a row of results.csv really is, and its fault."""
+
+    def truth(row: ResultRow) -> tuple[float, str]:
+        part_id = str(row["part_id"])
+        value = bench.truth(
+            part_id,
+            str(row["quantity"]),
+            frequency_hz=_number(row["frequency_hz"], nan),
+            level_v=_number(row["level_v"], 0.0),
+            bias_v=_number(row["bias_v"], 0.0),
+            bias_a=_number(row["bias_a"], 0.0),
+        )
+        return value, bench.fault(part_id)
+
+    return truth
+
+
+def notes(prepared: Prepared) -> tuple[str, ...]:
+    """What a dry run does not prove, for the person who reads its decisions."""
+    home_made = [name for name, driver in prepared.drivers.items() if not simulator_of(driver)]
+    said = [
+        "This was a dry run: no part was measured. It shows nothing of the wiring, the polarity "
+        "of parts, or what the real instruments do."
+    ]
+    if home_made:
+        said.append(
+            f"The driver of {', '.join(home_made)} met a responder made of its own file: this "
+            "proves the sequence, not the driver."
+        )
+    return tuple(said)
+
+
+def _number(value: object, missing: float) -> float:
+    return missing if not isinstance(value, float) or isnan(value) else value
+
+
+def _plain(part: Part) -> dict[str, object]:
+    """A part as the simulator takes it: plain values by name."""
+    row = {one.name: getattr(part, one.name) for one in fields(part)}
+    return {**row, "kind": part.kind.value, "polarity": part.polarity.value}
