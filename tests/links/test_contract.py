@@ -160,14 +160,10 @@ class TestTimeout:
 
         world.run(talk)
         assert world.script.heard == [b"*IDN?", b"Q1?", b"*IDN?", b"Q2?"]
-        assert world.script.sessions == 1
 
     def test_a_session_that_cannot_prove_itself_is_replaced(self, world):
-        world.script.once(b"Q1?", [(LATE_S, b"1\n")])
-
         async def talk(link):
-            with pytest.raises(LinkTimeout):
-                await link.query(b"Q1?")
+            link.distrust("a letter in a number")
             world.script.once(b"*IDN?", [])
             await asks_rightly(link)
 
@@ -271,6 +267,7 @@ class TestWhatNobodyAskedFor:
 
         world.run(talk)
         assert world.script.heard == [b"*IDN?", b"Q1?", b"*IDN?", b"Q100?"]
+        assert world.script.sessions == 1
 
 
 class TestCancellation:
@@ -388,7 +385,7 @@ class TestLoss:
 
         async def main(_clock):
             link = world.link()
-            with pytest.raises(LinkError, match="127.0.0.1"):
+            with pytest.raises(LinkError, match=r"127\.0\.0\.1"):
                 await link.open()
             await link.aclose()
 

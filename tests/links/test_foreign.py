@@ -83,7 +83,6 @@ BARE = {
     "RPCGarbageArgs",
     "RPCUnpackError",
     "Vxi11Error",
-    "VicpError",
     "Error",
     "ConversionError",
 }

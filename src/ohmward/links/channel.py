@@ -63,6 +63,8 @@ class Channel:
         self._stream = isinstance(resource, TCPIPSocket | SerialInstrument)
         self.endless = self._stream and not settings.read_termination
         """Nothing marks the end of a message."""
+        self.renewable = isinstance(resource, TCPIPSocket)
+        """A new session is sure to hold nothing that the old one was still owed."""
         session = getattr(self.library, "sessions", {}).get(self.handle)
         self.patient: PatientSession | None = (
             session if isinstance(session, PatientSession) else None

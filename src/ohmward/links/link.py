@@ -3,7 +3,9 @@
 A timeout, a reply that cannot be right or a cancellation in the middle of an exchange makes
 the link dirty. Before anything else is sent, a dirty link is drained and must answer its
 identity query exactly as when it was opened; else it is closed and opened again, with growing
-pauses, within a budget. An identity that is another one ends the link: nothing more is sent.
+pauses, within a budget. A socket that still owes a reply is opened again at once: a new
+connection never delivers what the old one owed, while a drain only hopes that it has.
+An identity that is another one ends the link: nothing more is sent.
 
 What is detected: a reply that comes late, in halves, twice, unasked, or from another
 instrument after a reconnection, because before each command nothing may wait unread, after
@@ -12,11 +14,10 @@ each reply nothing may be left over, and after each fault the session must prove
 What no link without message numbers (sockets, serial lines) can detect, and what a codec
 therefore checks by shape and range:
 - a whole line of the right shape that arrives unasked between a query and its reply,
-- a reply to the same query that was asked before the fault and that outlasts both the drain
-  and the identity query's own answer. On a socket the session is then a new one, and only an
-  instrument or a gateway that carries old replies over into a new connection can do this; on a
-  serial line it takes an instrument that is silent for longer than ``drain_s`` and then answers
-  twice. Choose ``timeout_s`` above the slowest measurement, and the case does not arise.
+- on a serial line (or behind a gateway that carries old replies over into a new connection)
+  a reply of the right shape that comes after the answer to a later identity query. Instruments
+  that answer in order never do this. Choose ``timeout_s`` above the slowest measurement, and
+  the case does not arise.
 HiSLIP numbers its messages and has neither hole.
 """
 
@@ -129,8 +130,9 @@ class Link:
             channel = await self._ready()
             self._delimited(channel)
             self._dirt = "interrupted in the middle of a query"
-            # a second identity query could be answered by the first one's late reply
-            self._reopen = message == self._hello.query
+            # What the session then still owes could come after its identity, and a second
+            # identity query could be answered by the first one's late reply.
+            self._reopen = channel.renewable or message == self._hello.query
             reply = await self._waiter.query(
                 channel,
                 message + self.settings.write_termination,
@@ -245,7 +247,10 @@ class Link:
     def _blame(self, error: LinkError) -> None:
         if self._ended is None and self._channel is not None:
             self._dirt = self._dirt and str(error)
-            self._reopen = self._reopen or isinstance(error, LinkLost)
+            if isinstance(error, ReplyMalformed):  # it came: nothing is owed any more
+                self._reopen = False
+            elif isinstance(error, LinkLost):
+                self._reopen = True
 
     async def _recover(self) -> None:
         if self._ended is not None:
