@@ -2,6 +2,7 @@
 
 import queue
 import socket
+import struct
 import threading
 from collections.abc import Iterator, Mapping
 from types import SimpleNamespace
@@ -13,6 +14,7 @@ from pyvisa.constants import StatusCode
 from pyvisa.errors import VisaIOError
 from pyvisa.resources import MessageBasedResource
 
+from ohmward.sim import hislip_port as hislip
 from ohmward.sim.backend import InProcessLibrary
 from ohmward.sim.faults import Fault, FaultLayer
 from ohmward.sim.scanner import Contacts, Scanner
@@ -30,14 +32,17 @@ class Slow(ScpiDevice):
 
 
 class Bench:
-    """Three instruments, the second behind a layer of faults."""
+    """Instruments on every kind of link, one of them behind a layer of faults."""
 
     def __init__(self) -> None:
         self.layer = FaultLayer(Slow())
+        self.lan_layer = FaultLayer(Slow())
         self.named = {
             "meter": Slow(),
             "faulty": self.layer,
             "scanner": Scanner("scanner", "9", Contacts(("101", "201"))),
+            "lan": self.lan_layer,
+            "line": Slow(),
         }
 
 
@@ -53,7 +58,11 @@ class Serving:
     async def _main(self) -> None:
         token = trio.lowlevel.current_trio_token()
         with self._scope:
-            await serve(self.bench, ready=lambda found: self._ready.put((found, token)))
+            await serve(
+                self.bench,
+                links={"lan": "hislip", "line": "serial"},
+                ready=lambda found: self._ready.put((found, token)),
+            )
 
     def stop(self) -> None:
         self._token.run_sync_soon(self._scope.cancel)
@@ -134,7 +143,9 @@ def test_a_script_that_closes_its_side_still_gets_its_reply(serving: Serving) ->
 
 
 def test_only_this_machine_can_connect(serving: Serving) -> None:
-    assert {address.split("::")[1] for address in serving.addresses.values()} == {"127.0.0.1"}
+    network = [address for address in serving.addresses.values() if address[0] == "T"]
+    assert {address.split("::")[1] for address in network} == {"127.0.0.1"}
+    assert len(network) == 4
 
 
 def test_a_port_can_be_chosen_and_an_unknown_name_is_refused() -> None:
@@ -156,6 +167,14 @@ def test_a_port_can_be_chosen_and_an_unknown_name_is_refused() -> None:
     assert found[0]["meter"] == f"TCPIP::127.0.0.1::{free}::SOCKET"
     with pytest.raises(ValueError, match="oscilloscope"):
         trio.run(main, {"oscilloscope": 0})
+
+
+def test_an_unknown_link_is_refused() -> None:
+    async def main() -> None:
+        await serve(Bench(), links={"meter": "carrier pigeon"})
+
+    with pytest.raises(ValueError, match="pigeon"):
+        trio.run(main)
 
 
 def test_a_forgotten_termination_fails_served_as_it_does_in_process(
@@ -200,3 +219,89 @@ def test_a_dropped_connection_is_seen(serving: Serving) -> None:
         link.sendall(b"READ?\n")
         with pytest.raises(ConnectionError):
             talk_on(link)
+
+
+def test_a_plain_pyvisa_script_over_hislip(
+    serving: Serving, manager: pyvisa.ResourceManager
+) -> None:
+    address = serving.addresses["lan"]
+    with opened(manager, address, **LINES, timeout=2000) as meter:
+        assert meter.query("*IDN?") == "GENERIC,SLOW,5,1.0"
+        assert meter.query("READ?") == "+1.5E+00"
+        meter.write("*CLS;*SRE 0")
+        assert meter.read_stb() == 0
+        meter.write("NONSENSE")
+        assert meter.query("*ESR?") == "32"
+        assert meter.read_stb() & 0b100, "the error queue is not empty"
+        meter.write("READ?")
+        meter.clear()
+        assert meter.query("*IDN?") == "GENERIC,SLOW,5,1.0"
+    with opened(manager, address, timeout=2000, write_termination="") as meter:
+        assert meter.query("*IDN?") == "GENERIC,SLOW,5,1.0\n", "the end of a message is marked"
+
+
+def test_a_reply_that_nobody_read_is_dropped_over_hislip(
+    serving: Serving, manager: pyvisa.ResourceManager
+) -> None:
+    with opened(manager, serving.addresses["lan"], **LINES, timeout=2000) as meter:
+        meter.write("*CLS")
+        meter.write("READ?")
+        assert meter.query("*IDN?") == "GENERIC,SLOW,5,1.0"
+        assert meter.query("SYST:ERR?").startswith("-410,")
+
+
+def test_faults_reach_the_other_side_of_hislip(
+    serving: Serving, manager: pyvisa.ResourceManager
+) -> None:
+    layer = serving.bench.lan_layer
+    with opened(manager, serving.addresses["lan"], **LINES, timeout=2000) as meter:
+        layer.inject(Fault(kind="split", delay_s=0.02))
+        assert meter.query("READ?") == "+1.5E+00"
+        layer.inject(Fault(kind="disconnect", delay_s=0.0))
+        meter.write("READ?")
+        with pytest.raises((VisaIOError, RuntimeError, OSError)):
+            meter.read()
+    with opened(manager, serving.addresses["lan"], **LINES, timeout=2000) as meter:
+        assert meter.query("*IDN?") == "GENERIC,SLOW,5,1.0"
+
+
+def answer_to(link: socket.socket) -> tuple[int, int]:
+    """Kind and control code of the next HiSLIP message (IVI-6.1: 16 bytes of header)."""
+    header = b""
+    while len(header) < 16:
+        chunk = link.recv(16 - len(header))
+        assert chunk
+        header += chunk
+    prologue, kind, control, _, length = struct.unpack("!2sBBIQ", header)
+    assert prologue == b"HS"
+    while length:
+        length -= len(link.recv(length))
+    return kind, control
+
+
+@pytest.mark.parametrize(
+    ("sent", "answer"),
+    # IVI-6.1: fatal error 1 is a poorly formed header, 3 a wrong initialization sequence
+    [
+        (b"GET / HTTP/1.1\r\n\r\n", (hislip.FATAL_ERROR, 1)),
+        (struct.pack("!2sBBIQ", b"HS", 7, 0, 1, 0), (hislip.FATAL_ERROR, 3)),
+        (struct.pack("!2sBBIQ", b"HS", 17, 0, 12345, 0), (hislip.FATAL_ERROR, 3)),
+        (struct.pack("!2sBBIQ", b"HS", 0, 0, 0x01000000, 1 << 40), (hislip.FATAL_ERROR, 1)),
+    ],
+)
+def test_what_is_no_hislip_is_told_so(
+    serving: Serving, sent: bytes, answer: tuple[int, int]
+) -> None:
+    port = int(serving.addresses["lan"].split(",")[1].split("::")[0])
+    with socket.create_connection(("127.0.0.1", port), timeout=5) as link:
+        link.sendall(sent)
+        assert answer_to(link) == answer
+
+
+def test_a_plain_pyvisa_script_over_a_serial_line(
+    serving: Serving, manager: pyvisa.ResourceManager
+) -> None:
+    for _ in range(2):
+        with opened(manager, serving.addresses["line"], **LINES, timeout=2000) as meter:
+            assert meter.query("*IDN?") == "GENERIC,SLOW,5,1.0"
+            assert meter.query("READ?") == "+1.5E+00"
