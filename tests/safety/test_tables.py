@@ -123,7 +123,11 @@ def test_only_a_proof_leads_to_dead_and_only_dead_to_a_lease():
     }
     leased = {key for key, step in POSITION.pairs.items() if step.state is PositionState.LEASED}
     assert leased == {(PositionState.DEAD, PositionEvent.LEASE)}
-    proven = {key for key, step in POSITION.pairs.items() if step.state is POSITION.proven}
+    proven = {
+        key
+        for key, step in POSITION.pairs.items()
+        if step.state is POSITION.proven and key[0] is not POSITION.proven
+    }
     assert proven == {(PositionState.DEAD, PositionEvent.END)}
 
 

@@ -209,6 +209,8 @@ def _source_pairs() -> dict[tuple[SourceState, SourceEvent], Step[SourceState]]:
         (_S.TRIPPED, _E.ISOLATE): Step(_S.TRIPPED, (_A.OPEN_SUPPLY,), tripped=True),
         (_S.TRIPPED, _E.ISOLATED): Step(_S.ENDED_PROVEN, (), tripped=True),
         (_S.TRIPPED, _E.STAYS_JOINED): Step(_S.ENDED_UNPROVEN, (), tripped=True),
+        (_S.TRIPPED, _E.OFF_IGNORED): cut_off,
+        (_S.TRIPPED, _E.JOIN): Step(_S.TRIPPED, (_A.CLOSE_BYPASS, _A.CLOSE_SUPPLY), tripped=True),
         (_S.TRIPPED, _E.TEST): Step(
             _S.TRIPPED_TESTING, (_A.CLOSE_BYPASS, _A.SET_TEST_VOLTAGE, _A.OUTPUT_ON), tripped=True
         ),
@@ -248,6 +250,7 @@ def _position_pairs() -> dict[tuple[PositionState, PositionEvent], Step[Position
     trip = Step(discharge.state, discharge.actions, tripped=True)
     unproven = Step(_P.ENDED_UNPROVEN, (), tripped=True)
     dead = Step(_P.DEAD, (_A.CLOSE_DISCHARGE, _A.CLOSE_SHORT))
+    leave = (_A.DISCONNECT, _A.OPEN_SENSE)
     again = Step(_P.PROVING_AGAIN, (_A.CLOSE_DISCHARGE, _A.CLOSE_SHORT))
     pairs = {
         (_P.UNKNOWN, _V.MAKE_SAFE): discharge,
@@ -280,7 +283,7 @@ def _position_pairs() -> dict[tuple[PositionState, PositionEvent], Step[Position
                 _A.CLOSE_METER,
             ),
         ),
-        (_P.LEASED, _V.RELEASE): Step(_P.UNKNOWN, (_A.CLOSE_SENSE, _A.OPEN_METER)),
+        (_P.LEASED, _V.RELEASE): Step(_P.UNKNOWN, (_A.CLOSE_SENSE, _A.OPEN_METER, _A.OPEN_SENSE)),
         (_P.DEAD, _V.JOIN): Step(_P.JOINED, (_A.CLOSE_SENSE, _A.CONNECT, _A.OPEN_DISCHARGE)),
         (_P.JOINED, _V.CHECKED): Step(_P.READY),
         (_P.JOINED, _V.CHECK_FAILED): discharge,
@@ -291,9 +294,10 @@ def _position_pairs() -> dict[tuple[PositionState, PositionEvent], Step[Position
         (_P.READY, _V.STOP): discharge,
         (_P.CHARGING, _V.STOP): discharge,
         (_P.SOAKING, _V.STOP): discharge,
-        (_P.DEAD, _V.LEAVE): Step(_P.DEAD, (_A.DISCONNECT,)),
-        (_P.UNKNOWN, _V.LEAVE): Step(_P.UNKNOWN, (_A.DISCONNECT,)),
-        (_P.ENDED_UNPROVEN, _V.LEAVE): Step(_P.ENDED_UNPROVEN, (_A.DISCONNECT,), tripped=True),
+        (_P.DEAD, _V.LEAVE): Step(_P.DEAD, leave),
+        (_P.UNKNOWN, _V.LEAVE): Step(_P.UNKNOWN, leave),
+        (_P.ENDED_PROVEN, _V.LEAVE): Step(_P.ENDED_PROVEN, leave, tripped=True),
+        (_P.ENDED_UNPROVEN, _V.LEAVE): Step(_P.ENDED_UNPROVEN, leave, tripped=True),
         (_P.DEAD, _V.END): Step(_P.ENDED_PROVEN, (_A.CLOSE_SHORT,)),
         (_P.ENDED_PROVEN, _V.READ_LIVE): unproven,
     }

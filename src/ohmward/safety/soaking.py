@@ -1,0 +1,352 @@
+"""Charges a part and soaks it: the ramp with its charge, the watch under voltage, the readings."""
+
+from collections.abc import Iterator
+from dataclasses import dataclass, field
+from itertools import count, takewhile
+
+import trio
+
+from ohmward.safety.faults import BenchFault, PartFault
+from ohmward.safety.messages import Directive, Hold, Observation, Observer
+from ohmward.safety.permit import (
+    LawBroken,
+    charging_time_s,
+    check_bypass_opening,
+    check_meter_survives,
+    limit_is_fault,
+    ramp_v_per_s,
+)
+from ohmward.safety.positions import Positions, in_time
+from ohmward.safety.proof import Connection, charge_drawn_c, judge_charge
+from ohmward.safety.rules import PositionEvent, SourceEvent
+from ohmward.safety.testing import Tester
+from ohmward.terms.reading import CurrentReading, SupplyReading
+from ohmward.terms.status import Status
+
+DIVIDER_SHARE = 0.5  # an open bypass lets the meter see at least this share of the divider current
+CLOSED_SHARE = 0.2  # and a closed one at most this share of what flows
+
+
+@dataclass(slots=True)
+class Course:
+    """What is known of one hold while it goes on."""
+
+    set_v: float = 0.0
+    reached: bool = False
+    connection: Connection = Connection.UNRESOLVED
+    drawn_c: float = 0.0
+    range_a: float | None = None  # of the current meter while its bypass is open
+    bypass_shown: bool = False
+    currents: list[tuple[float, float]] = field(default_factory=list)  # time s, supply's A
+    from_v: float = 0.0
+    ramp_s: float = 0.0
+    stopped: str = ""  # why the part ended early
+
+
+class Charger:
+    """The way up of one position, and its time there."""
+
+    def __init__(self, positions: Positions, tester: Tester) -> None:
+        self._positions = positions
+        self._tester = tester
+        self._desk = positions.desk
+
+    async def run(self, hold: Hold, observer: Observer, course: Course) -> None:
+        """Charge and soak until the time is over or the runner says stop.
+
+        From READY, the source at the test voltage. Raises PartFault and BenchFault; whoever
+        calls brings the part down.
+        """
+        laws, position = self._desk.laws, hold.position
+        await self._positions.event(position, PositionEvent.CHARGE)
+        await self._desk.source.begin_ramp()
+        course.set_v, soak_s = laws.injection_v, hold.soak_s
+        voltage_v: float | None = hold.voltage_v
+        while voltage_v is not None:
+            await self._ramp(hold, voltage_v, course)
+            directive = await self._soak(hold, soak_s, observer, course)
+            voltage_v = None
+            if directive.do == "change":
+                voltage_v = directive.voltage_v
+                soak_s = hold.soak_s if directive.soak_s is None else directive.soak_s
+                if voltage_v is None or voltage_v < course.set_v:
+                    raise LawBroken("ramp", "a one-quadrant supply cannot take a part down")
+                await self._positions.event(position, PositionEvent.CHANGE)
+                await self._desk.source.begin_ramp(SourceEvent.CHANGE)
+                course.range_a = None  # the change has closed the bypass
+
+    # ---- up
+
+    async def _ramp(self, hold: Hold, to_v: float, course: Course) -> None:
+        desk, known = self._desk, self._positions.charge(hold.position)
+        wired = self._positions.wired(hold.position)
+        whole_f = known.most_f + desk.wiring.node_capacitance_f()
+        rate = ramp_v_per_s(
+            desk.laws,
+            asked_v_per_s=hold.ramp_v_per_s,
+            limit_a=desk.facts.limit_a,
+            capacitance_max_f=whole_f,
+        )
+        expected_s = charging_time_s(
+            desk.laws,
+            change_v=to_v - course.set_v,
+            ramp_v_per_s=rate,
+            series_ohm=wired.series_ohm,
+            capacitance_f=whole_f,
+        )
+        course.from_v, began_s = course.set_v, desk.time.now_s()
+        course.currents = [(began_s, 0.0)]
+        known.bound_v = max(known.bound_v, to_v)
+        while True:
+            spent_s = desk.time.now_s() - began_s
+            course.set_v = min(course.from_v + rate * spent_s, to_v)
+            await desk.source.command(hold.part_id, hold.position, course.set_v)
+            supply, volts = await self._look(hold, course)
+            course.currents.append((desk.time.now_s(), supply.current_a))
+            await self._check_bypass_closed(supply)
+            if course.set_v == to_v and volts >= (1.0 - desk.laws.within) * to_v:
+                break
+            if limit_is_fault(desk.laws, elapsed_s=spent_s, expected_s=expected_s):
+                raise PartFault(_why_low(volts, course.set_v, supply))
+            await desk.time.sleep(desk.facts.ramp_every_s)
+        course.reached = known.witnessed = True
+        course.ramp_s = desk.time.now_s() - began_s
+        await self._positions.event(hold.position, PositionEvent.REACHED)
+        desk.source.reached()
+
+    async def _check_bypass_closed(self, supply: SupplyReading) -> None:
+        """While a ramp's current flows, the bypassed current meter must not see it."""
+        flows_a = abs(supply.current_a) - self._desk.facts.supply_error_a
+        if flows_a < 10.0 * self._desk.facts.supply_error_a:
+            return
+        reading = await self._read_current()
+        if reading.status is not Status.OK or abs(reading.current_a) > CLOSED_SHARE * flows_a:
+            raise BenchFault("the current meter sees the ramp: its bypass does not make")
+
+    # ---- under voltage
+
+    async def _look(self, hold: Hold, course: Course) -> tuple[SupplyReading, float]:
+        """Interlock, supply and the part's voltage; raises for whatever is not as it must be."""
+        desk = self._desk
+        with in_time(desk.facts.reply_s, "interlock"):
+            closed = await desk.equipment.interlock.closed()
+        if not closed:
+            raise BenchFault("the interlock is open")
+        supply = await desk.source.read()
+        if supply.tripped:
+            raise BenchFault("the supply has tripped")
+        if not supply.output_on:
+            raise BenchFault("the supply's output is off, and nobody switched it off")
+        if abs(supply.voltage_set_v - course.set_v) > max(0.01 * course.set_v, 0.1):
+            raise BenchFault(
+                f"the supply is set to {supply.voltage_set_v:g} V, not to {course.set_v:g} V"
+            )
+        volts = await self._positions.read_v()
+        ceiling = desk.permit.ceiling(hold.part_id, hold.position)
+        highest_v = desk.permit.highest_v(ceiling) * (1.0 + desk.laws.within)
+        if max(volts, supply.voltage_v) > highest_v + desk.facts.voltmeter_resolution_v:
+            raise BenchFault(f"{max(volts, supply.voltage_v):.6g} V are above the permit")
+        return supply, volts
+
+    async def _watch(self, hold: Hold, since_s: float, course: Course) -> SupplyReading:
+        """One look at a part that has its voltage."""
+        desk, known = self._desk, self._positions.charge(hold.position)
+        supply, volts = await self._look(hold, course)
+        if abs(volts - course.set_v) > 2.0 * desk.laws.within * course.set_v:
+            raise PartFault(_why_low(volts, course.set_v, supply))
+        if supply.limiting:
+            raise PartFault("it draws the current limit")
+        settle_s = desk.laws.settle_time_constants * (
+            self._positions.wired(hold.position).series_ohm * known.most_f
+        )
+        if course.currents:
+            course.currents.append((desk.time.now_s(), supply.current_a))
+            if since_s >= settle_s:
+                self._judge_connection(hold, course)
+        net_a = supply.current_a - volts / desk.wiring.divider_ohm - desk.facts.supply_error_a
+        self._check_part(hold, net_a, volts)
+        return supply
+
+    def _check_part(self, hold: Hold, net_a: float, volts: float) -> None:
+        """The part's own limits of current and power, and its permit's."""
+        ceiling = self._desk.permit.ceiling(hold.part_id, hold.position)
+        if net_a > min(hold.current_max_a, ceiling.current_a):
+            raise PartFault(f"its current of {net_a:.3g} A passes its limit")
+        if net_a * volts > min(hold.power_max_w, ceiling.power_w):
+            raise PartFault(f"its power of {net_a * volts:.3g} W passes its limit")
+
+    def _judge_connection(self, hold: Hold, course: Course) -> None:
+        """Once the part has settled: the charge of this ramp, net of leakage, against C·V."""
+        desk, known = self._desk, self._positions.charge(hold.position)
+        spent_s = course.currents[-1][0] - course.currents[0][0]
+        steady_a = max(course.currents[-1][1], 0.0)
+        change_v = course.set_v - course.from_v
+        leaked_c = steady_a * (spent_s - 0.5 * course.ramp_s)  # it grew with the voltage
+        drawn_c = charge_drawn_c(course.currents) - leaked_c
+        course.drawn_c = drawn_c - desk.wiring.node_capacitance_f() * change_v
+        measured_f = hold.measured_f
+        found = judge_charge(
+            desk.laws,
+            drawn_c=course.drawn_c,
+            uncertainty_c=desk.facts.supply_error_a * spent_s + 0.5 * leaked_c,
+            change_v=change_v,
+            capacitance_min_f=known.least_f if measured_f is None else measured_f,
+            capacitance_max_f=known.most_f if measured_f is None else measured_f,
+        )
+        course.currents = []
+        if found is not Connection.UNRESOLVED:
+            course.connection = found
+        if found is Connection.ABSENT:
+            raise PartFault("it took no charge on this ramp: it is open or not connected")
+
+    async def _soak(
+        self, hold: Hold, soak_s: float, observer: Observer, course: Course
+    ) -> Directive:
+        """Watch and read from the part's voltage on, until time or runner ends it."""
+        desk = self._desk
+        began_s = desk.time.now_s()
+        readings = _times(hold, soak_s)
+        reading_s, check_s = next(readings, None), 0.0
+        while True:
+            due_s = min(check_s, soak_s if reading_s is None else reading_s, soak_s)
+            await desk.time.sleep(max(began_s + due_s - desk.time.now_s(), 0.0))
+            since_s = desk.time.now_s() - began_s
+            supply = await self._watch(hold, since_s, course)
+            check_s = max(check_s, since_s) + desk.facts.check_s
+            if reading_s is not None and since_s >= reading_s:
+                directive = await self._observe(hold, began_s, supply, observer, course)
+                if directive.do != "continue":
+                    return directive
+                reading_s = next(readings, None)
+            if since_s >= soak_s and reading_s is None:
+                return Directive(do="stop")
+
+    async def _observe(
+        self,
+        hold: Hold,
+        began_s: float,
+        supply: SupplyReading,
+        observer: Observer,
+        course: Course,
+    ) -> Directive:
+        """One reading, kept by the runner before anything else is done; then its answer."""
+        desk = self._desk
+        await self._set_range(hold, supply, course)
+        volts = await self._positions.read_v()
+        reading = await self._read_current() if course.range_a is not None else None
+        divider_a = volts / desk.wiring.divider_ohm
+        if reading is not None:
+            self._check_bypass_open(reading, divider_a, course)
+        observation = Observation(
+            part_id=hold.part_id,
+            position=hold.position,
+            since_voltage_s=desk.time.now_s() - began_s,
+            voltage_set_v=course.set_v,
+            voltage_v=volts,
+            current_a=None if reading is None else reading.current_a,
+            divider_a=divider_a,
+            range_a=course.range_a,
+            status=Status.UNSETTLED if reading is None else reading.status,
+            current_reply="" if reading is None else reading.reply.decode("ascii", "replace"),
+        )
+        directive: Directive | None = None
+        with trio.move_on_after(desk.facts.observer_s):
+            directive = await observer.observe(observation)
+        if directive is None:
+            raise BenchFault("the runner does not answer")
+        if reading is not None:
+            if reading.status is Status.OVERLOAD:
+                await self._close_bypass(course)
+            else:
+                self._check_part(hold, reading.current_a - divider_a, volts)
+        return directive
+
+    # ---- the current meter and its bypass
+
+    async def _set_range(self, hold: Hold, supply: SupplyReading, course: Course) -> None:
+        """The lowest range whose half is above what is predicted; the bypass opens on it."""
+        desk, laws = self._desk, self._desk.laws
+        if course.range_a is not None:
+            await self._finer_range(course)
+            return
+        divider_a = course.set_v / desk.wiring.divider_ohm
+        predicted_a = max(abs(supply.current_a), divider_a) + desk.facts.supply_error_a
+        range_a = self._tester.range_for(predicted_a)
+        if range_a is None:
+            return
+        await self._range(range_a)
+        closed = await self._read_current()
+        if abs(closed.current_a) > CLOSED_SHARE * divider_a + 3.0 * self._error_a(range_a):
+            raise BenchFault("the current meter sees current: its bypass does not make")
+        check_meter_survives(
+            voltage_v=course.set_v,
+            series_ohm=self._positions.wired(hold.position).series_ohm,
+            meter_survives_a=desk.wiring.meter_survives_a,
+        )
+        check_bypass_opening(laws, predicted_a=predicted_a, range_a=range_a)
+        await desk.board.move(desk.wiring.bypass, make=False, current_a=predicted_a)
+        course.range_a = range_a
+        await desk.time.sleep(desk.facts.settle_s)
+        await self._finer_range(course)
+
+    async def _finer_range(self, course: Course) -> None:
+        """With the bypass open: a lower range, if what is read now is below half of it."""
+        assert course.range_a is not None
+        reading = await self._read_current()
+        if reading.status is not Status.OK:
+            await self._close_bypass(course)
+            return
+        error_a = self._error_a(course.range_a)
+        range_a = self._tester.range_for(abs(reading.current_a) + error_a)
+        if range_a is not None and range_a < course.range_a:
+            await self._range(range_a)
+            course.range_a = range_a
+            await self._desk.time.sleep(self._desk.facts.settle_s)
+        elif range_a is None or range_a > course.range_a:
+            await self._close_bypass(course)
+
+    def _check_bypass_open(self, reading: CurrentReading, divider_a: float, course: Course) -> None:
+        """The meter must see at least what the voltmeter's divider takes."""
+        if reading.status is not Status.OK:
+            return
+        error_a = self._error_a(reading.range_a)
+        if DIVIDER_SHARE * divider_a <= 3.0 * error_a:
+            return  # it cannot be shown: then nothing of this hold counts
+        if reading.current_a < DIVIDER_SHARE * divider_a:
+            raise BenchFault("the current meter sees too little: its bypass does not open")
+        course.bypass_shown = True
+
+    async def _close_bypass(self, course: Course) -> None:
+        await self._desk.board.move(self._desk.wiring.bypass, make=True)
+        course.range_a = None
+
+    async def _range(self, range_a: float) -> None:
+        with in_time(self._desk.facts.reply_s, "current meter"):
+            await self._desk.equipment.current_meter.set_range(range_a)
+
+    async def _read_current(self) -> CurrentReading:
+        with in_time(self._desk.facts.reply_s, "current meter"):
+            return await self._desk.equipment.current_meter.read()
+
+    def _error_a(self, range_a: float) -> float:
+        """Half-width near zero on a range: the lowest range's, in proportion (A)."""
+        return self._desk.facts.meter_error_a * range_a / self._desk.facts.ranges_a[0]
+
+
+def _times(hold: Hold, soak_s: float) -> Iterator[float]:
+    """When readings are due, in order, none twice; counted from the part's voltage (s)."""
+    every = (
+        set(takewhile(lambda t: t <= soak_s, (hold.every_s * n for n in count(1))))
+        if hold.every_s > 0.0
+        else set()
+    )
+    return iter(sorted(every | {t for t in hold.also_s if 0.0 <= t <= soak_s}))
+
+
+def _why_low(volts: float, set_v: float, supply: SupplyReading) -> str:
+    """What a part that has not its voltage most likely does, as far as the instruments say."""
+    if supply.limiting:
+        return f"it draws the current limit at {volts:.3g} V: it leaks or shorts"
+    if volts > set_v:
+        return f"its voltage of {volts:.6g} V is above the set {set_v:.6g} V"
+    return f"it has {volts:.3g} V instead of {set_v:.3g} V: it leaks, or a contact is lost"
