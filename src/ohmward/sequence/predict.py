@@ -31,15 +31,10 @@ _MODELS = {"capacitance_f": ("cs_f", "cp_f"), "inductance_h": ("ls_h", "lp_h")}
 
 @dataclass(frozen=True, kw_only=True, slots=True)
 class MeterAccuracy:
-    """What is needed to predict: the driver's accuracy (None: it states none) and the cable.
-
-    ``source_ohm`` is what the level sags through, 0 for a meter that does not read it back
-    (what is not known to have sagged counts as set).
-    """
+    """What is needed to predict: the driver's accuracy (None: it states none) and the cable."""
 
     accuracy: ImpedanceAccuracy | None
     cable_m: float
-    source_ohm: float
 
 
 def cannot_decide(
@@ -100,7 +95,7 @@ def _point_doubt(
         frequency_hz=frequency,
         r=impedance[0],
         x=impedance[1],
-        level_v=_sagged(level, impedance, meter.source_ohm),
+        level_v=level,
         integration=stage.integration,
         cable_m=meter.cable_m,
         holes="nan",
@@ -108,19 +103,10 @@ def _point_doubt(
     hole = np.isnan(uncertainty[0])
     if np.any(hole):
         first = int(np.argmax(hole))
-        left = format_quantity(float(_sagged(level, impedance, meter.source_ohm)[first]), "V", 2)
-        why = f"the driver states no accuracy there (about {left} of level is left at the part)"
+        why = "the driver states no accuracy there"
         return _no_accuracy(limit, frequency[first:], level[first:], why)
     value, u = _expected(limit, stage.part, frequency, impedance, uncertainty)
     return _worst(limit, decision, frequency, level, value, u)
-
-
-def _sagged(
-    level: FloatArray, impedance: tuple[FloatArray, FloatArray], source_ohm: float
-) -> FloatArray:
-    """The level that is left across the part: level · |Z|/|Z + R_source|."""
-    r, x = impedance
-    return level * np.hypot(r, x) / np.hypot(r + source_ohm, x)
 
 
 def _no_accuracy(limit: Limit, frequency: FloatArray, level: FloatArray, why: str) -> CannotDecide:

@@ -55,7 +55,10 @@ def unroll(
     if len(problems) or bench is None or given.reach.driver is None:
         return None
     hashes = input_hashes(sequence, bench, drivers, tuple(parts), resolved.limits)
-    meter = _meter_accuracy(given.reach.driver, bench.instruments[given.reach.name].cable_m)
+    meter = MeterAccuracy(
+        accuracy=given.reach.driver.impedance_accuracy,
+        cable_m=bench.instruments[given.reach.name].cable_m,
+    )
     return Brief(
         name=sequence.name,
         purpose=sequence.purpose,
@@ -119,16 +122,6 @@ def _given(sequence: Sequence, bench: Bench | None, drivers: Mapping[str, Driver
             ceiling_level_v=bench.level_ceiling_v,
         ),
         relays_s=0.0 if scanner is None else scanner.timing.settling or RELAYS_S,
-    )
-
-
-def _meter_accuracy(driver: Driver, cable_m: float) -> MeterAccuracy:
-    fields = {field.name for field in driver.reading["impedance"].fields}
-    sags = driver.meter is not None and "level_v" in fields
-    return MeterAccuracy(
-        accuracy=driver.impedance_accuracy,
-        cable_m=cable_m,
-        source_ohm=driver.meter.source_resistance if driver.meter and sags else 0.0,
     )
 
 
