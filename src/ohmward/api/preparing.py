@@ -10,7 +10,8 @@ from ohmward.sequence.brief import Brief
 from ohmward.sequence.load import load_sequence
 from ohmward.sequence.unroll import unroll
 from ohmward.setup.bench import Bench, load_bench
-from ohmward.setup.driver import Driver, load_driver
+from ohmward.setup.bench_drivers import load_drivers
+from ohmward.setup.driver import Driver
 from ohmward.setup.parts import load_parts
 from ohmward.setup.resources import find_file
 from ohmward.terms.part import Part
@@ -55,21 +56,21 @@ def prepare(sequence: str | Path, *, bench: str | Path, parts: str | Path) -> Pr
     parts_path = find_file(str(parts), "simulators", ".csv")
     loaded_sequence = load_sequence(sequence_path, problems)
     loaded_bench = load_bench(find_file(str(bench), "simulators"), problems)
-    drivers = load_drivers(loaded_bench, problems)
+    drivers = load_drivers(loaded_bench, problems) if loaded_bench else None
     loaded_parts = load_parts(parts_path, loaded_bench, problems)
     brief = None
     if loaded_sequence is not None:
         brief = unroll(
             loaded_sequence,
             bench=loaded_bench,
-            drivers=drivers,
+            drivers=drivers or {},
             parts=loaded_parts,
             sequence_file=sequence_path,
             parts_file=parts_path,
             problems=problems,
         )
     problems.raise_if_any()
-    if brief is None or loaded_bench is None:
+    if brief is None or loaded_bench is None or drivers is None:
         raise OhmwardError("a brief was refused without a problem that says why")
     return Prepared(
         sequence_path=sequence_path,
@@ -79,24 +80,3 @@ def prepare(sequence: str | Path, *, bench: str | Path, parts: str | Path) -> Pr
         parts=loaded_parts,
         brief=brief,
     )
-
-
-def load_drivers(bench: Bench | None, problems: Problems) -> dict[str, Driver]:
-    """The driver of each instrument of a bench, by the instrument's name."""
-    found: dict[str, Driver] = {}
-    for name, instrument in (bench.instruments if bench else {}).items():
-        beside = bench.path.parent if bench else Path()
-        driver = load_driver(instrument.driver, beside, problems)
-        if driver is None:
-            continue
-        if driver.role is not instrument.role:
-            problems.add(
-                id="driver-of-another-role",
-                file=bench.path if bench else "",
-                key=f"instrument.{name}.driver",
-                expected=f"a driver of a {instrument.role.value}",
-                found=f"one of a {driver.role.value}",
-            )
-            continue
-        found[name] = driver
-    return found

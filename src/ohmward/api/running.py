@@ -255,7 +255,7 @@ def _finish(task: _Task, truth: Truth | None) -> Outcome:
         folder=task.folder,
         run_id=task.facts["run_id"],
         simulated=task.simulated,
-        verdicts=verdicts(prepared.parts, results),
+        verdicts=verdicts(prepared.brief.parts, results),
         notes=simulation.notes(prepared) if task.simulated else (),
     )
 

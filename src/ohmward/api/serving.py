@@ -5,10 +5,10 @@ import sys
 
 import trio
 
-from ohmward.api.preparing import load_drivers
 from ohmward.api.simulation import build_bench
 from ohmward.errors import OhmwardError, Problems
 from ohmward.setup.bench import Bench, load_bench
+from ohmward.setup.bench_drivers import load_drivers
 from ohmward.setup.driver import Driver
 from ohmward.setup.parts import load_parts
 from ohmward.setup.resources import find_file
@@ -23,10 +23,10 @@ def serve(bench: str, *, parts: str | None, seed: int, as_json_line: bool) -> No
     """
     problems = Problems()
     loaded = load_bench(find_file(bench, "simulators"), problems)
-    drivers = load_drivers(loaded, problems)
+    drivers = load_drivers(loaded, problems) if loaded else None
     rows = load_parts(find_file(parts, "simulators", ".csv"), loaded, problems) if parts else ()
     problems.raise_if_any()
-    if loaded is None:
+    if loaded is None or drivers is None:
         raise OhmwardError(f"{bench} was refused without a problem that says why")
     simulated = build_bench(loaded, drivers, rows, seed=seed)
 

@@ -9,6 +9,8 @@ from ohmward.api.running import Outcome
 from ohmward.output import screen
 from ohmward.sequence.brief import Brief
 
+PIPE_COLUMNS = 120
+
 
 def as_json(value: Any) -> str:
     """Indented JSON; NaN and infinities are refused, because JSON has none."""
@@ -30,4 +32,6 @@ def show_run(outcome: Outcome) -> None:
 
 
 def _console() -> Console:
-    return Console(highlight=False)
+    """A console as wide as the terminal; a pipe has no width, and gets 120 columns."""
+    console = Console(highlight=False)
+    return console if console.is_terminal else Console(highlight=False, width=PIPE_COLUMNS)

@@ -58,10 +58,7 @@ def show_brief(console: Console, brief: Brief) -> None:
     _list(
         console,
         "This bench cannot reach",
-        [
-            f"{left.who}, {left.stage}: {left.what}; {left.reason}"
-            for left in brief.cannot_reach
-        ],
+        [f"{left.who}, {left.stage}: {left.what}; {left.reason}" for left in brief.cannot_reach],
     )
     _list(console, "This bench cannot decide", [doubt.reason for doubt in brief.cannot_decide])
     _list(console, "Worth knowing", brief.warnings)

@@ -89,14 +89,13 @@ def _type_b(
     x: FloatArray,
 ) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Accuracy and resolution of the readings at ``where``; NaN where the table has a hole."""
-    level, level_set = _floats(readings, "level_v")[where], _floats(readings, "level_set_v")[where]
     f = _floats(readings, "frequency_hz")[where]
     stated = impedance_uncertainty(
         accuracy,
         frequency_hz=f,
         r=r,
         x=x,
-        level_v=np.where(np.isfinite(level), level, level_set),
+        level_v=_floats(readings, "level_set_v")[where],  # as manuals count it
         integration=readings["integration"][where],
         cable_m=cable_m,
         temperature_c=_floats(readings, "temperature_c")[where],

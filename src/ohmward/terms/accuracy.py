@@ -20,7 +20,7 @@ class AccuracyBand:
 
 @dataclass(frozen=True, kw_only=True, slots=True)
 class LevelFactor:
-    """Multiplies the basic accuracy while the level is at or above ``level_min_v``."""
+    """Multiplies the accuracy while the level that is set is at or above ``level_min_v``."""
 
     level_min_v: float
     factor: float
