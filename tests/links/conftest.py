@@ -163,6 +163,8 @@ class ScriptedLibrary(VisaLibraryBase):
         return min((due_s for due_s, _ in state["coming"]), default=None)
 
     def _say(self, session: int, pieces: list[Piece]) -> None:
+        if not pieces:
+            return
         now_s = trio.current_time()
         self.sessions[session]["coming"] += [(now_s + after_s, data) for after_s, data in pieces]
 
@@ -375,3 +377,9 @@ def world(request: pytest.FixtureRequest) -> World:
 def worlds() -> Callable[[], AbstractContextManager[World]]:
     """Makes a fresh simulated world for each example of a property."""
     return contextmanager(simulated_world)
+
+
+@pytest.fixture(scope="session")
+def scripted_library() -> type[ScriptedLibrary]:
+    """The class, for tests that need a library with a fault of its own."""
+    return ScriptedLibrary

@@ -277,6 +277,8 @@ class Link:
         assert channel is not None
         # whatever happens from here on, this session gets no second identity query
         self._reopen = True
+        if self._waiter.lost(channel):
+            return False
         try:
             if not await self._drained(channel):
                 return False
