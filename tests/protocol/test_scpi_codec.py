@@ -314,7 +314,10 @@ def test_any_bytes_are_a_number_or_refused(data: bytes, form: Form) -> None:
         (b"1.0E", Form.NR3, False),
         (b"1.0", Form.NR1, False),
         (b"1_0", Form.ANY, False),
-        (b" 1", Form.ANY, False),
+        (b" 1", Form.ANY, True),
+        (b"1 2", Form.ANY, False),
+        (b"\t1", Form.ANY, False),
+        (b"- 1", Form.ANY, False),
         (b"0x10", Form.ANY, False),
     ],
 )

@@ -70,7 +70,8 @@ def _text(data: bytes) -> str:
 def _number_reader(field: ReplyField, manner: Manner) -> FieldReader:
     form = Form(field.form) if field.form else manner.form
     width = field.width if field.width is not None else manner.width
-    read_bare = number_reader(form, width)
+    plus = manner.plus if field.plus is None else field.plus
+    read_bare = number_reader(form, width, plus=plus)
     overflow = dict(manner.overflow)
     largest = min([LARGEST, *(abs(value) for value in overflow)])
     low, high = field.minimum, field.maximum
@@ -104,15 +105,13 @@ def _number_reader(field: ReplyField, manner: Manner) -> FieldReader:
 
     if factor != 1.0 or field.suffix or field.suffixes:
         return scaled
-    if width is None:
-        return lambda data: plain(data.strip(b" "))
     return plain
 
 
 def _suffix_cutter(field: ReplyField) -> Callable[[bytes], tuple[bytes, float]]:
     """Takes the unit text off a number: the number's bytes and what it is multiplied by."""
     if not field.suffix and not field.suffixes:
-        return lambda data: (data.strip(b" "), 1.0)
+        return lambda data: (data, 1.0)
     factors = field.suffixes or {field.suffix: 1.0}
     known = sorted(
         ((text.encode("utf-8"), factor) for text, factor in factors.items()),
@@ -135,17 +134,17 @@ def _suffix_cutter(field: ReplyField) -> Callable[[bytes], tuple[bytes, float]]:
 def _number_writer(field: ReplyField, manner: Manner) -> FieldWriter:
     form = Form(field.form) if field.form else manner.form
     width = field.width if field.width is not None else manner.width
+    plus = manner.plus if field.plus is None else field.plus
     decimals = field.decimals
-    if decimals is None and width is not None:
-        # sign, digit, point, decimals, E, sign, two digits
-        decimals = {Form.NR3: width - 7}.get(form)
+    if decimals is None and width is not None and form is Form.NR3:
+        decimals = width - 7  # sign, digit, point, decimals, E, sign, two digits
     suffix, scale = next(iter(field.suffixes.items()), (field.suffix, 1.0))
+    zeros = (width or 0) if form in (Form.NR1, Form.NR2) else 0
 
     def write(value: Value) -> str:
         number = float(value) / field.factor / scale  # type: ignore[arg-type]
-        pad = (width or 0) if form in (Form.NR1, Form.NR2) else 0
-        sign = width is not None
-        return write_number(number, form, decimals=decimals, width=pad, sign=sign) + suffix
+        text = write_number(number, form, decimals=decimals, width=zeros, sign=plus)
+        return text.rjust(width or 0) + suffix
 
     return write
 

@@ -14,6 +14,7 @@ class Manner:
 
     form: Form = Form.ANY
     width: int | None = None
+    plus: bool = False
     any_case: bool = True
     short_forms: bool = True
     status: Mapping[str, Status] = field(default_factory=dict)
@@ -25,6 +26,7 @@ class Manner:
         return Manner(
             form=Form(driver.numbers.form or "any"),
             width=driver.numbers.width,
+            plus=bool(driver.numbers.plus),
             any_case=any_case,
             short_forms=short_forms,
             status={code: Status(word) for code, word in driver.status.items()},

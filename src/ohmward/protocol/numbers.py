@@ -38,6 +38,7 @@ _PATTERNS = {
     Form.NR3: re.compile(rb"[+-]?\d+\.(\d+)[Ee]([+-]?\d{1,3})"),
 }
 
+_SIGNS = (b"+", b"-")
 _POWERS = {exponent: float(f"1e{exponent}") for exponent in range(-323, 309)}
 
 
@@ -48,22 +49,30 @@ class Number(NamedTuple):
     resolution: float
 
 
-def read_number(text: bytes, form: Form = Form.ANY, width: int | None = None) -> Number:
+def read_number(
+    text: bytes, form: Form = Form.ANY, width: int | None = None, *, plus: bool = False
+) -> Number:
     """Read the whole of ``text`` as one number of the given form, or raise ReplyMalformed.
 
-    ``width`` is the exact count of characters, for an instrument that always sends as many:
-    it catches a number whose head or tail was lost. Special values are the caller's.
+    Blanks around the number are taken off. ``width`` is the exact count of characters, blanks
+    included, for an instrument that always sends as many: it catches a number whose head or
+    tail was lost. ``plus`` says that there is always a sign. Special values may be
+    shorter and without a sign, and are the caller's.
     """
-    return number_reader(form, width)(text)
+    return number_reader(form, width, plus=plus)(text)
 
 
-def number_reader(form: Form = Form.ANY, width: int | None = None) -> Callable[[bytes], Number]:
+def number_reader(
+    form: Form = Form.ANY, width: int | None = None, *, plus: bool = False
+) -> Callable[[bytes], Number]:
     """A reader of one form and width, made once and called for each reply."""
     match = _PATTERNS[form].fullmatch
     powers = _POWERS
 
     def read(text: bytes) -> Number:
         found = match(text)
+        if found is None:
+            found = match(text.strip(b" "))
         if found is None:
             # a special value may come in a shorter form than the numbers do
             special = _special(text)
@@ -73,6 +82,8 @@ def number_reader(form: Form = Form.ANY, width: int | None = None) -> Callable[[
         value = float(text)
         if width is not None and len(text) != width and not _is_special(value):
             raise ReplyMalformed(f"{text!r} has {len(text)} characters, not {width}")
+        if plus and text[:1] not in _SIGNS and not _is_special(value):
+            raise ReplyMalformed(f"{text!r} has lost its sign")
         if not isfinite(value):
             raise ReplyMalformed(f"{text!r} is beyond every number that is measured")
         fraction, exponent = found.groups()
@@ -87,7 +98,7 @@ def _is_special(value: float) -> bool:
 
 
 def _special(text: bytes) -> Number | None:
-    found = _PATTERNS[Form.ANY].fullmatch(text)
+    found = _PATTERNS[Form.ANY].fullmatch(text.strip(b" "))
     if found is None:
         return None
     value = float(text)

@@ -24,7 +24,7 @@ from ohmward.setup.template import TemplateError, read_template
 InItsUnit = Annotated[
     float, WithJsonSchema({"anyOf": [{"type": "number"}, {"type": "string", "pattern": "[0-9]"}]})
 ]
-Unit = Literal["F", "H", "ohm", "V", "A", "Hz", "s", "degC", "pct", "W", "J", "m", "1"]
+Unit = Literal["F", "H", "ohm", "V", "A", "Hz", "s", "V/s", "degC", "pct", "W", "J", "m", "1"]
 
 
 def _well_formed(text: str) -> str:

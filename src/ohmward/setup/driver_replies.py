@@ -25,6 +25,9 @@ class NumberStyle(Model):
     decimals: int | None = Field(
         None, ge=0, le=20, description="digits after the point in numbers that are sent"
     )
+    plus: bool | None = Field(
+        None, description="whether a number that is not negative always has its plus"
+    )
 
 
 class ReplyField(NumberStyle):
