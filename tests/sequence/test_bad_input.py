@@ -93,6 +93,8 @@ WITHIN = [
     case("wrong-value", "stage[1].name", sweep(name='"Sweep!"')),
     case("range-backwards", "stage[1].frequency",
          sweep(frequency='{ from = "1 MHz", to = "1 kHz", per_decade = 3 }')),
+    case("too-many-points", "stage[1].frequency",
+         sweep(frequency='{ from = "1e-20 Hz", to = "1 MHz", per_decade = 1000 }')),
     case("value-twice", "stage[1].frequency[2]", sweep(frequency='["1 kHz", "1000 Hz"]')),
     case("value-twice", "stage[1].level[3]", sweep(level='["1 V", "0.5 V", "1000 mV"]')),
     case("value-twice", "stage[1].bias[2]", sweep(bias='["0 V", "0 A"]')),

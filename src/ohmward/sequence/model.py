@@ -38,6 +38,7 @@ Share = Annotated[float, quantity("1", above=0, maximum=1)]
 Times = Annotated[float, quantity("1", above=0, maximum=1000)]
 Coverage = Annotated[float, quantity("1", above=0, maximum=10)]
 Guard = Annotated[float, quantity("1", minimum=0, maximum=10)]
+MOST_POINTS = 10_000  # of one range
 SIGNIFICANT_DIGITS = 6  # of the frequencies of a range: more than any meter sets
 
 
@@ -110,11 +111,17 @@ class FrequencyRange(Model):
         if self.start >= self.stop:
             ends = (format_quantity(self.start, "Hz"), format_quantity(self.stop, "Hz"))
             raise wrong("'from' below 'to'", f"from {ends[0]} to {ends[1]}", "range-backwards")
+        if self._steps() > MOST_POINTS:
+            expected = f"at most {MOST_POINTS} points"
+            raise wrong(expected, f"about {self._steps():.0f}", "too-many-points")
         return self
+
+    def _steps(self) -> float:
+        return (log10(self.stop) - log10(self.start)) * self.per_decade
 
     def unroll(self) -> tuple[float, ...]:
         """``from`` · 10^(i/per_decade) to six digits as far as ``to``, which is always last."""
-        count = floor(log10(self.stop / self.start) * self.per_decade + 1e-9)
+        count = floor(self._steps() + 1e-9)
         grid = [_rounded(self.start * 10 ** (i / self.per_decade)) for i in range(count + 1)]
         if not same_frequency(grid[-1], self.stop):
             grid.append(self.stop)
