@@ -28,6 +28,7 @@ class MemoryLink:
 
     def __init__(self, peer: Peer) -> None:
         self.peer = peer
+        self.identity_query = b"*IDN?"
         self.sent: list[bytes] = []
         self.faults: dict[int, str] = {}
         self.dirty = False
@@ -36,7 +37,7 @@ class MemoryLink:
         self._reply: bytes | None = None
 
     async def open(self) -> bytes:
-        return self.peer.handle(b"*IDN?") or b""
+        return self.peer.handle(self.identity_query) or b""
 
     async def write(self, message: bytes) -> None:
         self._check()
