@@ -46,6 +46,7 @@ def _formulas(w: float, r: object, x: object, absolute: object, atan2: object) -
     }
 
 
+@pytest.mark.slow
 @given(FREQUENCIES, OHMS, OHMS, SIGNS, RELATIVE, RELATIVE, CORRELATIONS)
 def test_every_view_agrees_with_both_libraries(
     f: float, r: float, size: float, sign: float, rel_r: float, rel_x: float, rho: float

@@ -211,6 +211,7 @@ def test_the_uncertainty_agrees_with_gtc(with_load: bool) -> None:
         )
 
 
+@pytest.mark.slow
 def test_contact_scatter_enters_through_every_standard_and_the_part() -> None:
     """Drawn: a new contact for short, load and part each time, pushed through the fixture."""
     rng = np.random.default_rng(11)
@@ -218,7 +219,7 @@ def test_contact_scatter_enters_through_every_standard_and_the_part() -> None:
     compensation = _compensation(contact_ohm=u)
     claimed = compensate(compensation, F, Known.of(_through(part)))["part"]
     drawn = []
-    for _ in range(2000):
+    for _ in range(400):
         contact = [rng.normal() * u[0] + 1j * rng.normal() * u[1] for _ in range(3)]
         again = _compensation(
             short_ohm=Known.of(_through(np.zeros(F.shape) + contact[0])),
@@ -227,8 +228,8 @@ def test_contact_scatter_enters_through_every_standard_and_the_part() -> None:
         found = compensate(again, F, Known.of(_through(part + contact[2])))["part"]
         drawn.append(found.value)
     scatter = np.array(drawn)
-    assert_allclose(claimed.u_real, scatter.real.std(axis=0), rtol=0.1)
-    assert_allclose(claimed.u_imag, scatter.imag.std(axis=0), rtol=0.1)
+    assert_allclose(claimed.u_real, scatter.real.std(axis=0), rtol=0.15)
+    assert_allclose(claimed.u_imag, scatter.imag.std(axis=0), rtol=0.15)
 
 
 def test_contributions_add_up_to_the_whole() -> None:

@@ -67,6 +67,7 @@ def test_the_parameters_come_back(exponent: float) -> None:
     assert fit.leak_a == pytest.approx(3e-10, rel=1e-2)
 
 
+@pytest.mark.slow
 def test_the_stated_uncertainties_are_those_of_repeated_experiments() -> None:
     rng = np.random.default_rng(7)
     noise, clean = 2e-12, absorption_current(T, 1e-8, 0.9) + 3e-10
@@ -102,6 +103,7 @@ def test_missing_readings_are_left_out() -> None:
     assert fit_leakage(T, holes, NOISE).leak_a == pytest.approx(3e-10, rel=1e-2)
 
 
+@pytest.mark.slow
 def test_a_rising_current_is_told_from_a_falling_one() -> None:
     rng = np.random.default_rng(4)
     t = np.arange(60.0, 70.0)
@@ -111,6 +113,7 @@ def test_a_rising_current_is_told_from_a_falling_one() -> None:
     assert alarms <= 20
 
 
+@pytest.mark.slow
 def test_an_early_end_keeps_the_risk_that_was_stated() -> None:
     """Parts whose current at 300 s lies about the limit: ended early, few are above it."""
     rng = np.random.default_rng(9)

@@ -29,20 +29,24 @@ class BadTime(MetrologyError):
 def absorption_current(t_s: ArrayLike, amplitude_a: ArrayLike, exponent: ArrayLike) -> FloatArray:
     """A·t^−n in ampere; A is the current at 1 s."""
     t, amplitude, n = together(t_s, amplitude_a, exponent)
-    return np.asarray(amplitude * t**-n, dtype=np.float64)
+    current: FloatArray = amplitude * t**-n
+    return current
 
 
 def charging_current(
     t_s: ArrayLike, voltage_v: float, resistance_ohm: float, capacitance_f: float
 ) -> FloatArray:
     """(V/R)·e^(−t/RC) in ampere: what still flows into a capacitor through its resistor."""
-    decay = np.exp(-np.asarray(t_s, dtype=np.float64) / (resistance_ohm * capacitance_f))
-    return np.asarray(voltage_v / resistance_ohm * decay, dtype=np.float64)
+    t = np.asarray(t_s, dtype=np.float64)
+    decay: FloatArray = np.exp(-t / (resistance_ohm * capacitance_f))
+    current: FloatArray = voltage_v / resistance_ohm * decay
+    return current
 
 
 def drift_current(capacitance_f: ArrayLike, rate_v_per_s: ArrayLike) -> FloatArray:
     """C·dV/dt in ampere: false leakage from a supply that moves."""
-    return np.asarray(capacitance_f, dtype=np.float64) * np.asarray(rate_v_per_s)
+    capacitance, rate = together(capacitance_f, rate_v_per_s)
+    return np.asarray(capacitance * rate)
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
