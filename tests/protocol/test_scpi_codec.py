@@ -17,6 +17,8 @@ from ohmward.setup.driver import Driver, load_driver
 from ohmward.setup.resources import shipped
 from ohmward.terms.status import Status
 
+STATUS_FIRST = "impedance-meter-status-first"
+
 # driver, table, name, values, and the bytes of the command with its terminator
 COMMANDS: list[tuple[str, str, str, dict[str, Value], bytes]] = [
     ("impedance-meter", "setting", "frequency", {"value": 1000.0}, b"FREQ 1000"),
@@ -50,6 +52,52 @@ COMMANDS: list[tuple[str, str, str, dict[str, Value], bytes]] = [
     ("thermometer", "action", "clear", {}, b"*CLS"),
     ("thermometer", "reading", "temperature", {}, b"MEAS:TEMP?"),
     ("thermometer", "reading", "humidity", {}, b"MEAS:HUM?"),
+    ("bias-source", "action", "clear", {}, b"*CLS"),
+    ("bias-source", "action", "reset", {}, b"*RST"),
+    ("bias-source", "action", "off", {}, b"OUTP OFF"),
+    ("bias-source", "setting", "voltage", {"value": -12.5}, b"VOLT -12.5"),
+    ("bias-source", "setting", "current_limit", {"value": 1e-6}, b"CURR:LIM 1E-6"),
+    ("bias-source", "setting", "output", {"value": True}, b"OUTP ON"),
+    ("bias-source", "reading", "voltage", {}, b"MEAS:VOLT?"),
+    ("bias-source", "reading", "current", {}, b"MEAS:CURR?"),
+    ("bias-source", "reading", "state", {}, b"STAT:QUES:COND?"),
+    ("high-voltage-supply", "action", "clear", {}, b"*CLS"),
+    ("high-voltage-supply", "action", "reset", {}, b"*RST"),
+    ("high-voltage-supply", "action", "off", {}, b"OUTP OFF"),
+    ("high-voltage-supply", "action", "clear_trip", {}, b"OUTP:PROT:CLE"),
+    ("high-voltage-supply", "setting", "voltage", {"value": 1000.0}, b"VOLT 1000"),
+    ("high-voltage-supply", "setting", "voltage_limit", {"value": 450.0}, b"VOLT:LIM 450"),
+    ("high-voltage-supply", "setting", "ramp", {"value": 50.0}, b"VOLT:SLEW 50"),
+    ("high-voltage-supply", "setting", "current_limit", {"value": 0.01}, b"CURR:LIM 0.01"),
+    ("high-voltage-supply", "setting", "output", {"value": False}, b"OUTP OFF"),
+    ("high-voltage-supply", "setting", "watchdog", {"value": 5.0}, b"SYST:WATC 5"),
+    ("high-voltage-supply", "reading", "voltage", {}, b"MEAS:VOLT?"),
+    ("high-voltage-supply", "reading", "current", {}, b"MEAS:CURR?"),
+    ("high-voltage-supply", "reading", "state", {}, b"STAT:QUES:COND?"),
+    ("current-meter", "action", "clear", {}, b"*CLS"),
+    ("current-meter", "action", "reset", {}, b"*RST"),
+    ("current-meter", "setting", "range", {"value": 2e-9}, b"CURR:RANG 2E-9"),
+    ("current-meter", "setting", "range_automatic", {"value": False}, b"CURR:RANG:AUTO OFF"),
+    ("current-meter", "setting", "integration", {"value": "medium"}, b"APER MED"),
+    ("current-meter", "setting", "zero_check", {"value": True}, b"INP:ZERO ON"),
+    ("current-meter", "reading", "current", {}, b"READ?"),
+    ("multimeter", "action", "clear", {}, b"*CLS"),
+    ("multimeter", "action", "reset", {}, b"*RST"),
+    ("multimeter", "setting", "function", {"value": "voltage"}, b'FUNC "VOLT"'),
+    ("multimeter", "setting", "range", {"value": 1000.0}, b"VOLT:RANG 1000"),
+    ("multimeter", "setting", "range_automatic", {"value": True}, b"VOLT:RANG:AUTO ON"),
+    ("multimeter", "setting", "integration", {"value": "long"}, b"APER LONG"),
+    ("multimeter", "setting", "input_resistance", {"value": "fixed"}, b"INP:IMP:AUTO 0"),
+    ("multimeter", "reading", "voltage", {}, b"MEAS:VOLT?"),
+    (STATUS_FIRST, "action", "clear", {}, b"*CLS"),
+    (STATUS_FIRST, "action", "reset", {}, b"*RST"),
+    (STATUS_FIRST, "setting", "frequency", {"value": 1e4}, b"FREQ 10000;FREQ?"),
+    (STATUS_FIRST, "setting", "level", {"value": 0.3}, b"VOLT 0.3"),
+    (STATUS_FIRST, "setting", "pair", {"value": "Cs-Rs"}, b"FUNC CSRS"),
+    (STATUS_FIRST, "setting", "integration", {"value": "short"}, b"APER SHOR"),
+    (STATUS_FIRST, "setting", "range_automatic", {"value": True}, b"RANG:AUTO ON"),
+    (STATUS_FIRST, "reading", "impedance", {}, b"*TRG;*WAI;FETC?"),
+    (STATUS_FIRST, "reading", "last_impedance", {}, b"FETC?"),
 ]
 
 GOOD: dict[str, Value] = {
@@ -97,6 +145,33 @@ REPLIES: list[tuple[str, str, str, dict[str, Value], bytes, Status]] = [
     ("scanner", "reading", "state", {"channels": ()}, b"(@)", Status.OK),
     ("thermometer", "reading", "temperature", {"temperature": 23.1}, b"2.310000E+01", Status.OK),
     ("thermometer", "reading", "humidity", {"humidity": 45.0}, b"4.500000E+01", Status.OK),
+    (
+        STATUS_FIRST,
+        "reading",
+        "impedance",
+        {"status": "N", "first": 1.23457e-7, "second": -1.5e-3},
+        b"N, 1.23457E-07,-1.50000E-03",
+        Status.OK,
+    ),
+    (
+        "current-meter",
+        "reading",
+        "current",
+        {"current": -1.5e-9, "status": "2", "range": 2e-9},
+        b"-1.500000E-09,2,+2.000000E-09",
+        Status.UNSETTLED,
+    ),
+    (
+        "high-voltage-supply",
+        "reading",
+        "state",
+        {"state": ("current_limit", "interlock_open")},
+        b"5",
+        Status.OK,
+    ),
+    ("high-voltage-supply", "reading", "state", {"state": ()}, b"0", Status.OK),
+    ("bias-source", "reading", "voltage", {"voltage": -12.5}, b"-1.250000E+01", Status.OK),
+    ("multimeter", "reading", "voltage", {"voltage": 450.0}, b"+4.500000E+02", Status.OK),
 ]
 
 
@@ -106,7 +181,10 @@ def driver_named(kind: str) -> Driver:
     return driver
 
 
-DRIVERS = {kind: driver_named(kind) for kind in ("impedance-meter", "scanner", "thermometer")}
+DRIVERS = {
+    path.stem.removeprefix("scpi-"): driver_named(path.stem.removeprefix("scpi-"))
+    for path in sorted(shipped("drivers").glob("scpi-*.toml"))
+}
 CODECS: dict[str, Codec] = {kind: codec_of(driver) for kind, driver in DRIVERS.items()}
 
 
@@ -114,7 +192,7 @@ def encode(kind: str, table: str, name: str, values: Mapping[str, Value]) -> byt
     driver, codec = DRIVERS[kind], CODECS[kind]
     if table == "setting":
         setting = driver.setting[name]
-        return codec.command(setting.set, setting).encode(values)
+        return codec.command(setting.set_and_ask or setting.set, setting).encode(values)
     text = driver.reading[name].ask if table == "reading" else driver.action[name].send
     return codec.command(text).encode(values)
 
@@ -232,6 +310,13 @@ GOOD_REPLY = b"+1.234567E-07,+1.500000E-03,0,+1.000000E+00,+0.000000E+00,+1.0000
 )
 def test_what_does_not_match_wholly_is_refused(reply: bytes) -> None:
     layout = CODECS["impedance-meter"].layout(DRIVERS["impedance-meter"].reading["impedance"])
+    with pytest.raises(ReplyMalformed):
+        layout.decode(reply)
+
+
+@pytest.mark.parametrize("reply", [b"16", b"-1", b"1.0", b"", b"0x1", b"4294967296"])
+def test_bits_without_a_name_are_not_understood(reply: bytes) -> None:
+    layout = CODECS["high-voltage-supply"].layout(DRIVERS["high-voltage-supply"].reading["state"])
     with pytest.raises(ReplyMalformed):
         layout.decode(reply)
 

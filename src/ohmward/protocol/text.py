@@ -5,6 +5,7 @@ from math import isfinite
 from typing import NamedTuple
 
 from ohmward.errors import InstrumentRefused
+from ohmward.protocol.columns import compile_columns
 from ohmward.protocol.fields import Value, sent_word
 from ohmward.protocol.layout import Layout, compile_layout
 from ohmward.protocol.manner import Manner
@@ -63,7 +64,9 @@ class TextCodec:
         return Command(encode)
 
     def layout(self, reply: Reply) -> Layout:
-        """Compile a reply's layout."""
+        """Compile a reply's layout: fields in order, by label or in fixed columns."""
+        if reply.by == "offset":
+            return compile_columns(reply, self._manner)
         return compile_layout(reply, self._manner)
 
     def receiver(self, sent: bytes = b"", *, answers: bool = True) -> Receiver:
