@@ -237,8 +237,9 @@ def test_what_cannot_be_measured_has_a_status_and_no_number() -> None:
     assert read(shorted, "RANG:AUTO ON;:READ?", 300.0)[2] == 3
     assert read(shorted, "VOLT:OFFS 20;OFFS:STAT ON;:READ?", 600.0)[2] == 1, "0.2 A of offset"
     assert read(meter_of(Nothing()))[:3] == [9.9e37, 9.9e37, 1]
-    meter = meter_of(SeriesPart("C1", **LOSSY))
-    meter._terminals.moved_s = 100.05  # a contact moves while the meter integrates
+    leads = Leads(SeriesPart("C1", **LOSSY))
+    leads.moved_s = 100.05  # a contact moves while the meter integrates
+    meter = ImpedanceMeter("meter", "1001", leads, MeterError(EXACT, normal, 1, "m"))
     assert read(meter, "APER LONG;:READ?", 100.0)[:3] == [9.91e37, 9.91e37, 2]
     assert read(meter, "READ?", 200.0)[2] == 0
 

@@ -1,7 +1,7 @@
 """A simulated bench: the instruments at their addresses, and what they are really wired to."""
 
 from collections.abc import Collection, Mapping, Sequence
-from dataclasses import dataclass, field, fields
+from dataclasses import dataclass, field, fields, replace
 from pathlib import Path
 from typing import Any
 
@@ -9,6 +9,8 @@ from ohmward.sim import noise
 from ohmward.sim.device import Device
 from ohmward.sim.faults import FaultLayer
 from ohmward.sim.fixture_terminals import FixtureTerminals
+from ohmward.sim.handheld_meter import FIGURES as HANDHELD_FIGURES
+from ohmward.sim.handheld_meter import HandheldMeter, frame_of, line_of
 from ohmward.sim.impedance_meter import ImpedanceMeter
 from ohmward.sim.meter_error import MeterError, MeterFigures
 from ohmward.sim.parts import PhysicalPart
@@ -24,13 +26,26 @@ from ohmward.sim.responder_roles import (
 )
 from ohmward.sim.room import SimulatedRoom
 from ohmward.sim.scanner import Contacts, Scanner
+from ohmward.sim.status_first_meter import StatusFirstMeter
 from ohmward.sim.thermometer import Thermometer
 from ohmward.sim.tray import Models, fill
 
 IMPEDANCE_METER = "impedance-meter-scpi"
 SCANNER = "scanner-scpi"
 THERMOMETER = "thermometer-scpi"
-SIMULATORS = frozenset({IMPEDANCE_METER, SCANNER, THERMOMETER})
+STATUS_FIRST_METER = "impedance-meter-status-first"
+HANDHELD_STREAM = "impedance-meter-handheld-stream"
+HANDHELD_FRAMES = "impedance-meter-handheld-frames"
+SIMULATORS = frozenset(
+    {
+        IMPEDANCE_METER,
+        SCANNER,
+        THERMOMETER,
+        STATUS_FIRST_METER,
+        HANDHELD_STREAM,
+        HANDHELD_FRAMES,
+    }
+)
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -144,7 +159,19 @@ class SimulatedBench:
                 for which in ("temperature", "humidity")
             )
             return Thermometer(name, serial_number, self.room, (first, second))
-        error = MeterError(meter_figures(figures, name), noise.normal, self._seed, name)
+        return self._impedance_meter(instrument.simulator, name, serial_number, figures)
+
+    def _impedance_meter(
+        self, simulator: str, name: str, serial_number: str, figures: Mapping[str, Any]
+    ) -> Device:
+        handheld = simulator in (HANDHELD_STREAM, HANDHELD_FRAMES)
+        base = HANDHELD_FIGURES if handheld else MeterFigures()
+        error = MeterError(meter_figures(figures, name, base), noise.normal, self._seed, name)
+        if simulator == STATUS_FIRST_METER:
+            return StatusFirstMeter(name, serial_number, self.terminals, error)
+        if handheld:
+            write = line_of if simulator == HANDHELD_STREAM else frame_of
+            return HandheldMeter(self.terminals, error, write)
         return ImpedanceMeter(name, serial_number, self.terminals, error)
 
     def _responder(self, instrument: InstrumentAt) -> Responder:
@@ -205,8 +232,10 @@ class SimulatedBench:
         return self.parts[part_id].fault
 
 
-def meter_figures(figures: Mapping[str, Any], name: str) -> MeterFigures:
-    """The figures of one impedance meter from its table of a physical file.
+def meter_figures(
+    figures: Mapping[str, Any], name: str, base: MeterFigures | None = None
+) -> MeterFigures:
+    """The figures of one impedance meter from its table of a physical file, laid over ``base``.
 
     Keys are the fields of MeterFigures; ``knots`` is a list of [hertz, magnitude, phase], and
     ``noise`` a table of ``short``, ``medium`` and ``long``. Raises PhysicalFileError.
@@ -215,6 +244,7 @@ def meter_figures(figures: Mapping[str, Any], name: str) -> MeterFigures:
     unknown = sorted(set(figures) - known)
     if unknown:
         raise PhysicalFileError(f"instrument.{name}: unknown {', '.join(unknown)}")
+    base = base or MeterFigures()
     made = dict(figures)
     try:
         if "knots" in made:
@@ -222,7 +252,7 @@ def meter_figures(figures: Mapping[str, Any], name: str) -> MeterFigures:
         if "noise" in made:
             words = {"short": "SHOR", "medium": "MED", "long": "LONG"}
             made["noise"] = {words[key]: float(value) for key, value in made["noise"].items()}
-            made["noise"] = {**MeterFigures().noise, **made["noise"]}
-        return MeterFigures(**made)
+            made["noise"] = {**base.noise, **made["noise"]}
+        return replace(base, **made)
     except (TypeError, ValueError, KeyError) as error:
         raise PhysicalFileError(f"instrument.{name}: {error}") from error

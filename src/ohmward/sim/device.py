@@ -18,6 +18,10 @@ class Device(Protocol):
 
     message_based: bool
 
+    @property
+    def ends_line(self) -> bytes:
+        """The byte that ends a command."""
+
     def opened(self, now_s: float) -> None:
         """A controller has connected."""
 

@@ -111,6 +111,11 @@ class FaultLayer:
         self._chance = chance
 
     @property
+    def ends_line(self) -> bytes:
+        """As the core inside."""
+        return self.device.ends_line
+
+    @property
     def message_based(self) -> bool:
         """As the core inside."""
         return self.device.message_based
@@ -160,10 +165,10 @@ class FaultLayer:
         if not self._held and self.device.due_s() is None:
             self._pending.clear()  # what was not answered by now never will be
         self._input += data
-        *lines, rest = self._input.split(b"\n")
+        *lines, rest = self._input.split(self.ends_line)
         self._input = rest
         for line in lines:
-            self._message(bytes(line) + b"\n", now_s)
+            self._message(bytes(line) + self.ends_line, now_s)
         self._advance(now_s)
 
     def _message(self, message: bytes, now_s: float) -> None:
@@ -236,12 +241,18 @@ class FaultLayer:
             data = self.device.take(due_s)
             if not data:
                 return
-            for reply in data.splitlines(keepends=True):
+            for reply in _replies_in(data):
                 self._shape(reply, due_s)
 
     def _shape(self, reply: bytes, at_s: float) -> None:
         """Turn one reply into what leaves the instrument, and when."""
-        message, fault = self._pending.popleft() if self._pending else (b"", None)
+        if self._pending:
+            message, fault = self._pending.popleft()
+        else:  # it speaks unasked, or acknowledges
+            message, fault = b"?", self._fault_for(b"?")
+            if fault is not None:
+                self.struck.append((at_s, fault.kind))
+                self._before(fault, message, at_s)
         if self._dead or self._hung_up:
             return
         if self._false_identity and message.strip().upper() == b"*IDN?":
@@ -322,3 +333,10 @@ class FaultLayer:
             self._held.clear()
             self._input.clear()
             self.device.clear(now_s)
+
+
+def _replies_in(data: bytes) -> list[bytes]:
+    """The lines of a text; what is no text, or has no lines, is one reply."""
+    if not data.isascii() or not data.endswith(b"\n"):
+        return [data]
+    return [line + b"\n" for line in data[:-1].split(b"\n")]

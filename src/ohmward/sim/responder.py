@@ -38,7 +38,7 @@ class Responder:
         link = self._table("link")
         self._ends_reply = link.get("read_termination", "\n").encode("latin-1")
         # CR LF and LF are both seen as the end of a line when a line ends in LF
-        self._ends_line = (link.get("write_termination", "\n") or "\n").encode("latin-1")[-1:]
+        self.ends_line = (link.get("write_termination", "\n") or "\n").encode("latin-1")[-1:]
         self._echo = bool(link.get("echo", False))
         self._prompt = str(link.get("prompt", "")).encode("latin-1")
         self._acknowledge = str(link.get("acknowledge", "")).encode("latin-1")
@@ -223,7 +223,7 @@ class Responder:
     def receive(self, data: bytes, now_s: float) -> None:
         """Take bytes and answer each line that is whole."""
         self._input += data
-        while (end := self._input.find(self._ends_line)) >= 0:
+        while (end := self._input.find(self.ends_line)) >= 0:
             line = bytes(self._input[: end + 1])
             del self._input[: end + 1]
             self._free_s = max(self._free_s, now_s)

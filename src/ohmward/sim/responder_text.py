@@ -50,7 +50,8 @@ class Numbers:
             decimals = 6 if decimals is None else decimals
             return f"{value:+0{width}.{decimals}f}" if width else f"{value:.{decimals}f}"
         digits = width - 7 if width else 6  # sign, figure, point, E, sign, two figures
-        return f"{value:+.{digits}E}"
+        plus = field.get("plus", self._table.get("plus", True))
+        return f"{value:+.{digits}E}" if plus else f"{value: .{digits}E}"
 
 
 class ReplyWriter:

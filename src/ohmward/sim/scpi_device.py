@@ -26,7 +26,7 @@ class ScpiDevice:
     """
 
     message_based = False
-    error_query = True
+    ends_line = b"\n"
 
     def __init__(self, kind: str, serial_number: str) -> None:
         self.identity = f"GENERIC,{kind},{serial_number},1.0"
@@ -243,9 +243,8 @@ class ScpiDevice:
         add("*STB?", self._status_byte)
         self._add_register("*ESE", "standard_enable", _BYTE)
         self._add_register("*SRE", "service_enable", _BYTE)
-        if self.error_query:
-            add("SYSTem:ERRor[:NEXT]?", lambda now_s: self.status.next_error())
-            add("SYSTem:ERRor:COUNt?", lambda now_s: str(len(self.status.errors)))
+        add("SYSTem:ERRor[:NEXT]?", lambda now_s: self.status.next_error())
+        add("SYSTem:ERRor:COUNt?", lambda now_s: str(len(self.status.errors)))
         add("SYSTem:VERSion?", lambda now_s: "1999.0")
         self._add_event_registers()
 
