@@ -2,6 +2,7 @@
 
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from pathlib import Path
+from sys import intern
 from typing import Any
 
 import numpy as np
@@ -64,7 +65,7 @@ def tabulate(
     try:
         facts = store.facts()
         run_id, simulated = facts["run_id"], facts["simulated"] == "yes"
-        kept: list[tuple[Arrays, Arrays]] = []
+        kept = _Kept(_KEPT_OF_JOURNAL), _Kept(_KEPT_OF_DERIVED)
         with TableWriter(folder, columns.IMPEDANCE) as table:
             for readings in journal_columns(store):
                 derived = derive_impedance(
@@ -76,11 +77,12 @@ def tabulate(
                     cable_m=cable_m,
                 )
                 table.arrays(derived)
-                kept.append(_needed(readings, derived))
+                kept[0].add(readings)
+                kept[1].add(derived)
         _write_events(folder, run_id, store.events())
     finally:
         store.abandon()
-    readings, derived = _together(kept)
+    readings, derived = (one.whole() for one in kept)
     closures = {stage.stage for stage in brief.stages if stage.closure}
     rule = Rule(guard=brief.guard, coverage_k=brief.coverage_k)
     results = judge(
@@ -108,7 +110,7 @@ def journal_columns(store: Store, rows_at_once: int = 8192) -> Iterator[Arrays]:
         by_name = dict(zip(names, zip(*batch, strict=True), strict=True))
         arrays: Arrays = {}
         for name, values in by_name.items():
-            if name == "stage":
+            if name in ("stage", "reply"):
                 continue
             arrays[name] = _array(name, values)
         arrays["time_utc"] = arrays.pop("time_us").astype("datetime64[us]")
@@ -119,28 +121,31 @@ def journal_columns(store: Store, rows_at_once: int = 8192) -> Iterator[Arrays]:
 
 
 def _array(name: str, values: Sequence[Any]) -> NDArray[Any]:
-    if name in _TEXT or name == "reply":
-        return np.array(values, dtype=object)
+    if name in _TEXT:  # the same few words in every row: kept once each
+        return np.array([intern(value) for value in values], dtype=object)
     if name in ("reading", "point", "repeat", "time_us"):
         return np.array(values, dtype=np.int64)
     return np.array(values, dtype=np.float64)  # None becomes NaN
 
 
-def _needed(readings: Arrays, derived: Mapping[str, NDArray[Any]]) -> tuple[Arrays, Arrays]:
-    return (
-        {name: readings[name] for name in _KEPT_OF_JOURNAL},
-        {name: derived[name] for name in _KEPT_OF_DERIVED},
-    )
+class _Kept:
+    """The columns that judging needs of every batch, put together without holding them twice."""
 
+    def __init__(self, names: Sequence[str]) -> None:
+        self._pieces: dict[str, list[NDArray[Any]]] = {name: [] for name in names}
 
-def _together(kept: list[tuple[Arrays, Arrays]]) -> tuple[Arrays, Arrays]:
-    if not kept:
-        empty = np.array([], dtype=np.float64)
-        return dict.fromkeys(_KEPT_OF_JOURNAL, empty), dict.fromkeys(_KEPT_OF_DERIVED, empty)
-    return (
-        {name: np.concatenate([one[name] for one, _ in kept]) for name in _KEPT_OF_JOURNAL},
-        {name: np.concatenate([two[name] for _, two in kept]) for name in _KEPT_OF_DERIVED},
-    )
+    def add(self, columns: Mapping[str, NDArray[Any]]) -> None:
+        """Keep this batch's columns."""
+        for name, pieces in self._pieces.items():
+            pieces.append(columns[name])
+
+    def whole(self) -> Arrays:
+        """Each column in one piece; the pieces are let go one column at a time."""
+        whole: Arrays = {}
+        while self._pieces:
+            name, pieces = self._pieces.popitem()
+            whole[name] = np.concatenate(pieces) if pieces else np.array([], dtype=np.float64)
+        return whole
 
 
 def _write_events(folder: Path, run_id: str, events: list[Row]) -> None:
