@@ -74,7 +74,6 @@ class Driver(Model):
     accuracy: AnyAccuracy | None = None
 
     _path: Path = PrivateAttr(default=Path())
-    _merged: dict[str, Any] = PrivateAttr(default_factory=dict)
 
     @field_validator("overflow")
     @classmethod
@@ -93,13 +92,15 @@ class Driver(Model):
 
     @property
     def merged(self) -> dict[str, Any]:
-        """The file's content as plain data, what it extends included."""
-        return self._merged
+        """What the file says as plain data: what it extends laid under, constants filled in,
+        values in SI base units, and nothing that is left to a default.
+        """
+        return self.model_dump(mode="json", exclude_unset=True, exclude={"extends", "without"})
 
     @property
     def digest(self) -> str:
-        """SHA-256 of the merged content: what a journal keeps to know the driver again."""
-        text = json.dumps(self._merged, sort_keys=True, ensure_ascii=True, default=str)
+        """SHA-256 of what the file says: what a journal keeps to know the driver again."""
+        text = json.dumps(self.merged, sort_keys=True, ensure_ascii=True)
         return hashlib.sha256(text.encode("ascii")).hexdigest()
 
     @property
@@ -144,7 +145,6 @@ def load_driver(name_or_path: str, beside: Path, problems: Problems) -> Driver |
     if len(problems) > before:
         return None
     driver._path = path
-    driver._merged = merged
     return driver
 
 
