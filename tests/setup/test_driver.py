@@ -1,5 +1,6 @@
 """Driver files: what is read, what is refused and how it is told, what extends what."""
 
+import re
 import tomllib
 from pathlib import Path
 
@@ -390,3 +391,14 @@ def test_roles_have_their_words() -> None:
         assert words.needed_readings <= words.readings
         assert words.needed_actions <= words.actions
         assert set(words.fields) <= words.readings
+
+
+def test_the_examples_in_the_documentation(tmp_path: Path) -> None:
+    page = (Path(__file__).parents[2] / "docs" / "drivers.md").read_text(encoding="utf-8")
+    first, second = re.findall(r"```toml\n(.*?)```", page, flags=re.DOTALL)
+    (tmp_path / "small-meter.toml").write_text(first, encoding="utf-8")
+    small = good(tmp_path, first)
+    assert small.setting["level"].written.decimals == 2
+    driver = good(tmp_path, second)
+    assert driver.setting["frequency"].allowed == (100.0, 1e3, 1e4, 1e5)
+    assert driver.reading == small.reading

@@ -161,7 +161,10 @@ def _by_position(reply: Reply) -> Callable[[list[bytes]], Sequence[bytes | list[
 
 
 def _by_label(reply: Reply) -> Callable[[list[bytes]], Sequence[bytes]]:
-    """Fields in any order, each known by the text in front of it, each exactly once."""
+    """Fields in any order, each known by the text in front of it, each exactly once.
+
+    One field may have no label: it is what no label fits.
+    """
     labels = [one.label.encode("ascii") for one in reply.fields]
     longest_first = sorted(range(len(labels)), key=lambda index: -len(labels[index]))
 

@@ -133,8 +133,8 @@ class Reply(Model):
             raise wrong("a name of its own for each field", f"{', '.join(twice)} twice")
         if any(field.repeats for field in self.fields[:-1]):
             raise wrong("'repeats' on the last field only", "it on an earlier one")
-        if self.by == "label" and any(not field.label for field in self.fields):
-            raise wrong("a 'label' for every field of a reply by label", "a field without")
+        if self.by == "label" and sum(not field.label for field in self.fields) > 1:
+            raise wrong("a 'label' for every field but one of a reply by label", "more without")
         if self.by == "offset":
             _check_offsets(self.fields)
         return self
