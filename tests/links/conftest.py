@@ -4,6 +4,7 @@ import itertools
 import os
 import selectors
 import socket
+import struct
 import threading
 import time
 from collections.abc import Awaitable, Callable, Iterator
@@ -272,6 +273,75 @@ class TcpPeer:
         connection.close()
 
 
+HEADER = "!2sBBIQ"
+
+
+def frame(kind: int, control: int, parameter: int, payload: bytes = b"") -> bytes:
+    """A HiSLIP message (IVI-6.1): prologue, type, control code, parameter, length, payload."""
+    return struct.pack(HEADER, b"HS", kind, control, parameter, len(payload)) + payload
+
+
+class HislipPeer(TcpPeer):
+    """The same instrument behind HiSLIP: a piece that ends a line ends a message."""
+
+    def __init__(self, script: Script) -> None:
+        self._ids: dict[socket.socket, int] = {}
+        super().__init__(script)
+
+    def _welcome(self) -> None:
+        connection, _ = self._listener.accept()
+        self._ears.register(connection, selectors.EVENT_READ)
+        self._halves[connection] = b""
+
+    def _listen(self, connection: socket.socket) -> None:
+        try:
+            data = connection.recv(1 << 16)
+        except OSError:
+            data = b""
+        if not data:
+            self._hang_up(connection)
+            return
+        self._halves[connection] += data
+        while connection in self._halves and len(self._halves[connection]) >= 16:
+            _, kind, _, parameter, length = struct.unpack(HEADER, self._halves[connection][:16])
+            if len(self._halves[connection]) < 16 + length:
+                return
+            payload = self._halves[connection][16 : 16 + length]
+            self._halves[connection] = self._halves[connection][16 + length :]
+            self._frame(connection, kind, parameter, payload)
+
+    def _frame(self, connection: socket.socket, kind: int, parameter: int, payload: bytes) -> None:
+        if kind == 0 and not self.script.connects():  # Initialize
+            self._hang_up(connection)
+        elif kind == 0:
+            self._send(connection, frame(1, 0, 0x0100 << 16 | 1))
+            self._ids[connection] = 0xFFFF_FFFF
+            self._say(connection, self.script.banner)
+        elif kind == 17:  # AsyncInitialize
+            self._send(connection, frame(18, 0, 0))
+        elif kind == 15:  # AsyncMaxMsgSize
+            self._send(connection, frame(16, 0, 0, payload))
+        elif kind == 7:  # DataEnd
+            self._ids[connection] = parameter
+            for line in payload.split(b"\n")[:-1]:
+                self._say(connection, self.script.hears(line))
+
+    def _say(self, connection: socket.socket, pieces: list[Piece]) -> None:
+        number = self._ids[connection]
+        super()._say(
+            connection,
+            [
+                (after_s, data if data == HANG_UP else self._framed(number, data))
+                for after_s, data in pieces
+            ],
+        )
+
+    def _framed(self, number: int, data: bytes) -> bytes:
+        *lines, half = data.split(b"\n")
+        framed = b"".join(frame(7, 0, number, line + b"\n") for line in lines)
+        return framed + (frame(6, 0, number, half) if half else b"")
+
+
 def check_identity(reply: bytes) -> None:
     """What a driver's check does: another maker or type is another instrument."""
     from ohmward.errors import WrongIdentity
@@ -323,13 +393,22 @@ class World:
 
 @pytest.fixture
 def tcp() -> Iterator[World]:
+    yield from real_world(TcpPeer, "TCPIP::127.0.0.1::{port}::SOCKET")
+
+
+@pytest.fixture
+def hislip() -> Iterator[World]:
+    yield from real_world(HislipPeer, "TCPIP::127.0.0.1::hislip0,{port}::INSTR")
+
+
+def real_world(make_peer: type[TcpPeer], address: str) -> Iterator[World]:
     script = Script()
-    peer = TcpPeer(script)
+    peer = make_peer(script)
     manager = pyvisa.ResourceManager("@py")
     try:
         yield World(
             script=script,
-            address=f"TCPIP::127.0.0.1::{peer.port}::SOCKET",
+            address=address.format(port=peer.port),
             manager=manager,
             make_waiter=ThreadWaiter,
             enter=run_in_real_time,
@@ -364,11 +443,21 @@ def simulated_world() -> Iterator[World]:
 @pytest.fixture(
     params=[
         pytest.param("tcp", marks=pytest.mark.processes),
+        pytest.param("hislip", marks=pytest.mark.processes),
         pytest.param("simulated"),
     ]
 )
 def world(request: pytest.FixtureRequest) -> World:
-    """Both worlds, one after the other: the contract holds in each."""
+    """Every world, one after the other: the contract holds in each."""
+    found: World = request.getfixturevalue(request.param)
+    return found
+
+
+@pytest.fixture(
+    params=[pytest.param("tcp", marks=pytest.mark.processes), pytest.param("simulated")]
+)
+def stream_world(request: pytest.FixtureRequest) -> World:
+    """The worlds whose interface does not itself mark the end of a message."""
     found: World = request.getfixturevalue(request.param)
     return found
 

@@ -235,7 +235,8 @@ class TestWhatNobodyAskedFor:
 
         world.run(talk)
 
-    def test_a_reply_without_its_whole_termination_is_none(self, world):
+    def test_a_reply_without_its_whole_termination_is_none(self, stream_world):
+        world = stream_world
         world.script.answer = lambda line: (
             [(0.0, IDENTITY + b"\r\n")] if line == b"*IDN?" else [(0.0, b"1\n")]
         )
@@ -453,7 +454,9 @@ class TestIdentity:
 
         world.enter(main)
 
-    def test_a_stream_without_termination_takes_no_query(self, world):
+    def test_a_stream_without_termination_takes_no_query(self, stream_world):
+        world = stream_world
+
         async def main(_clock):
             link = world.link(read_termination=b"", free_running=True)
             link._hello = type(link._hello)(query=b"", check=lambda reply: None)

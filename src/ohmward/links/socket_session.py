@@ -1,13 +1,10 @@
 """The session behind ``TCPIP::host::port::SOCKET``, in place of PyVISA-py's."""
 
-import fcntl
 import socket
 import struct
-import termios
-from typing import Any
 
 from pyvisa import attributes
-from pyvisa.constants import InterfaceType, ResourceAttribute, StatusCode
+from pyvisa.constants import ResourceAttribute, StatusCode
 from pyvisa_py.tcpip import TCPIPSocketSession
 
 from ohmward.links.stream_session import CHUNK_BYTES, StreamSession
@@ -64,11 +61,6 @@ class SocketSession(StreamSession, TCPIPSocketSession):  # type: ignore[misc] # 
         except BlockingIOError:
             return 0
 
-    def settled(self) -> bool:
-        """True once the other side has acknowledged every byte (tcp(7), SIOCOUTQ)."""
-        waiting = fcntl.ioctl(self.interface.fileno(), termios.TIOCOUTQ, bytes(4))
-        return struct.unpack("i", waiting) == (0,)
-
     def close(self) -> StatusCode:
         """Close with a reset, so that nothing still on its way is carried out later."""
         if self.interface is not None:
@@ -81,18 +73,7 @@ def connected(host: str, port: int, timeout_s: float) -> socket.socket:
     """A connected non-blocking socket without Nagle's delay that notices a dead peer."""
     connection = socket.create_connection((host, port), timeout=timeout_s)
     try:
-        connection.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
-        connection.setsockopt(socket.SOL_SOCKET, socket.SO_LINGER, RESET_ON_CLOSE)
-        connection.setsockopt(socket.SOL_SOCKET, socket.SO_KEEPALIVE, 1)
-        # Linux has these; elsewhere a half-open link is noticed later, by a timeout
-        for option, value in (
-            ("TCP_USER_TIMEOUT", USER_TIMEOUT_MS),
-            ("TCP_KEEPIDLE", 5),
-            ("TCP_KEEPINTVL", 2),
-            ("TCP_KEEPCNT", 3),
-        ):
-            if hasattr(socket, option):
-                connection.setsockopt(socket.IPPROTO_TCP, getattr(socket, option), value)
+        make_alert(connection)
         connection.setblocking(False)
     except BaseException:
         connection.close()
@@ -100,10 +81,17 @@ def connected(host: str, port: int, timeout_s: float) -> socket.socket:
     return connection
 
 
-def register(session_class: Any, interface: InterfaceType, resource_class: str) -> None:
-    """Make PyVISA-py open ``session_class`` for this kind of address, from now on."""
-    kinds = session_class._session_classes
-    if kinds.get((interface, resource_class)) is not session_class:
-        # PyVISA-py's own register() logs a warning about the replacement that is wanted here
-        kinds.pop((interface, resource_class), None)
-        session_class.register(interface, resource_class)(session_class)
+def make_alert(connection: socket.socket) -> None:
+    """No delay on sending, a dead peer noticed, nothing delivered after closing."""
+    connection.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
+    connection.setsockopt(socket.SOL_SOCKET, socket.SO_LINGER, RESET_ON_CLOSE)
+    connection.setsockopt(socket.SOL_SOCKET, socket.SO_KEEPALIVE, 1)
+    # Linux has these; elsewhere a half-open link is noticed later, by a timeout
+    for option, value in (
+        ("TCP_USER_TIMEOUT", USER_TIMEOUT_MS),
+        ("TCP_KEEPIDLE", 5),
+        ("TCP_KEEPINTVL", 2),
+        ("TCP_KEEPCNT", 3),
+    ):
+        if hasattr(socket, option):
+            connection.setsockopt(socket.IPPROTO_TCP, getattr(socket, option), value)

@@ -9,6 +9,7 @@ stands what a waiter needs so that it never blocks: ``PatientSession``.
 """
 
 import select
+import struct
 from typing import Any, Protocol, runtime_checkable
 
 from pyvisa.constants import BufferOperation, ResourceAttribute, StatusCode
@@ -49,6 +50,14 @@ class PatientSession(Protocol):
         """Make a blocking write in another thread end soon; the session then counts as lost."""
 
 
+def nothing_queued(descriptor: int) -> bool:
+    """True if the system holds no byte back that was written to this socket or serial line."""
+    import fcntl
+    import termios
+
+    return struct.unpack("i", fcntl.ioctl(descriptor, termios.TIOCOUTQ, bytes(4))) == (0,)
+
+
 class StreamSession:
     """The byte-stream half of a session; children say how bytes come and go.
 
@@ -59,6 +68,7 @@ class StreamSession:
     timeout: float | None
 
     def _watch(self, descriptor: int) -> None:
+        self._descriptor = descriptor
         self._buffer = bytearray()
         self._searched = 0
         self._gone = False
@@ -105,9 +115,13 @@ class StreamSession:
     def _returns_at_once(self, count: int) -> bool:
         return self._gone or len(self._buffer) >= count or self._end() > 0
 
+    def _marked(self) -> bool:
+        """True if the termination character ends a message."""
+        return bool(self.attrs[ResourceAttribute.termchar_enabled])
+
     def _end(self) -> int:
         """Length of the first whole message in the buffer, 0 if there is none."""
-        if not self.attrs[ResourceAttribute.termchar_enabled]:
+        if not self._marked():
             return len(self._buffer)  # nothing marks an end: whatever is there is a message
         end = self._buffer.find(self.attrs[ResourceAttribute.termchar], self._searched) + 1
         if not end:
@@ -145,8 +159,8 @@ class StreamSession:
         return discarded
 
     def settled(self) -> bool:
-        """See PatientSession; a child that can ask says better."""
-        return True
+        """See PatientSession (tcp(7), tty_ioctl(4): bytes not acknowledged, not yet sent)."""
+        return nothing_queued(self._descriptor)
 
     def interrupt(self) -> None:
         """See PatientSession."""
@@ -163,7 +177,7 @@ class StreamSession:
             return b"", StatusCode.error_timeout
         end = self._end()
         if 0 < end <= count:
-            marked = self.attrs[ResourceAttribute.termchar_enabled]
+            marked = self._marked()
             return self._take(end), (
                 StatusCode.success_termination_character_read if marked else StatusCode.success
             )
