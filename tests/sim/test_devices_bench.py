@@ -10,14 +10,8 @@ import pyvisa
 from pyvisa.resources import MessageBasedResource
 
 from ohmward.sim.backend import InProcessLibrary
-from ohmward.sim.bench import (
-    IMPEDANCE_METER,
-    SCANNER,
-    THERMOMETER,
-    InstrumentAt,
-    SimulatedBench,
-    meter_figures,
-)
+from ohmward.sim.bench import SIMULATORS, InstrumentAt, SimulatedBench
+from ohmward.sim.makers import IMPEDANCE_METER, SCANNER, THERMOMETER, meter_figures
 from ohmward.sim.physical import PhysicalFileError
 from ohmward.sim.tray import make_of
 
@@ -242,3 +236,26 @@ def test_the_shipped_meter_stays_within_what_its_driver_states() -> None:
                     for width, allowed in zip(widths, stated, strict=True):
                         assert width <= allowed * factor, (frequency_hz, impedance_ohm, level_v)
     assert figures.frequency_rel <= number(accuracy["frequency_share"])
+
+
+def test_every_simulator_that_a_shipped_driver_names_exists_and_answers_its_identity() -> None:
+    for path in sorted((ROOT / "drivers").glob("*.toml")):
+        driver = tomllib.loads(path.read_text("utf-8"))
+        simulator = driver.get("simulated_by", "")
+        assert simulator in SIMULATORS, path
+        made = SimulatedBench(
+            None,
+            (InstrumentAt(name="it", address=METER, simulator=simulator, serial_number="Q9"),),
+            POSITIONS,
+            (),
+            seed=1,
+        )
+        device = made.named["it"]
+        device.opened(1.0)
+        device.take(1.0)
+        query = driver.get("identity", {}).get("ask", "*IDN?").encode()
+        device.receive(query + device.ends_line, 2.0)
+        answer = device.take(2.0)
+        identity = driver.get("identity", {})
+        start = identity.get("starts_with") or "".join(identity.get("fields", [""])[:1])
+        assert start.encode() in answer, path

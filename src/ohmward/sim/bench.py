@@ -1,66 +1,22 @@
 """A simulated bench: the instruments at their addresses, and what they are really wired to."""
 
 from collections.abc import Collection, Mapping, Sequence
-from dataclasses import dataclass, field, fields, replace
 from pathlib import Path
 from typing import Any
 
-from ohmward.sim import noise
 from ohmward.sim.device import Device
 from ohmward.sim.faults import FaultLayer
 from ohmward.sim.fixture_terminals import FixtureTerminals
-from ohmward.sim.handheld_meter import FIGURES as HANDHELD_FIGURES
-from ohmward.sim.handheld_meter import HandheldMeter, frame_of, line_of
-from ohmward.sim.impedance_meter import ImpedanceMeter
-from ohmward.sim.meter_error import MeterError, MeterFigures
+from ohmward.sim.makers import SIMULATORS, InstrumentAt, Surroundings, make
+from ohmward.sim.open_ports import OpenCircuit
 from ohmward.sim.parts import PhysicalPart
-from ohmward.sim.physical import Physical, PhysicalFileError, read_physical
-from ohmward.sim.plain import quantity
-from ohmward.sim.responder import Responder
-from ohmward.sim.responder_roles import (
-    Behaviour,
-    Passive,
-    PerfectMeter,
-    PerfectScanner,
-    PerfectThermometer,
-)
+from ohmward.sim.physical import Physical, read_physical
 from ohmward.sim.room import SimulatedRoom
-from ohmward.sim.scanner import Contacts, Scanner
-from ohmward.sim.status_first_meter import StatusFirstMeter
-from ohmward.sim.thermometer import Thermometer
+from ohmward.sim.scanner import Contacts
+from ohmward.sim.terminals_dc import Circuit
 from ohmward.sim.tray import Models, fill
 
-IMPEDANCE_METER = "impedance-meter-scpi"
-SCANNER = "scanner-scpi"
-THERMOMETER = "thermometer-scpi"
-STATUS_FIRST_METER = "impedance-meter-status-first"
-HANDHELD_STREAM = "impedance-meter-handheld-stream"
-HANDHELD_FRAMES = "impedance-meter-handheld-frames"
-SIMULATORS = frozenset(
-    {
-        IMPEDANCE_METER,
-        SCANNER,
-        THERMOMETER,
-        STATUS_FIRST_METER,
-        HANDHELD_STREAM,
-        HANDHELD_FRAMES,
-    }
-)
-
-
-@dataclass(frozen=True, kw_only=True, slots=True)
-class InstrumentAt:
-    """An instrument of the bench file, as plain data.
-
-    ``simulator`` names the simulated instrument that speaks like it (one of ``SIMULATORS``); else
-    a responder is made of ``driver``, the driver file's content as plain data.
-    """
-
-    name: str
-    address: str
-    simulator: str = ""
-    driver: Mapping[str, Any] = field(default_factory=dict)
-    serial_number: str = ""
+__all__ = ["SIMULATORS", "InstrumentAt", "SimulatedBench"]
 
 
 class SimulatedBench:
@@ -71,7 +27,8 @@ class SimulatedBench:
     the parts list as plain data: part_id, position, kind, nominal, tolerance_low and _high,
     rated_v, rated_a, dielectric, polarity. ``models`` is the folder of part models; one
     named ``parts`` beside the physical file comes first. ``faulty`` names the instruments that
-    get a fault layer. Raises PhysicalFileError or ValueError for what cannot be simulated.
+    get a fault layer, ``circuit`` is the high-voltage side (open where there is none). Raises
+    PhysicalFileError or ValueError for what cannot be simulated.
     """
 
     def __init__(
@@ -84,8 +41,8 @@ class SimulatedBench:
         *,
         models: Path | None = None,
         faulty: Collection[str] = (),
+        circuit: Circuit | None = None,
     ) -> None:
-        self._seed = seed
         self._physical = read_physical(physical) if physical else Physical()
         folders = [physical.parent / "parts"] if physical else []
         folders += [models] if models else []
@@ -104,8 +61,19 @@ class SimulatedBench:
         self.named: dict[str, Device] = {}
         self.devices: dict[str, Device] = {}
         self.layers: dict[str, FaultLayer] = {}
+        around = Surroundings(
+            seed=seed,
+            contacts=self.contacts,
+            terminals=self.terminals,
+            room=self.room,
+            circuit=circuit or OpenCircuit(),
+        )
         for instrument in instruments:
-            self._add(instrument, instrument.name in faulty)
+            device = make(instrument, self._figures(instrument.name), around)
+            if instrument.name in faulty:
+                device = self.layers[instrument.name] = FaultLayer(device, seed)
+            self.named[instrument.name] = device
+            self.devices.setdefault(instrument.address, device)
 
     def _contacts(
         self, instruments: Sequence[InstrumentAt], positions: Mapping[str, Sequence[str]]
@@ -129,64 +97,6 @@ class SimulatedBench:
 
     def _figures(self, name: str) -> Mapping[str, Any]:
         return self._physical.instruments.get(name, {})
-
-    # -- instruments
-
-    def _add(self, instrument: InstrumentAt, faulty: bool) -> None:
-        device = self._made(instrument)
-        if faulty:
-            device = self.layers[instrument.name] = FaultLayer(device, self._seed)
-        self.named[instrument.name] = device
-        self.devices.setdefault(instrument.address, device)
-
-    def _made(self, instrument: InstrumentAt) -> Device:
-        if instrument.simulator not in SIMULATORS:
-            if not instrument.driver:
-                raise ValueError(
-                    f"{instrument.name}: nothing simulates {instrument.simulator or 'it'}"
-                )
-            return self._responder(instrument)
-        name = instrument.name
-        figures = dict(self._figures(name))
-        serial_number = instrument.serial_number or str(figures.pop("serial_number", "SIM-1"))
-        for key in ("channels", "stuck_open", "stuck_closed", "serial_number"):
-            figures.pop(key, None)
-        if instrument.simulator == SCANNER:
-            return Scanner(name, serial_number, self.contacts)
-        if instrument.simulator == THERMOMETER:
-            first, second = (
-                2.0 * noise.uniform(self._seed, "thermometer", name, which) - 1.0
-                for which in ("temperature", "humidity")
-            )
-            return Thermometer(name, serial_number, self.room, (first, second))
-        return self._impedance_meter(instrument.simulator, name, serial_number, figures)
-
-    def _impedance_meter(
-        self, simulator: str, name: str, serial_number: str, figures: Mapping[str, Any]
-    ) -> Device:
-        handheld = simulator in (HANDHELD_STREAM, HANDHELD_FRAMES)
-        base = HANDHELD_FIGURES if handheld else MeterFigures()
-        error = MeterError(meter_figures(figures, name, base), noise.normal, self._seed, name)
-        if simulator == STATUS_FIRST_METER:
-            return StatusFirstMeter(name, serial_number, self.terminals, error)
-        if handheld:
-            write = line_of if simulator == HANDHELD_STREAM else frame_of
-            return HandheldMeter(self.terminals, error, write)
-        return ImpedanceMeter(name, serial_number, self.terminals, error)
-
-    def _responder(self, instrument: InstrumentAt) -> Responder:
-        driver = instrument.driver
-        role = driver.get("role", "")
-        behaviour: Behaviour = Passive()
-        if role == "impedance meter":
-            meter = driver.get("meter", {})
-            source_ohm = quantity(meter.get("source_resistance", 100.0))
-            behaviour = PerfectMeter(self.terminals, source_ohm, meter.get("pair", ""))
-        elif role == "scanner":
-            behaviour = PerfectScanner(self.contacts)
-        elif role == "thermometer":
-            behaviour = PerfectThermometer(self.room)
-        return Responder(driver, instrument.serial_number, behaviour)
 
     # -- what is really there
 
@@ -230,29 +140,3 @@ class SimulatedBench:
     def fault(self, part_id: str) -> str:
         """What is wrong with a part; empty for a good one."""
         return self.parts[part_id].fault
-
-
-def meter_figures(
-    figures: Mapping[str, Any], name: str, base: MeterFigures | None = None
-) -> MeterFigures:
-    """The figures of one impedance meter from its table of a physical file, laid over ``base``.
-
-    Keys are the fields of MeterFigures; ``knots`` is a list of [hertz, magnitude, phase], and
-    ``noise`` a table of ``short``, ``medium`` and ``long``. Raises PhysicalFileError.
-    """
-    known = {one.name for one in fields(MeterFigures)}
-    unknown = sorted(set(figures) - known)
-    if unknown:
-        raise PhysicalFileError(f"instrument.{name}: unknown {', '.join(unknown)}")
-    base = base or MeterFigures()
-    made = dict(figures)
-    try:
-        if "knots" in made:
-            made["knots"] = tuple((float(f), float(m), float(p)) for f, m, p in made["knots"])
-        if "noise" in made:
-            words = {"short": "SHOR", "medium": "MED", "long": "LONG"}
-            made["noise"] = {words[key]: float(value) for key, value in made["noise"].items()}
-            made["noise"] = {**base.noise, **made["noise"]}
-        return replace(base, **made)
-    except (TypeError, ValueError, KeyError) as error:
-        raise PhysicalFileError(f"instrument.{name}: {error}") from error

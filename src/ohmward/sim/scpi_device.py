@@ -47,6 +47,9 @@ class ScpiDevice:
 
     # -- what a kind of instrument adds
 
+    def heard(self, now_s: float) -> None:
+        """A message is about to be obeyed."""
+
     def reset(self, now_s: float) -> None:
         """What *RST does beyond ending pending operations; each kind adds its own."""
 
@@ -193,6 +196,7 @@ class ScpiDevice:
                 self._end_message()
             elif self._messages:
                 self._in_message = True
+                self.heard(self._clock_s)
                 self._units.extend(self.tree.compile(self._messages.popleft()))
             else:
                 break
