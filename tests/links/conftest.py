@@ -472,3 +472,9 @@ def worlds() -> Callable[[], AbstractContextManager[World]]:
 def scripted_library() -> type[ScriptedLibrary]:
     """The class, for tests that need a library with a fault of its own."""
     return ScriptedLibrary
+
+
+@pytest.fixture
+def script() -> Script:
+    """A script for peers of a test's own."""
+    return Script()

@@ -138,7 +138,9 @@ async def _opened(world, talk) -> None:
 
 @pytest.mark.processes
 @pytest.mark.slow
-def test_the_same_over_a_socket(tcp):
+@pytest.mark.parametrize("kind", ["tcp", "hislip"])
+def test_the_same_over_real_links(kind, request):
+    world = request.getfixturevalue(kind)
     draw = random.Random(21)
     plan = []
     for fault in sorted(FAULTS) * 2:
@@ -147,6 +149,6 @@ def test_the_same_over_a_socket(tcp):
         plan += [("none", "none", 0.0, 0.0)] * 4
 
     async def talk(link):
-        assert await every_reply_is_its_own(link, tcp.script, plan) >= 4 * len(FAULTS)
+        assert await every_reply_is_its_own(link, world.script, plan) >= 4 * len(FAULTS)
 
-    tcp.run(talk, max_reply_bytes=1000, drain_s=0.02)
+    world.run(talk, max_reply_bytes=1000, drain_s=0.02)
