@@ -290,6 +290,10 @@ class ImpedanceMeter:
                 await self._persist(self._discard)
             except InstrumentRefused:
                 return self._bad(Status.NOT_SET)
+            except LinkError:
+                if self._beyond_recovery:
+                    raise
+                return self._bad(Status.TIMEOUT)
         reply = b""
         try:
             reply = await talker.exchange(self._query, timeout_s=self._timeout_s)
