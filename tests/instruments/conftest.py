@@ -12,6 +12,20 @@ from ohmward.errors import LinkError, LinkLost, LinkTimeout
 T = TypeVar("T")
 
 
+# what can become of a reply on its way; the reply to the command before comes last
+MUTATIONS: dict[str, Callable[[bytes, bytes], bytes]] = {
+    "half": lambda reply, previous: reply[len(reply) // 2 :],
+    "head": lambda reply, previous: reply[: max(1, len(reply) - 3)],
+    "comma": lambda reply, previous: reply.replace(b".", b","),
+    "eighth bit": lambda reply, previous: (
+        reply[:2] + bytes([reply[2] | 0x80]) + reply[3:] if len(reply) > 2 else b"\xff"
+    ),
+    "twice": lambda reply, previous: reply + reply,
+    "empty": lambda reply, previous: b"",
+    "previous": lambda reply, previous: previous,
+}
+
+
 class Peer(Protocol):
     def handle(self, line: bytes) -> bytes | None:
         """Obey one line; its answer, if it has one."""
@@ -71,9 +85,10 @@ class MemoryLink:
             return self.peer.handle(message)
         if fault == "late":
             return None
-        if fault == "half" and reply is not None:
-            return reply[len(reply) // 2 :]
-        return reply
+        previous, self._reply = self._reply, reply
+        if reply is None or fault not in MUTATIONS:
+            return reply
+        return MUTATIONS[fault](reply, previous or b"")
 
     def _check(self) -> None:
         if self.dirty:

@@ -6,6 +6,8 @@ from pathlib import Path
 from typing import Any
 
 import pytest
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
 
 from ohmward.errors import InstrumentRefused, LinkError, Problems, WrongIdentity
 from ohmward.instruments.impedance_meter import ImpedanceMeter
@@ -45,6 +47,7 @@ class Meter:
         self.status = 0
         self.first = "+1.234567E+02"
         self.level = ""
+        self.speaks_state = False  # its first number then says which frequency it stands at
         self.identity = b"GENERIC,IMPEDANCE-METER,77,1.0"
 
     def restart(self) -> None:
@@ -64,7 +67,8 @@ class Meter:
             offset = (
                 self.state["VOLT:OFFS"] if self.state["VOLT:OFFS:STAT"] == "1" else "+0.000000E+00"
             )
-            fields = [self.first, "-9.876543E+01", str(self.status), level, offset]
+            first = f"{float(self.state['FREQ']) / 7.0:+.6E}" if self.speaks_state else self.first
+            fields = [first, "-9.876543E+01", str(self.status), level, offset]
             return ",".join([*fields, self.state["RANG"]]).encode()
         if text.endswith("?"):
             return self.state[text[:-1]].encode()
@@ -465,3 +469,65 @@ def test_a_cable_is_told_to_the_meter(link: Any, peer: Meter, virtually: Any) ->
     found = virtually(lambda: prepared(meter))
     assert found["cable_length"] == "2"
     assert float(peer.state["CORR:LENG"]) == 2.0
+
+
+POINTS = [
+    Point(frequency_hz=1e3, level_v=1.0),
+    Point(frequency_hz=1e4, level_v=0.5, bias_v=2.0),
+    Point(frequency_hz=5e4, level_v=0.2, bias_v=-7.0),
+]
+KINDS = [
+    "late",
+    "lost",
+    "unheard",
+    "restarted",
+    "half",
+    "head",
+    "comma",
+    "eighth bit",
+    "twice",
+    "empty",
+    "previous",
+]
+
+
+@given(
+    faults=st.dictionaries(st.integers(1, 120), st.sampled_from(KINDS), max_size=12),
+    visits=st.lists(st.sampled_from(POINTS), min_size=1, max_size=5),
+)
+@settings(max_examples=200, suppress_health_check=[HealthCheck.function_scoped_fixture])
+def test_whatever_happens_on_the_link_no_wrong_number_comes_out(
+    link_to: Callable[[Any], Any],
+    virtually: Any,
+    faults: dict[int, str],
+    visits: list[Point],
+) -> None:
+    """An accepted reading was taken at the point that was set; healthy ones are accepted."""
+    peer = Meter()
+    peer.speaks_state = True
+    link = link_to(peer)
+    meter = ImpedanceMeter(talker(link))
+
+    async def work() -> None:
+        link.faults = faults
+        try:
+            await prepared(meter)
+        except LinkError:
+            return
+        for point in visits:
+            try:
+                await meter.set_point(point)
+            except LinkError:
+                continue
+            for _ in range(3):
+                before = len(link.sent)
+                reading = await meter.read()
+                if reading.status is Status.OK:
+                    assert reading.first == pytest.approx(point.frequency_hz / 7.0, rel=1e-6)
+                    assert reading.level_v == point.level_v
+                    assert reading.bias_v == point.bias_v
+                else:
+                    assert isnan(reading.first)
+                    assert any(number > before for number in faults)
+
+    virtually(work)
