@@ -6,16 +6,17 @@ the scatter of the mean (type A, JCGM 100:2008, 4.2) falls with their number and
 
 from collections import Counter
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
+from ohmward.metrology.accuracy import half_widths
 from ohmward.metrology.arrays import FloatArray, correlation_of
+from ohmward.metrology.uncertain import Covariance, Stated, UncertainImpedance
 from ohmward.results.derive import Columns, ok_readings
+from ohmward.terms.accuracy import ImpedanceAccuracy
 from ohmward.terms.condition import Point
-
-Covariance = tuple[float, float, float]
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -42,11 +43,31 @@ class Cell:
     instrument: str = ""
     level_v: float = float("nan")
     temperature_c: float = float("nan")
+    stated: Stated | None = None
 
     @property
     def impedance(self) -> complex:
         """The mean as a complex number."""
         return complex(self.r, self.x)
+
+    def uncertain(self) -> UncertainImpedance:
+        """The mean with its causes of error.
+
+        What type B holds beyond the stated accuracy (resolution, compensation) counts as
+        normal, and so does all of it where the accuracy is not known here.
+        """
+        plain = UncertainImpedance(
+            frequency_hz=self.point.frequency_hz, r=self.r, x=self.x, stated=self.stated
+        )
+        return UncertainImpedance(
+            frequency_hz=self.point.frequency_hz,
+            r=self.r,
+            x=self.x,
+            stated=self.stated,
+            normal={"other": _without(self.type_b, plain.stated_covariance())},
+            repeat=self.type_a,
+            degrees=self.good - 1 if self.good > 1 else float("inf"),
+        )
 
     def covariance(self) -> Covariance:
         """Type A and type B together."""
@@ -56,13 +77,33 @@ class Cell:
         return u_r, u_x, float(correlation_of(shared, np.asarray(u_r), np.asarray(u_x)))
 
 
+def _without(whole: Covariance, part: Covariance) -> Covariance:
+    """What is left of a covariance when an independent part is taken off; never below zero.
+
+    Below a millionth of the whole it is rounding, and nothing is left.
+    """
+    left = []
+    for one, other in zip(whole[:2], part[:2], strict=True):
+        variance = one * one - other * other
+        left.append(variance**0.5 if variance > 1e-6 * one * one else 0.0)
+    u_r, u_x = left
+    if u_r * u_x == 0:
+        return u_r, u_x, 0.0
+    shared = whole[2] * whole[0] * whole[1] - part[2] * part[0] * part[1]
+    return u_r, u_x, max(-1.0, min(1.0, shared / (u_r * u_x)))
+
+
 def cells_of(
-    readings: Columns, impedance: Mapping[str, NDArray[np.generic]]
+    readings: Columns,
+    impedance: Mapping[str, NDArray[np.generic]],
+    accuracies: Mapping[str, ImpedanceAccuracy] | None = None,
+    cable_m: Mapping[str, float] | None = None,
 ) -> dict[tuple[str, str], list[Cell]]:
     """The cells of every part and stage, in the order of their points.
 
     ``readings`` are the journal's columns (``point`` is the index of the point in its stage),
     ``impedance`` the rows that `derive_impedance` made of them, in the same order.
+    ``accuracies`` and ``cable_m``, as there, say what part of type B is rectangular.
     """
     count = len(readings["reading"])
     if count == 0:
@@ -76,8 +117,33 @@ def cells_of(
         end = starts[group + 1] if group + 1 < len(starts) else count
         rows = order[starts[group] : end]
         cell = means.cell(group, rows, part_id, stage, index)
+        if accuracies and cell.good and cell.instrument in accuracies:
+            cable = (cable_m or {}).get(cell.instrument, 0.0)
+            cell = replace(cell, stated=_stated(cell, accuracies[cell.instrument], cable))
         cells.setdefault((part_id, stage), []).append(cell)
     return cells
+
+
+def _stated(cell: Cell, accuracy: ImpedanceAccuracy, cable_m: float) -> Stated | None:
+    """The stated half-widths at a cell; None where there are none."""
+    magnitude, phase = half_widths(
+        accuracy,
+        frequency_hz=cell.point.frequency_hz,
+        magnitude_ohm=max(abs(cell.impedance), 1e-15),
+        level_v=cell.level_v,
+        integration=cell.integration,
+        cable_m=cable_m,
+        temperature_c=cell.temperature_c,
+        holes="nan",
+    )
+    if np.isnan(magnitude) or np.isnan(phase):
+        return None
+    return Stated(
+        magnitude_rel=float(magnitude),
+        phase_rad=float(phase),
+        frequency_rel=accuracy.frequency_rel,
+        distribution=accuracy.distribution,
+    )
 
 
 def _group_codes(readings: Columns) -> tuple[NDArray[np.intp], list[tuple[str, str, int]]]:

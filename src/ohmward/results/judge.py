@@ -20,6 +20,7 @@ from ohmward.results.judged import Judged, Rule, Stage, expand, matches, why_not
 from ohmward.results.quantities import CHANGES, evaluate, reference_cell
 from ohmward.results.report import report_stage
 from ohmward.results.whole_stage import judge_resonance
+from ohmward.terms.accuracy import ImpedanceAccuracy
 from ohmward.terms.decision import Decision
 from ohmward.terms.limit import Limit
 from ohmward.terms.part import Part
@@ -38,17 +39,21 @@ def judge(
     *,
     rule: Rule | None = None,
     closures: Collection[str] = (),
+    accuracies: Mapping[str, ImpedanceAccuracy] | None = None,
+    cable_m: Mapping[str, float] | None = None,
     run_id: str = "",
 ) -> list[Row]:
     """The rows of results.csv, by part, then limit, then what is reported.
 
     ``readings`` are the journal's columns, ``impedance`` what `derive_impedance` made of them;
-    ``closures`` names the stages that end with a closure point. A number that does not apply is
-    NaN. Units are those of the quantity.
+    ``closures`` names the stages that end with a closure point. With ``accuracies`` (and
+    ``cable_m``), as given to `derive_impedance`, intervals follow the distribution that the
+    instrument states; without, it is taken to be normal. A number that does not apply is NaN.
+    Units are those of the quantity.
     """
     rule = rule or Rule()
     stages: dict[str, dict[str, Stage]] = {part.part_id: {} for part in parts}
-    for (part_id, name), cells in cells_of(readings, impedance).items():
+    for (part_id, name), cells in cells_of(readings, impedance, accuracies, cable_m).items():
         if part_id in stages:
             stages[part_id][name] = _stage(cells, closes=name in closures)
     by_part: dict[str, list[Limit]] = {}

@@ -8,16 +8,13 @@ from numpy.typing import NDArray
 
 from ohmward.metrology.coverage import coverage_factor, effective_degrees
 from ohmward.metrology.decide import decide, decide_by_probability
-from ohmward.metrology.samples import normal_points
+from ohmward.metrology.uncertain import interval
 from ohmward.results import reasons
 from ohmward.results.cells import Cell
-from ohmward.results.quantities import Evaluated, is_active, is_curved, sampled
+from ohmward.results.quantities import Evaluated, is_active
 from ohmward.terms.condition import Point
 from ohmward.terms.decision import Decision
 from ohmward.terms.limit import Limit
-
-# 2.3 % in each tail is then counted to within 0.05 %
-_SAMPLES = 50_000
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -102,27 +99,11 @@ class Spread:
 
 
 def expand(rule: Rule, found: Evaluated, cell: Cell) -> Spread:
-    """U = k·u with k from the effective degrees of freedom, or from samples where it is curved."""
-    if found.view and (isnan(found.value) or found.u > 0) and is_curved(found.view, cell):
-        return _sampled(rule, found, cell)
+    """U and k of a quantity: of a view by metrology's interval, of a change by first order."""
+    if found.view:
+        at = interval(found.view, cell.uncertain(), rule.coverage_k)
+        return Spread(
+            value=found.value, u=at.u, u_expanded=at.u_expanded, k=at.k, samples=at.samples
+        )
     k = coverage_factor(effective_degrees(found.u, ((found.u_a, found.degrees),)), rule.coverage_k)
     return Spread(value=found.value, u=found.u, u_expanded=k * found.u, k=k)
-
-
-def _sampled(rule: Rule, found: Evaluated, cell: Cell) -> Spread:
-    """The probabilistically symmetric interval of the samples, JCGM 101:2008, 7.7.
-
-    Far from a normal distribution its width has no fixed relation to a standard deviation:
-    outside 1…4 the factor is left out rather than printed as one.
-    """
-    from scipy.special import ndtr
-
-    samples = sampled(found.view, cell, normal_points(_SAMPLES, 2))
-    tail = float(ndtr(-rule.coverage_k))
-    low, high = np.quantile(samples, (tail, 1 - tail), method="inverted_cdf")
-    if not (np.isfinite(low) and np.isfinite(high)):
-        return Spread(value=found.value, u=nan, u_expanded=nan, k=nan, samples=samples)
-    u_expanded = float(high - low) / 2
-    k = u_expanded / found.u if found.u > 0 else nan
-    k = k if 1 <= k <= 4 else nan
-    return Spread(value=found.value, u=found.u, u_expanded=u_expanded, k=k, samples=samples)

@@ -12,9 +12,9 @@ from math import hypot, nan, sqrt
 
 import numpy as np
 
-from ohmward.metrology.arrays import FloatArray
-from ohmward.metrology.immittance import View, gradients, propagate
-from ohmward.results.cells import Cell, Covariance
+from ohmward.metrology.immittance import gradients
+from ohmward.metrology.uncertain import spread
+from ohmward.results.cells import Cell
 
 SERIES_BELOW_OHM = 1000.0
 
@@ -104,12 +104,7 @@ def _view(name: str, cell: Cell) -> tuple[float, float, float]:
     value = float(view.value)
     if not np.isfinite(value):
         return nan, nan, nan
-    return value, _spread(view, cell.type_b), _spread(view, cell.type_a)
-
-
-def _spread(view: View, covariance: Covariance) -> float:
-    u_r, u_x, rho = (np.asarray(part) for part in covariance)
-    return float(propagate(view, u_r, u_x, rho))
+    return value, spread(view, cell.type_b), spread(view, cell.type_a)
 
 
 def _change(quantity: str, cell: Cell, reference: Cell) -> Evaluated:
@@ -144,39 +139,6 @@ def shared_variance(cell: Cell, other: Cell) -> float:
     return SHARED_VARIANCE if same else 0.0
 
 
-def sampled(view: str, cell: Cell, points: FloatArray) -> FloatArray:
-    """The view's value over normal deviates ``points`` (2, n) of R and X: JCGM 101:2008, 6.4.8.
-
-    A part is passive: what comes out below 0 ohm is noise about a resistance too small to see,
-    and stands for an infinite Rp or Q, not for a negative one.
-    """
-    u_r, u_x, rho = cell.covariance()
-    r = cell.r + u_r * points[0]
-    x = cell.x + u_x * (rho * points[0] + sqrt(max(1 - rho * rho, 0.0)) * points[1])
-    value = gradients(cell.point.frequency_hz, r, x, (view,))[view].value
-    return np.where(r <= 0, np.inf, value) if view in ("rp_ohm", "q") else value
-
-
 def is_active(cell: Cell) -> bool:
     """Whether R is below zero by more than 3u, which no passive part can be."""
     return cell.r < -3 * cell.covariance()[0]
-
-
-def is_curved(view: str, cell: Cell) -> bool:
-    """Whether a straight line misses the view by over a tenth of 2u, anywhere within ±2u.
-
-    Then the distribution is not normal and first-order propagation decides wrongly.
-    """
-    u_r, u_x, _ = cell.covariance()
-    f = cell.point.frequency_hz
-    middle = gradients(f, cell.r, cell.x, (view,))[view]
-    if not np.isfinite([middle.value, middle.by_r, middle.by_x]).all():
-        return True
-    dr = 2 * u_r * np.array([1, -1, 0, 0, 1, 1, -1, -1])
-    dx = 2 * u_x * np.array([0, 0, 1, -1, 1, -1, 1, -1])
-    around = gradients(f, cell.r + dr, cell.x + dx, (view,))[view].value
-    straight = middle.value + middle.by_r * dr + middle.by_x * dx
-    scale = np.hypot(middle.by_r * 2 * u_r, middle.by_x * 2 * u_x)
-    if not np.all(np.isfinite(around)):
-        return True
-    return bool(np.any(np.abs(around - straight) > 0.1 * scale))
