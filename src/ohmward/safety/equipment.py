@@ -1,6 +1,7 @@
 """What the warden needs of the instruments that it owns: as little as will do."""
 
 from dataclasses import dataclass
+from math import inf
 from typing import Protocol
 
 import trio
@@ -133,3 +134,4 @@ class Facts:
     reply_s: float = 2.0
     observer_s: float = 5.0
     meter_bias_v: float = 0.0
+    rail_leak_ohm: float = inf

@@ -4,7 +4,14 @@ from ohmward.errors import NotProvenSafe, OhmwardError
 
 
 class PartFault(OhmwardError):
-    """The part is the cause: it stops, is discharged and proven, and the lot goes on."""
+    """The part is the cause: it stops, is discharged and proven, and the lot goes on.
+
+    ``connection`` is what the fault says of the part's connection, or ''.
+    """
+
+    def __init__(self, message: str, *, connection: str = "") -> None:
+        super().__init__(message)
+        self.connection = connection
 
 
 class BenchFault(OhmwardError):

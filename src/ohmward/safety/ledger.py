@@ -48,6 +48,7 @@ class Ledger:
         self.scanner_is_clean = True
         self.tripped = False
         self.isolated = False
+        self.off_confirmed = False
         self.commanded_v = 0.0
         self._proofs: dict[str, Proof] = {}
 
@@ -64,6 +65,10 @@ class Ledger:
             self.isolated = True
         elif Action.CLOSE_SUPPLY in step.actions or event is SourceEvent.STAYS_JOINED:
             self.isolated = False
+        if event is SourceEvent.OFF_CONFIRMED:
+            self.off_confirmed = step.state in OFF_SOURCE
+        elif event is SourceEvent.OFF_IGNORED or Action.OUTPUT_ON in step.actions:
+            self.off_confirmed = False
         if Action.ZERO in step.actions:
             self.commanded_v = 0.0
         return step.actions
@@ -143,8 +148,8 @@ class Ledger:
 
     @property
     def may_discharge(self) -> bool:
-        """Whether a discharge contact may close: the source is off, or it is cut off."""
-        return self.source in OFF_SOURCE or self.isolated
+        """Whether a discharge contact may close: the source is read back off, or cut off."""
+        return self.off_confirmed or self.isolated
 
     def surroundings(self, position: str) -> Surroundings:
         """What a lease or a charge at this position must know of the rest."""

@@ -47,6 +47,8 @@ class Laws:
     bypass_share: the bypass opens below this share of the meter's range (half).
     meter_foreign_v: the impedance meter stands this foreign voltage (1 V unless its driver
         says otherwise).
+    droop_s: how long a part is watched at most, off and not yet discharged, for the droop
+        that its own divider causes (s).
     path_ohm: what a direct short through contacts and leads still has (ohm, common practice).
     """
 
@@ -70,6 +72,7 @@ class Laws:
     proof_valid_s: float = 300.0
     bypass_share: float = 0.5
     meter_foreign_v: float = 1.0
+    droop_s: float = 2.0
     path_ohm: float = 0.05
 
     def __post_init__(self) -> None:

@@ -10,7 +10,7 @@ from ohmward.errors import LinkTimeout
 from ohmward.safety.equipment import Equipment, Facts, ProcessTime
 from ohmward.safety.faults import BenchFault
 from ohmward.safety.ledger import Ledger
-from ohmward.safety.permit import LawBroken, Laws, Permit, closing_current_a
+from ohmward.safety.permit import Laws, Permit, closing_current_a
 from ohmward.safety.proof import Decay
 from ohmward.safety.rules import Action, PositionEvent
 from ohmward.safety.source import Source
@@ -59,6 +59,7 @@ class Charge:
     least_f: float
     most_f: float
     witnessed: bool = False
+    drain_a: float = 0.0  # what it drew last when settled, its divider included
     decay: Decay = Decay.UNRESOLVED
 
 
@@ -119,12 +120,9 @@ class Positions:
         move, bound_v = self.desk.board.move, self.charge(wired.position).bound_v
         through_ohm = wired.series_ohm + wired.discharge_ohm
         if action is Action.CLOSE_SENSE or action is Action.OPEN_SENSE:
-            make = action is Action.CLOSE_SENSE
-            if make:
-                self._check_sense(wired.position)
-            for contact in wired.sense:
-                current_a = bound_v / self.desk.wiring.divider_ohm
-                await move(contact, make=make, voltage_v=bound_v, current_a=current_a)
+            if action is Action.CLOSE_SENSE:
+                await self._free_voltmeter(wired.position)
+            await self.sense(wired.position, make=action is Action.CLOSE_SENSE)
         elif action is Action.CONNECT:
             current_a = closing_current_a(
                 self.desk.laws, voltage_v=bound_v, resistance_ohm=wired.series_ohm
@@ -152,11 +150,26 @@ class Positions:
         else:
             raise BenchFault(f"a position has no action '{action}'")
 
-    def _check_sense(self, position: str) -> None:
+    async def _free_voltmeter(self, position: str) -> None:
         """The voltmeter is at one part at a time: two would be joined through it."""
         for other in self.desk.wiring.positions:
-            if other.position != position and any(map(self.desk.board.made, other.sense)):
-                raise LawBroken("join", f"the voltmeter is still at {other.position}")
+            if other.position != position:
+                await self.sense(other.position, make=False)
+
+    async def sense(self, position: str, *, make: bool) -> None:
+        """Bring the voltmeter to a part, or take it away: the divider's current flows."""
+        bound_v = self.charge(position).bound_v
+        for contact in self.wired(position).sense:
+            await self.desk.board.move(
+                contact,
+                make=make,
+                voltage_v=bound_v,
+                current_a=bound_v / self.desk.wiring.divider_ohm,
+            )
+
+    def drain_ohm(self) -> float:
+        """What drains a part while the supply is off and joined: divider and rail (ohm)."""
+        return 1.0 / (1.0 / self.desk.wiring.divider_ohm + 1.0 / self.desk.facts.rail_leak_ohm)
 
     async def _meter(self, wired: PositionWiring, *, make: bool) -> None:
         """The meter path moves below the meter's own foreign voltage, never above."""

@@ -84,6 +84,56 @@ def judge_charge(
     return Connection.AGREES if drawn_c <= most_c else Connection.EXCESS
 
 
+def judge_droop(
+    laws: Laws,
+    samples: Sequence[Sample],
+    *,
+    drain_a: float,
+    resolution_v: float,
+    capacitance_min_f: float,
+    capacitance_max_f: float,
+) -> Connection:
+    """Whether a part that nothing feeds droops as C·dV/dt = I says.
+
+    ``samples`` are taken after OFF and before the discharge; ``drain_a`` is what drains the
+    part meanwhile (its divider, the rail's leak, its own leakage) (A). The part took C·V on
+    this ramp if it now gives it back at this rate. A voltage that is all but gone is ABSENT;
+    a droop below ten digits of the voltmeter is unresolved.
+    """
+    if len(samples) < 2:
+        return Connection.UNRESOLVED
+    first, last = samples[0], samples[-1]
+    fallen_v, spent_s = first.voltage_v - last.voltage_v, last.time_s - first.time_s
+    if not abs(first.voltage_v) > laws.dead_v or spent_s <= 0.0:
+        return Connection.UNRESOLVED
+    if fallen_v < 10.0 * resolution_v:
+        return Connection.UNRESOLVED
+    found_f = drain_a * spent_s / fallen_v
+    if found_f < laws.charge_low * capacitance_min_f:
+        return Connection.ABSENT
+    return (
+        Connection.AGREES
+        if found_f <= laws.charge_high * capacitance_max_f
+        else (Connection.EXCESS)
+    )
+
+
+def holds_test_voltage(
+    laws: Laws, samples: Sequence[Sample], *, drain_ohm: float, capacitance_min_f: float
+) -> bool | None:
+    """Whether a part holds the test voltage as its capacitance must; None if unresolved.
+
+    With R the resistance that drains it, it falls as e^(−t/RC) at the fastest for C_min; a
+    part that has lost half of what even that leaves is not there.
+    """
+    first, last = samples[0], samples[-1]
+    time_constant = drain_ohm * laws.charge_low * capacitance_min_f
+    spent_s = last.time_s - first.time_s
+    if time_constant < 2.0 * spent_s or spent_s <= 0.0:
+        return None
+    return last.voltage_v >= 0.5 * first.voltage_v * exp(-spent_s / time_constant)
+
+
 def floor_v(laws: Laws, *, from_v: float, resolution_v: float) -> float:
     """Below this a falling voltage is not part of a decay any more: noise and absorption (V)."""
     return max(0.02 * abs(from_v), 10.0 * resolution_v, 0.1 * laws.dead_v)

@@ -10,7 +10,7 @@ from ohmward.safety.faults import BenchFault, PositionUnproven
 from ohmward.safety.permit import discharge_wait_s, short_target_v
 from ohmward.safety.positions import Charge, Positions
 from ohmward.safety.proof import Decay, Injection, Sample, is_dead, judge_decay
-from ohmward.safety.rules import PositionEvent, PositionState, SourceState
+from ohmward.safety.rules import TEST_SOURCE, PositionEvent, PositionState, SourceState
 from ohmward.safety.testing import Tester
 from ohmward.safety.wiring import PositionWiring
 
@@ -32,11 +32,11 @@ class Prover:
 
     # ---- down
 
-    async def discharge(self, position: str, event: PositionEvent) -> None:
+    async def discharge(self, position: str, event: PositionEvent) -> Decay:
         """From wherever the position is, through the discharge resistor down to the short.
 
         ``event`` is what the table calls the reason: make safe, stop, or trip. Afterwards the
-        position is shorted, or PositionUnproven is raised.
+        position is shorted, or PositionUnproven is raised. Returns what the decay said.
         """
         known, wired = self._positions.charge(position), self._positions.wired(position)
         if self._desk.ledger.positions[position] is P.ENDED_UNPROVEN:
@@ -62,6 +62,7 @@ class Prover:
         known.witnessed = known.witnessed and known.decay is Decay.MATCHES
         known.bound_v = target_v
         await self._positions.event(position, E.DISCHARGED)
+        return known.decay
 
     async def _watch_decay(
         self, wired: PositionWiring, known: Charge, samples: list[Sample], began_s: float
@@ -180,4 +181,9 @@ class Prover:
             raise BenchFault("the supply is not to be used any more")
         if not desk.board.made(desk.wiring.supply):
             await desk.source.join()
-        return await self._tester.inject(position)
+        try:
+            return await self._tester.inject(position)
+        except BenchFault:
+            if desk.ledger.source in TEST_SOURCE:
+                await desk.source.fall()
+            raise

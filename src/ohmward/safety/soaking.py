@@ -2,7 +2,7 @@
 
 from collections.abc import Iterator
 from dataclasses import dataclass, field
-from itertools import count, takewhile
+from itertools import count, pairwise, takewhile
 
 import trio
 
@@ -17,7 +17,14 @@ from ohmward.safety.permit import (
     ramp_v_per_s,
 )
 from ohmward.safety.positions import Positions, in_time
-from ohmward.safety.proof import Connection, charge_drawn_c, judge_charge
+from ohmward.safety.proof import (
+    Connection,
+    Decay,
+    Sample,
+    charge_drawn_c,
+    judge_charge,
+    judge_droop,
+)
 from ohmward.safety.rules import PositionEvent, SourceEvent
 from ohmward.safety.testing import Tester
 from ohmward.terms.reading import CurrentReading, SupplyReading
@@ -40,6 +47,7 @@ class Course:
     currents: list[tuple[float, float]] = field(default_factory=list)  # time s, supply's A
     from_v: float = 0.0
     ramp_s: float = 0.0
+    decay: Decay = Decay.UNRESOLVED
     stopped: str = ""  # why the part ended early
 
 
@@ -103,13 +111,15 @@ class Charger:
             await desk.source.command(hold.part_id, hold.position, course.set_v)
             supply, volts = await self._look(hold, course)
             course.currents.append((desk.time.now_s(), supply.current_a))
+            if volts > max(0.5 * course.set_v, 2.0 * desk.laws.dead_v):
+                known.witnessed = True  # the voltmeter follows what is applied
             await self._check_bypass_closed(supply)
             if course.set_v == to_v and volts >= (1.0 - desk.laws.within) * to_v:
                 break
             if limit_is_fault(desk.laws, elapsed_s=spent_s, expected_s=expected_s):
                 raise PartFault(_why_low(volts, course.set_v, supply))
             await desk.time.sleep(desk.facts.ramp_every_s)
-        course.reached = known.witnessed = True
+        course.reached = True
         course.ramp_s = desk.time.now_s() - began_s
         await self._positions.event(hold.position, PositionEvent.REACHED)
         desk.source.reached()
@@ -176,28 +186,74 @@ class Charger:
             raise PartFault(f"its power of {net_a * volts:.3g} W passes its limit")
 
     def _judge_connection(self, hold: Hold, course: Course) -> None:
-        """Once the part has settled: the charge of this ramp, net of leakage, against C·V."""
+        """Once the part has settled: the charge of this ramp, net of leakage, against C·V.
+
+        A ramp is a staircase; a supply that is asked now and then sees the charge of a step
+        only where R·C is longer than the time between two answers.
+        """
         desk, known = self._desk, self._positions.charge(hold.position)
-        spent_s = course.currents[-1][0] - course.currents[0][0]
+        times = [time_s for time_s, _ in course.currents]
+        apart_s = max(after - before for before, after in pairwise(times))
+        spent_s = times[-1] - times[0]
         steady_a = max(course.currents[-1][1], 0.0)
         change_v = course.set_v - course.from_v
         leaked_c = steady_a * (spent_s - 0.5 * course.ramp_s)  # it grew with the voltage
         drawn_c = charge_drawn_c(course.currents) - leaked_c
         course.drawn_c = drawn_c - desk.wiring.node_capacitance_f() * change_v
-        measured_f = hold.measured_f
-        found = judge_charge(
+        least_f, most_f = self._bounds(hold)
+        seen = self._positions.wired(hold.position).series_ohm * least_f >= apart_s
+        course.currents = []
+        if not seen:
+            return
+        course.connection = judge_charge(
             desk.laws,
             drawn_c=course.drawn_c,
             uncertainty_c=desk.facts.supply_error_a * spent_s + 0.5 * leaked_c,
             change_v=change_v,
-            capacitance_min_f=known.least_f if measured_f is None else measured_f,
-            capacitance_max_f=known.most_f if measured_f is None else measured_f,
+            capacitance_min_f=least_f,
+            capacitance_max_f=most_f,
         )
-        course.currents = []
-        if found is not Connection.UNRESOLVED:
-            course.connection = found
-        if found is Connection.ABSENT:
-            raise PartFault("it took no charge on this ramp: it is open or not connected")
+        known.drain_a = steady_a
+        if course.connection is Connection.ABSENT:
+            raise PartFault(
+                "it took no charge on this ramp: it is open or not connected",
+                connection=Connection.ABSENT,
+            )
+
+    def _bounds(self, hold: Hold) -> tuple[float, float]:
+        """Between what the part's capacitance lies: as measured, else as the permit says (F)."""
+        if hold.measured_f is not None:
+            return hold.measured_f, hold.measured_f
+        known = self._positions.charge(hold.position)
+        return known.least_f, known.most_f
+
+    async def watch_droop(self, hold: Hold, course: Course) -> None:
+        """Off and not yet discharged: the part droops through its divider as C·dV/dt = I says."""
+        if course.connection is not Connection.UNRESOLVED:
+            return
+        desk, laws = self._desk, self._desk.laws
+        least_f, most_f = self._bounds(hold)
+        began_s, samples = desk.time.now_s(), []
+        while True:
+            volts = await self._positions.read_v()
+            spent_s = desk.time.now_s() - began_s
+            samples.append(Sample(time_s=spent_s, voltage_v=volts))
+            fallen_v = samples[0].voltage_v - volts
+            enough = fallen_v >= 20.0 * desk.facts.voltmeter_resolution_v
+            if (enough and len(samples) >= 3) or spent_s >= laws.droop_s:
+                break
+            await desk.time.sleep(desk.facts.voltmeter_interval_s)
+        mean_v = 0.5 * (samples[0].voltage_v + samples[-1].voltage_v)
+        own_a = max(self._positions.charge(hold.position).drain_a, 0.0)
+        drain_a = max(own_a, mean_v / desk.wiring.divider_ohm) + mean_v / desk.facts.rail_leak_ohm
+        course.connection = judge_droop(
+            laws,
+            samples,
+            drain_a=drain_a,
+            resolution_v=desk.facts.voltmeter_resolution_v,
+            capacitance_min_f=least_f,
+            capacitance_max_f=most_f + desk.wiring.node_capacitance_f(),
+        )
 
     async def _soak(
         self, hold: Hold, soak_s: float, observer: Observer, course: Course
@@ -258,6 +314,7 @@ class Charger:
             if reading.status is Status.OVERLOAD:
                 await self._close_bypass(course)
             else:
+                self._positions.charge(hold.position).drain_a = reading.current_a
                 self._check_part(hold, reading.current_a - divider_a, volts)
         return directive
 

@@ -4,7 +4,13 @@ from ohmward.errors import LinkError
 from ohmward.safety.faults import BenchFault, PartFault
 from ohmward.safety.permit import check_bypass_opening
 from ohmward.safety.positions import Positions, in_time
-from ohmward.safety.proof import Injection, judge_injection
+from ohmward.safety.proof import (
+    Connection,
+    Injection,
+    Sample,
+    holds_test_voltage,
+    judge_injection,
+)
 from ohmward.safety.rules import PositionEvent, SourceState
 from ohmward.safety.wiring import PositionWiring
 
@@ -82,6 +88,7 @@ class Tester:
         if not await source.isolate():
             source.isolated(proven=False)
             raise BenchFault("the supply's contact does not open")
+        await self._empty(position)
         try:
             await source.test()
         except (BenchFault, LinkError):
@@ -97,6 +104,18 @@ class Tester:
         source.isolated(proven=not welded)
         if welded:
             raise BenchFault("the supply's contact reads back open and conducts: it is welded")
+
+    async def _empty(self, position: str) -> None:
+        """A part that still holds the test voltage is shorted for a moment: it is below 1 V."""
+        laws, desk = self._desk.laws, self._desk
+        if abs(await self._positions.read_v()) <= 0.5 * laws.injection_rel * laws.injection_v:
+            return
+        short = self._positions.wired(position).short
+        await desk.board.move(short, make=True, voltage_v=laws.test_ceiling_v)
+        await desk.time.sleep(desk.facts.settle_s)
+        if abs(await self._positions.read_v()) > 0.5 * laws.injection_v:
+            raise BenchFault(f"the short of {position} does not make")
+        await desk.board.move(short, make=False, voltage_v=laws.test_ceiling_v)
 
     # ---- the pass at 1 V before each charge
 
@@ -121,7 +140,32 @@ class Tester:
                 await self._desk.time.sleep(self._desk.facts.settle_s)
                 await self._see_test_voltage(wired, contact.channel)
                 await self._desk.board.move(contact, make=False, voltage_v=laws.test_ceiling_v)
+        await self._hold_test_voltage(position)
+        await self._desk.source.test()
+        await self._desk.time.sleep(self.settling_s(position))
         await self._positions.event(position, PositionEvent.CHECKED)
+
+    async def _hold_test_voltage(self, position: str) -> None:
+        """Off again, the part holds the test voltage: it is there, before it gets more."""
+        began_s = self._desk.time.now_s()
+        await self._desk.source.fall()
+        volts = await self._positions.read_v()
+        samples = (
+            Sample(time_s=0.0, voltage_v=self._desk.laws.injection_v),
+            Sample(time_s=self._desk.time.now_s() - began_s, voltage_v=volts),
+        )
+        holds = holds_test_voltage(
+            self._desk.laws,
+            samples,
+            drain_ohm=self._positions.drain_ohm(),
+            capacitance_min_f=self._positions.charge(position).least_f,
+        )
+        if holds is False:
+            raise PartFault(
+                f"it does not hold {self._desk.laws.injection_v:g} V: it is open, leaks, "
+                f"or is not connected",
+                connection=Connection.ABSENT,
+            )
 
     async def _see_test_voltage(self, wired: PositionWiring, made: str) -> None:
         """The part has the test voltage, also while one of the meter's contacts is made."""
@@ -142,4 +186,7 @@ class Tester:
             raise BenchFault(f"with {made} made, the meter's other contact does not isolate")
         if found is Injection.CONDUCTS:
             raise PartFault(f"it conducts at {self._desk.laws.injection_v:g} V")
-        raise PartFault("the test voltage is not seen across it: a contact is lost")
+        raise PartFault(
+            "the test voltage is not seen across it: a contact is lost",
+            connection=Connection.ABSENT,
+        )

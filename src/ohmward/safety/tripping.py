@@ -33,10 +33,7 @@ class Down:
         """Source off at once, then every part in the path down and proven; never raises."""
         desk = self._desk
         desk.source.suspect = desk.source.suspect or suspect
-        try:
-            await desk.source.trip(inductor=self._holds_inductor())
-        except Exception as error:
-            self.because(f"the supply was not seen to go off: {error}")
+        await self._source_off()
         involved = sorted(
             name
             for name, state in desk.ledger.positions.items()
@@ -47,6 +44,8 @@ class Down:
         for name in involved:
             self._prover.isolates = name == involved[-1]
             await self._bring_down(name)
+        if desk.ledger.source is SourceState.TRIPPED_TESTING:
+            await self._source_off()
         bound_v = max(
             (self._positions.charge(name).bound_v for name in desk.ledger.on_rail),
             default=0.0,
@@ -54,6 +53,12 @@ class Down:
         await desk.source.leave_rail(bound_v=bound_v)
         if desk.ledger.source is not SourceState.ENDED_PROVEN:
             self.because("the supply is not proven off: switch it off at its mains switch")
+
+    async def _source_off(self) -> None:
+        try:
+            await self._desk.source.trip(inductor=self._holds_inductor())
+        except Exception as error:  # whatever breaks, the parts still have to come down
+            self.because(f"the supply was not seen to go off: {error}")
 
     async def _bring_down(self, position: str) -> None:
         """One part of a trip: down and proven, or given up with a reason; never raises."""

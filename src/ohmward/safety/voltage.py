@@ -108,10 +108,7 @@ class HighVoltageWarden:
                 if any(map(desk.board.made, (wired.connect, *wired.meter))):
                     suspects.append(wired.position)
                     continue
-                for contact in wired.sense:
-                    bound_v = self._positions.charge(wired.position).bound_v
-                    leak_a = bound_v / desk.wiring.divider_ohm
-                    await desk.board.move(contact, make=False, voltage_v=bound_v, current_a=leak_a)
+                await self._positions.sense(wired.position, make=False)
             for position in suspects:
                 self._down.touched.add(position)
                 await self._prover.make_safe(position)
@@ -124,8 +121,6 @@ class HighVoltageWarden:
 
         async def work() -> None:
             desk = self._desk
-            if desk.ledger.leased is not None:
-                raise LawBroken("lease", f"{desk.ledger.leased} has one already")
             if part_id:
                 desk.permit.ceiling(part_id, position)
             await self._prepare(position)
@@ -168,7 +163,8 @@ class HighVoltageWarden:
 
         async def work() -> Held:
             await self._up(hold, observer, course)
-            await self._prover.make_safe(hold.position, E.STOP)
+            course.decay = await self._prover.discharge(hold.position, E.STOP)
+            await self._prover.prove(hold.position)
             return self._held(hold, course)
 
         return await self._guarded(hold.position, work)
@@ -179,7 +175,7 @@ class HighVoltageWarden:
 
         async def work() -> Held:
             await self._up(hold, observer, course)
-            await self._prover.discharge(hold.position, E.STOP)
+            course.decay = await self._prover.discharge(hold.position, E.STOP)
             if not course.stopped:
                 await self._desk.time.sleep(recover.short_s)
                 await self._read_recovery(recover, observer)
@@ -204,6 +200,8 @@ class HighVoltageWarden:
         """This position alone at rail and voltmeter, and proven dead."""
         desk = self._desk
         desk.ledger.state_of(position)
+        if desk.ledger.leased is not None:
+            raise LawBroken("lease", f"{desk.ledger.leased} has an open lease")
         desk.ledger.expire(now_s=desk.time.now_s())
         for wired in desk.wiring.positions:
             other = wired.position
@@ -235,14 +233,18 @@ class HighVoltageWarden:
             await self._charger.run(hold, observer, course)
         except PartFault as fault:
             course.stopped = str(fault)
+            course.connection = (
+                Connection(fault.connection) if fault.connection else (course.connection)
+            )
             self._say("part stopped", hold.position, course.stopped)
         await desk.source.fall()
         self._say("off", hold.position, "")
+        if course.reached and not course.stopped:
+            await self._charger.watch_droop(hold, course)
 
     def _held(self, hold: Hold, course: Course) -> Held:
-        """The outcome; a matching decay is charge given back, and stands for charge drawn."""
-        decay = self._positions.charge(hold.position).decay
-        connection = course.connection
+        """The outcome; charge that the decay gives back stands for the charge drawn."""
+        decay, connection = course.decay, course.connection
         if connection is Connection.UNRESOLVED and decay is Decay.MATCHES:
             connection = Connection.AGREES
         self._say("proven dead", hold.position, f"connection {connection}, decay {decay}")
@@ -260,15 +262,14 @@ class HighVoltageWarden:
     async def _read_recovery(self, recover: Recover, observer: Observer) -> None:
         """Open everything, and connect the voltmeter for the moments of reading only."""
         desk, position = self._desk, recover.hold.position
-        wired = self._positions.wired(position)
         await self._positions.event(position, E.RECOVER)
         began_s = desk.time.now_s()
         known = self._positions.charge(position)
         known.bound_v = max(known.bound_v, 0.2 * recover.hold.voltage_v)  # far beyond absorption
         for read_s in recover.read_s:
-            await self._sense(position, make=False)
+            await self._positions.sense(position, make=False)
             await desk.time.sleep(max(began_s + read_s - desk.time.now_s(), 0.0))
-            await self._sense(position, make=True)
+            await self._positions.sense(position, make=True)
             volts = await self._positions.read_v()
             observation = Observation(
                 part_id=recover.hold.part_id,
@@ -285,18 +286,7 @@ class HighVoltageWarden:
                 await observer.observe(observation)
             if scope.cancelled_caught:
                 raise BenchFault("the runner does not answer")
-        await self._sense(position, make=True)
-        del wired
-
-    async def _sense(self, position: str, *, make: bool) -> None:
-        bound_v = self._positions.charge(position).bound_v
-        for contact in self._positions.wired(position).sense:
-            await self._desk.board.move(
-                contact,
-                make=make,
-                voltage_v=bound_v,
-                current_a=bound_v / self._desk.wiring.divider_ohm,
-            )
+        await self._positions.sense(position, make=True)
 
     # ---- ends
 
