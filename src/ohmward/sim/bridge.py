@@ -187,7 +187,7 @@ class Bridge:
         drive = self.drive
         if drive.bias_on:
             direct_ohm = connection.resistance_dc_ohm()
-            return drive.bias_a * direct_ohm if math.isfinite(direct_ohm) else 0.0
+            return min(drive.bias_a * direct_ohm, _OFFSET_LIMIT_V) if drive.bias_a else 0.0
         target_v = self._target_offset_v()
         if target_v:
             direct_ohm = connection.resistance_dc_ohm()

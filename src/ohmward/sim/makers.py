@@ -7,6 +7,7 @@ from typing import Any
 from ohmward.sim import noise
 from ohmward.sim.current_meter import RANGES_A, CurrentMeter
 from ohmward.sim.device import Device
+from ohmward.sim.free_responder import FreeResponder
 from ohmward.sim.handheld_meter import FIGURES as HANDHELD_FIGURES
 from ohmward.sim.handheld_meter import HandheldMeter, frame_of, line_of
 from ohmward.sim.impedance_meter import ImpedanceMeter
@@ -99,7 +100,7 @@ def make(instrument: InstrumentAt, figures: Mapping[str, Any], around: Surroundi
 _WIRING = frozenset({"channels", "stuck_open", "stuck_closed"})  # the bench has read these
 
 
-def _responder(instrument: InstrumentAt, around: Surroundings) -> Responder:
+def _responder(instrument: InstrumentAt, around: Surroundings) -> Device:
     driver = instrument.driver
     role = driver.get("role", "")
     behaviour: Behaviour = Passive()
@@ -111,6 +112,8 @@ def _responder(instrument: InstrumentAt, around: Surroundings) -> Responder:
         behaviour = PerfectScanner(around.contacts)
     elif role == "thermometer":
         behaviour = PerfectThermometer(around.room)
+    if driver.get("codec") in ("stream", "frames"):
+        return FreeResponder(driver, behaviour)
     return Responder(driver, instrument.serial_number, behaviour)
 
 

@@ -76,6 +76,8 @@ class Responder:
                 self._add(reading["ask"], self._reading(name, reading))
         for wait in self._waits():
             self._add(wait["ask"], _answering(_done(wait)))
+        # "U?" is a query even where "U{value}" would take it for a setting
+        self._rules.sort(key=lambda rule: bool(rule.form.groups))
 
     def _add(
         self,
@@ -116,9 +118,10 @@ class Responder:
         def put(now_s: float, given: Mapping[str, str]) -> tuple[str | None, float]:
             text = given["value"].strip().strip("\"'")
             if kind == "number":
-                value: Any = self._limited(table, float(text) * written)
+                number = _number_in(text)
+                value: Any = None if number is None else self._limited(table, number * written)
                 if value is None:
-                    self._refuse(-222)
+                    self._refuse(-104 if number is None else -222)
                     return None, now_s
             else:
                 value = word_in(words, text) if words else text
@@ -321,6 +324,13 @@ def channels_in(given: Mapping[str, str]) -> tuple[str, ...]:
     """The channels that a message names."""
     text = given.get("channels") or given.get("channel") or ""
     return tuple(re.findall(r"[A-Za-z0-9][A-Za-z0-9_.!-]*", text))
+
+
+def _number_in(text: str) -> float | None:
+    try:
+        return float(text)
+    except ValueError:
+        return None
 
 
 def _done(wait: Mapping[str, Any]) -> str:

@@ -54,10 +54,10 @@ class Passive:
     def read(
         self, reading: str, settings: Mapping[str, Any], channels: tuple[str, ...], now_s: float
     ) -> dict[str, Any]:
-        """What was set, under the reading's own name."""
+        """What was set, under the reading's own name; any other number is 0."""
         on = settings.get("output", "on") == "on"
         value = settings.get(reading, 0.0) if on else 0.0
-        return {**settings, reading: value, "interlock": True, "status": "ok"}
+        return {"": 0.0, **settings, reading: value, "interlock": True, "status": "ok"}
 
 
 class PerfectMeter(Passive):

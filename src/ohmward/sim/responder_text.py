@@ -44,11 +44,12 @@ class Numbers:
             return f"{value:+.6E}"
         value /= quantity(field.get("factor", 1.0))
         if form == "NR1":
-            return f"{round(value):+0{width}d}" if width else str(round(value))
+            return f"{round(value):0{width}d}" if width else str(round(value))
         if form == "NR2":
             decimals = field.get("decimals", self._table.get("decimals"))
             decimals = 6 if decimals is None else decimals
-            return f"{value:+0{width}.{decimals}f}" if width else f"{value:.{decimals}f}"
+            plus = "+" if field.get("plus", self._table.get("plus")) else ""
+            return f"{value:{plus}0{width}.{decimals}f}" if width else f"{value:{plus}.{decimals}f}"
         digits = width - 7 if width else 6  # sign, figure, point, E, sign, two figures
         plus = field.get("plus", self._table.get("plus", True))
         return f"{value:+.{digits}E}" if plus else f"{value: .{digits}E}"
@@ -72,7 +73,7 @@ class ReplyWriter:
         """The reply without its termination; a value that nobody has is sent as not a number."""
         parts: list[str] = []
         for field in self._fields:
-            value = values.get(field["name"], NOT_A_NUMBER)
+            value = values.get(field["name"], values.get("", NOT_A_NUMBER))
             several = value if isinstance(value, tuple) and field.get("repeats") else (value,)
             parts += [str(field.get("label", "")) + self._field(each, field) for each in several]
         return f"{self._start}{self._separator.join(parts)}{self._end}"
@@ -86,6 +87,8 @@ class ReplyWriter:
         if kind == "channels":
             channels = value if isinstance(value, tuple) else ()
             return f"(@{','.join(channels)})"
+        if kind == "flags":
+            return "0"
         if kind in ("switch", "word"):
             return self._word(value, field, kind)
         if kind == "number":
@@ -96,6 +99,8 @@ class ReplyWriter:
         words = field.get("words") or ({"on": "1", "off": "0"} if kind == "switch" else {})
         if isinstance(value, bool):
             value = "on" if value else "off"
+        if kind == "word" and value not in words:
+            value = next(iter(words), value)  # nothing has been said of it: the first word
         return short_of(str(words.get(value, value)))
 
     def _number(self, value: float, field: Mapping[str, Any]) -> str:
