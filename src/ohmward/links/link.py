@@ -356,9 +356,11 @@ class Link:
     async def _greet(self, channel: Channel) -> bytes:
         settings = self.settings
         self._unanswered += 1
-        return await self._waiter.query(
+        answer = await self._waiter.query(
             channel, self._hello.query + settings.write_termination, settings.timeout_s
         )
+        self._free_at_s = trio.current_time() + settings.gap_s
+        return answer
 
     async def _drop(self) -> None:
         channel, self._channel = self._channel, None
