@@ -5,6 +5,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from ohmward.errors import OhmwardError, Problems
+from ohmward.protocol.check import check_driver
 from ohmward.run.folder import Sources
 from ohmward.sequence.brief import Brief
 from ohmward.sequence.load import load_sequence
@@ -57,6 +58,8 @@ def prepare(sequence: str | Path, *, bench: str | Path, parts: str | Path) -> Pr
     loaded_sequence = load_sequence(sequence_path, problems)
     loaded_bench = load_bench(find_file(str(bench), "simulators"), problems)
     drivers = load_drivers(loaded_bench, problems) if loaded_bench else None
+    for driver in (drivers or {}).values():
+        check_driver(driver, problems)
     loaded_parts = load_parts(parts_path, loaded_bench, problems)
     brief = None
     if loaded_sequence is not None:

@@ -7,6 +7,7 @@ import trio
 
 from ohmward.api.simulation import build_bench
 from ohmward.errors import OhmwardError, Problems
+from ohmward.protocol.check import check_driver
 from ohmward.setup.bench import Bench, load_bench
 from ohmward.setup.bench_drivers import load_drivers
 from ohmward.setup.driver import Driver
@@ -24,6 +25,8 @@ def serve(bench: str, *, parts: str | None, seed: int, as_json_line: bool) -> No
     problems = Problems()
     loaded = load_bench(find_file(bench, "simulators"), problems)
     drivers = load_drivers(loaded, problems) if loaded else None
+    for driver in (drivers or {}).values():
+        check_driver(driver, problems)
     rows = load_parts(find_file(parts, "simulators", ".csv"), loaded, problems) if parts else ()
     problems.raise_if_any()
     if loaded is None or drivers is None:
