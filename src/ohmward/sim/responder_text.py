@@ -1,6 +1,5 @@
 """How a responder writes: numbers, words and whole replies, as a driver's data lays them out."""
 
-import math
 from collections.abc import Mapping
 from typing import Any
 
@@ -111,13 +110,8 @@ class ReplyWriter:
                     return str(text)
         suffixes = field.get("suffixes")
         if suffixes:
-            text, factor = min(
-                suffixes.items(), key=lambda item: abs(_decades(value, float(item[1])) - 1.0)
-            )
-            return self._numbers.write(value / float(factor), field) + str(text)
+            by_factor = sorted((float(factor), text) for text, factor in suffixes.items())
+            fits = [each for each in by_factor if abs(value) >= each[0]]
+            factor, text = fits[-1] if fits else by_factor[0]
+            return self._numbers.write(value / factor, field) + text
         return self._numbers.write(value, field) + str(field.get("suffix", ""))
-
-
-def _decades(value: float, factor: float) -> float:
-    """How many decades a number is above the unit that it would be written in."""
-    return math.log10(abs(value) / factor) if value else 1.0
