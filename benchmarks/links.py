@@ -11,8 +11,10 @@ import multiprocessing
 import os
 import socket
 import statistics
+import struct
 import sys
 import time
+import tty
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from functools import partial
@@ -20,8 +22,9 @@ from functools import partial
 import pyvisa
 import trio
 from pyvisa.constants import InterfaceType
+from pyvisa_py.serial import SerialSession
 from pyvisa_py.sessions import Session
-from pyvisa_py.tcpip import TCPIPSocketSession
+from pyvisa_py.tcpip import TCPIPInstrSession, TCPIPSocketSession
 
 from ohmward.links.link import Hello, Link
 from ohmward.links.sessions import register_sessions
@@ -30,6 +33,12 @@ from ohmward.links.thread_waiter import ThreadWaiter
 
 REPLY = b"+1.234567E-07,+1.000000E-03,0,+1.0\n"
 TOGETHER = 8
+
+PYVISA_PY = {
+    (InterfaceType.tcpip, "SOCKET"): TCPIPSocketSession,
+    (InterfaceType.tcpip, "INSTR"): TCPIPInstrSession,
+    (InterfaceType.asrl, "INSTR"): SerialSession,
+}
 
 
 def serve(listener: socket.socket, delay_s: float) -> None:
@@ -41,6 +50,44 @@ def serve(listener: socket.socket, delay_s: float) -> None:
             answer(connection, delay_s)
             os._exit(0)
         connection.close()
+
+
+def serve_hislip(listener: socket.socket) -> None:
+    """Answer as a HiSLIP instrument with two connections at a time (IVI-6.1)."""
+    while True:
+        sync, _ = listener.accept()
+        hear(sync)
+        sync.sendall(frame(1, 0x0100 << 16 | 1))
+        other, _ = listener.accept()
+        hear(other)
+        other.sendall(frame(18, 0))
+        other.sendall(frame(16, 0, hear(other)[2]))
+        for connection in (sync, other):
+            connection.setsockopt(socket.IPPROTO_TCP, socket.TCP_NODELAY, 1)
+        try:
+            while True:
+                _, number, _ = hear(sync)
+                sync.sendall(frame(7, number, REPLY))
+        except (OSError, struct.error):
+            sync.close()
+            other.close()
+
+
+def frame(kind: int, number: int, payload: bytes = b"") -> bytes:
+    """One HiSLIP message."""
+    return struct.pack("!2sBBIQ", b"HS", kind, 0, number, len(payload)) + payload
+
+
+def hear(connection: socket.socket) -> tuple[int, int, bytes]:
+    """One HiSLIP message; struct.error once the other side has left."""
+    _, kind, _, number, length = struct.unpack("!2sBBIQ", connection.recv(16, socket.MSG_WAITALL))
+    return kind, number, connection.recv(length, socket.MSG_WAITALL) if length else b""
+
+
+def serve_line(master: int) -> None:
+    """Answer on a pseudo-terminal."""
+    while os.read(master, 4096):
+        os.write(master, REPLY)
 
 
 def answer(connection: socket.socket, delay_s: float) -> None:
@@ -56,22 +103,45 @@ def answer(connection: socket.socket, delay_s: float) -> None:
 
 
 @contextmanager
+def served(serve_it: Callable[..., None], *arguments: object) -> Iterator[None]:
+    """A process that serves, for as long as it is wanted."""
+    process = multiprocessing.get_context("fork").Process(target=serve_it, args=arguments)
+    process.start()
+    try:
+        yield
+    finally:
+        process.terminate()
+        process.join()
+
+
+@contextmanager
 def instrument(delay_s: float) -> Iterator[str]:
-    """A served instrument; gives its address."""
-    with socket.create_server(("127.0.0.1", 0)) as listener:
-        fork = multiprocessing.get_context("fork")
-        process = fork.Process(target=serve, args=(listener, delay_s))
-        process.start()
-        try:
-            yield f"TCPIP::127.0.0.1::{listener.getsockname()[1]}::SOCKET"
-        finally:
-            process.terminate()
-            process.join()
+    """An instrument on a raw socket; gives its address."""
+    with socket.create_server(("127.0.0.1", 0)) as listener, served(serve, listener, delay_s):
+        yield f"TCPIP::127.0.0.1::{listener.getsockname()[1]}::SOCKET"
+
+
+@contextmanager
+def hislip_instrument() -> Iterator[str]:
+    """An instrument that speaks HiSLIP; gives its address."""
+    with socket.create_server(("127.0.0.1", 0)) as listener, served(serve_hislip, listener):
+        yield f"TCPIP::127.0.0.1::hislip0,{listener.getsockname()[1]}::INSTR"
+
+
+@contextmanager
+def serial_instrument() -> Iterator[str]:
+    """An instrument on a serial line; gives its address."""
+    master, slave = os.openpty()
+    tty.setraw(slave)
+    with served(serve_line, master):
+        yield f"ASRL{os.ttyname(slave)}::INSTR"
+    os.close(master)
+    os.close(slave)
 
 
 def bare(address: str, count: int) -> float:
     """Seconds per query of a plain PyVISA loop."""
-    Session._session_classes[(InterfaceType.tcpip, "SOCKET")] = TCPIPSocketSession
+    Session._session_classes.update(PYVISA_PY)
     resource = pyvisa.ResourceManager("@py").open_resource(
         address, read_termination="\n", write_termination="\n"
     )
@@ -140,6 +210,22 @@ def main() -> None:
             partial(linked, address, 2000),
             rounds,
             0.5,
+        )
+    with hislip_instrument() as address:
+        compare(
+            "HiSLIP, no delay, against bare PyVISA",
+            partial(bare, address, 2000),
+            partial(linked, address, 2000),
+            rounds,
+            0.5,
+        )
+    with serial_instrument() as address:
+        compare(
+            "serial, no delay, against bare PyVISA",
+            partial(bare, address, 1000),
+            partial(linked, address, 1000),
+            rounds,
+            0.9,
         )
     with instrument(0.01) as address:
         compare(

@@ -98,6 +98,7 @@ async def every_reply_is_its_own(link, script, plan) -> int:
 
 
 class TestInVirtualTime:
+    @pytest.mark.slow
     @settings(max_examples=150, deadline=None)
     @given(plan=exchanges)
     def test_any_order_of_faults(self, worlds, plan):

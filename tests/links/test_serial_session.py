@@ -14,7 +14,7 @@ import pyvisa
 import serial
 import trio
 
-from ohmward.errors import LinkError, LinkLost, LinkTimeout
+from ohmward.errors import LinkError, LinkLost, LinkTimeout, WrongIdentity
 from ohmward.links.link import Hello, Link
 from ohmward.links.serial_session import SerialSession
 from ohmward.links.sessions import register_sessions
@@ -184,6 +184,36 @@ def test_an_identity_that_answers_an_earlier_query_is_followed_by_a_drain(line, 
         await asks_rightly(link)
 
     run(line, manager, talk)
+
+
+def test_a_reply_later_than_two_timeouts_is_not_another_instrument(line, manager):
+    """The first reply comes where the second session's identity should, the others after it."""
+    identity = b"GENERIC,SCRIPTED,17,1.0\n"
+
+    async def talk(link):
+        line.script.once(b"Q1?", [(0.7, b"1\n")])
+        line.script.once(b"*IDN?", [(0.15, identity)])
+        line.script.once(b"*IDN?", [(0.45, identity)])
+        with pytest.raises(LinkTimeout):
+            await link.query(b"Q1?")
+        await asks_rightly(link)
+
+    run(line, manager, talk)
+    assert line.script.heard.count(b"*IDN?") == 4
+
+
+def test_another_instrument_on_the_line_gets_no_command(line, manager):
+    async def talk(link):
+        line.script.once(b"Q1?", [])
+        with pytest.raises(LinkTimeout):
+            await link.query(b"Q1?")
+        line.script.answer = lambda _line: [(0.0, b"GENERIC,SCRIPTED,18,1.0\n")]
+        for _ in range(2):
+            with pytest.raises(WrongIdentity, match="18"):
+                await link.query(b"VOLT 1000?")
+
+    run(line, manager, talk)
+    assert set(line.script.heard) == {b"*IDN?", b"Q1?"}
 
 
 def test_half_a_reply_is_never_a_reply(line, manager):

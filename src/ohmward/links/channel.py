@@ -66,6 +66,8 @@ class Channel:
         """Nothing marks the end of a message."""
         self.renewable = isinstance(resource, TCPIPSocket)
         """A new session is sure to hold nothing that the old one was still owed."""
+        self.carries_over = isinstance(resource, SerialInstrument)
+        """The line outlives the session, and with it a reply that is still owed."""
         session = getattr(self.library, "sessions", {}).get(self.handle)
         self.patient: PatientSession | None = (
             session if isinstance(session, PatientSession) else None

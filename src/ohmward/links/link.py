@@ -77,6 +77,7 @@ class Link:
         self.recoveries = 0
         """Counts up with every recovery: what was set before it may be forgotten since."""
         self._unanswered = 0
+        self._owed = False
 
     @property
     def dirty(self) -> bool:
@@ -129,7 +130,7 @@ class Link:
         try:
             channel = await self._ready()
             self._delimited(channel)
-            self._dirt = "interrupted in the middle of a query"
+            self._dirt, self._owed = "interrupted in the middle of a query", True
             # What the session then still owes could come after its identity, and a second
             # identity query could be answered by the first one's late reply.
             self._reopen = channel.renewable or message == self._hello.query
@@ -138,6 +139,7 @@ class Link:
                 message + self.settings.write_termination,
                 timeout_s or self.settings.timeout_s,
             )
+            self._owed = False
             self._nothing_left(channel, reply)
             self._dirt, self._reopen = "", False
             return reply
@@ -159,9 +161,10 @@ class Link:
             if self._dirt or channel is None:
                 channel = await self._ready()
             if not self.settings.free_running:
-                self._dirt = "interrupted while a message was awaited"
+                self._dirt, self._owed = "interrupted while a message was awaited", True
+                self._reopen = channel.renewable
             message = await self._waiter.read(channel, timeout_s or self.settings.timeout_s)
-            self._dirt = ""
+            self._dirt, self._owed, self._reopen = "", False, False
             return message
         except LinkError as error:
             if not (self.settings.free_running and isinstance(error, LinkTimeout)):
@@ -209,6 +212,10 @@ class Link:
             self._free_at_s = trio.current_time() + self.settings.gap_s
         self._turn.release()
 
+    async def _keep_the_gap(self) -> None:
+        if self.settings.gap_s and self._free_at_s > trio.current_time():
+            await trio.sleep_until(self._free_at_s)
+
     # --- trust ---
 
     async def _ready(self) -> Channel:
@@ -225,8 +232,7 @@ class Link:
                     "the peer closed" if self._reopen else "bytes came that nobody asked for"
                 )
                 await self._recover()
-        if self.settings.gap_s and self._free_at_s > trio.current_time():
-            await trio.sleep_until(self._free_at_s)
+        await self._keep_the_gap()
         assert self._channel is not None
         return self._channel
 
@@ -248,7 +254,7 @@ class Link:
         if self._ended is None and self._channel is not None:
             self._dirt = self._dirt and str(error)
             if isinstance(error, ReplyMalformed):  # it came: nothing is owed any more
-                self._reopen = False
+                self._reopen = self._owed = False
             elif isinstance(error, LinkLost):
                 self._reopen = True
 
@@ -268,7 +274,7 @@ class Link:
             error.add_note(f"the link at {self.address} was dirty: {dirt}")
             await self._drop()
             raise
-        self._dirt, self._reopen = "", False
+        self._dirt, self._reopen, self._owed = "", False, False
         self.recoveries += 1
 
     async def _resynchronised(self) -> bool:
@@ -321,7 +327,7 @@ class Link:
         if not await self._drained(channel):
             raise ReplyMalformed("the instrument never stops talking", address=self.address)
         identity = await self._greet(channel) if self._hello.query else b""
-        self._recognise(identity)
+        self._recognise(channel, identity)
         if self._unanswered > 1 and not await self._drained(channel):
             # an earlier identity query went unanswered: on a line that outlives its session
             # (serial, a gateway) its answer may have been this one, and another may follow
@@ -335,10 +341,15 @@ class Link:
         self._dirt, self._reopen, self._ended = "", False, None
         return identity
 
-    def _recognise(self, identity: bytes) -> None:
+    def _recognise(self, channel: Channel, identity: bytes) -> None:
         if not self._hello.query:
             return
         if self._identity is not None and identity != self._identity:
+            if self._owed and channel.carries_over:
+                self._owed = False  # once: after that it is another instrument
+                raise ReplyMalformed(
+                    f"a late reply came for the identity: {identity[:40]!r}", address=self.address
+                )
             raise WrongIdentity(
                 f"expected {self._identity!r} again, found {identity[:200]!r}",
                 address=self.address,
@@ -355,6 +366,7 @@ class Link:
 
     async def _greet(self, channel: Channel) -> bytes:
         settings = self.settings
+        await self._keep_the_gap()
         self._unanswered += 1
         answer = await self._waiter.query(
             channel, self._hello.query + settings.write_termination, settings.timeout_s
