@@ -259,3 +259,29 @@ def test_every_simulator_that_a_shipped_driver_names_exists_and_answers_its_iden
         identity = driver.get("identity", {})
         start = identity.get("starts_with") or "".join(identity.get("fields", [""])[:1])
         assert start.encode() in answer, path
+
+
+def test_instruments_that_share_an_address_each_get_what_is_meant_for_them() -> None:
+    shared = [
+        InstrumentAt(name=one.name, address=METER, simulator=one.simulator, serial_number="1")
+        for one in INSTRUMENTS
+    ]
+    made = SimulatedBench(None, shared, POSITIONS, ROWS, seed=4, models=MODELS, faulty=("room",))
+    assert made.named["meter"] is made.named["switch"] is made.layers["room"]
+    bench = Bench(made, (METER,))
+    ask = bench.meter.query
+    assert ask("*IDN?") == "GENERIC,IMPEDANCE-METER,1,1.0"
+    assert ask("ROUT:CLOS (@101,201);*OPC?;CLOS:STAT?") == "1;(@101,201)"
+    assert float(ask("MEAS:TEMP?")) == pytest.approx(23.0, abs=0.21)
+    x = made.truth("C1", "reactance_ohm", frequency_hz=1e3)
+    assert bench.read().imag == pytest.approx(x, rel=2e-3)
+    bench.meter.write("NONSENSE")
+    assert ask("SYST:ERR?").startswith("-113,")
+    bench.manager.close()
+    lines = {"role": "thermometer", "codec": "lines", "link": {"write_termination": "\r"}}
+    odd = InstrumentAt(name="odd", address=METER, driver=lines)
+    with pytest.raises(ValueError, match="alike"):
+        SimulatedBench(None, (*shared, odd), POSITIONS, (), seed=4)
+    handheld = InstrumentAt(name="h", address=METER, simulator="impedance-meter-handheld-stream")
+    with pytest.raises(ValueError, match="cannot share"):
+        SimulatedBench(None, (*shared, handheld), POSITIONS, (), seed=4)

@@ -11,8 +11,11 @@ from ohmward.sim.makers import SIMULATORS, InstrumentAt, Surroundings, make
 from ohmward.sim.open_ports import OpenCircuit
 from ohmward.sim.parts import PhysicalPart
 from ohmward.sim.physical import Physical, read_physical
+from ohmward.sim.responder import Responder
 from ohmward.sim.room import SimulatedRoom
 from ohmward.sim.scanner import Contacts
+from ohmward.sim.scpi_device import ScpiDevice
+from ohmward.sim.shared_link import SharedLink
 from ohmward.sim.terminals_dc import Circuit
 from ohmward.sim.tray import Models, fill
 
@@ -68,12 +71,27 @@ class SimulatedBench:
             room=self.room,
             circuit=circuit or OpenCircuit(),
         )
+        by_address: dict[str, list[InstrumentAt]] = {}
         for instrument in instruments:
-            device = make(instrument, self._figures(instrument.name), around)
-            if instrument.name in faulty:
-                device = self.layers[instrument.name] = FaultLayer(device, seed)
-            self.named[instrument.name] = device
-            self.devices.setdefault(instrument.address, device)
+            by_address.setdefault(instrument.address, []).append(instrument)
+        for address, neighbours in by_address.items():
+            device = self._device(neighbours, around)
+            if any(one.name in faulty for one in neighbours):
+                device = layer = FaultLayer(device, seed)
+                self.layers.update({one.name: layer for one in neighbours})
+            self.devices[address] = device
+            self.named.update({one.name: device for one in neighbours})
+
+    def _device(self, neighbours: Sequence[InstrumentAt], around: Surroundings) -> Device:
+        """The core behind one address, which several instruments may share."""
+        made = [make(one, self._figures(one.name), around) for one in neighbours]
+        if len(made) == 1:
+            return made[0]
+        sharing = [one for one in made if isinstance(one, ScpiDevice | Responder)]
+        if len(sharing) != len(made):
+            names = ", ".join(one.name for one in neighbours)
+            raise ValueError(f"{names} cannot share {neighbours[0].address}")
+        return SharedLink(sharing)
 
     def _contacts(
         self, instruments: Sequence[InstrumentAt], positions: Mapping[str, Sequence[str]]

@@ -238,10 +238,9 @@ class Responder:
             return
         if self._echo:
             self._send(text.encode("latin-1") + self._ends_reply)
-        units = [unit.strip().lstrip(":") for unit in text.split(";")] if self._is_scpi else [text]
         replies = []
         self._refused = False
-        for unit in units:
+        for unit in self._units(text):
             reply = self._obey(unit)
             if reply is not None:
                 replies.append(reply)
@@ -253,6 +252,17 @@ class Responder:
             self._send(self._acknowledge + self._ends_reply)
         if self._prompt:
             self._send(self._prompt)
+
+    def _units(self, text: str) -> list[str]:
+        """The commands of one line."""
+        if not self._is_scpi:
+            return [text]
+        return [unit.strip().lstrip(":") for unit in text.split(";")]
+
+    def understands(self, message: bytes) -> bool:
+        """Whether the driver says something of every command of a message."""
+        units = self._units(message.decode("latin-1").strip())
+        return all(any(rule.form.fullmatch(unit) for rule in self._rules) for unit in units)
 
     def _obey(self, unit: str) -> str | None:
         for rule in self._rules:

@@ -113,5 +113,5 @@ class ReplyWriter:
             by_factor = sorted((float(factor), text) for text, factor in suffixes.items())
             fits = [each for each in by_factor if abs(value) >= each[0]]
             factor, text = fits[-1] if fits else by_factor[0]
-            return self._numbers.write(value / factor, field) + text
+            return self._numbers.write(value / factor, field) + str(text)
         return self._numbers.write(value, field) + str(field.get("suffix", ""))

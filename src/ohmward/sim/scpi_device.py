@@ -117,6 +117,11 @@ class ScpiDevice:
                 self.status.note(-363)
         self._advance(now_s)
 
+    def understands(self, message: bytes) -> bool:
+        """Whether every command of a message is known here."""
+        units = self.tree.compile(message)
+        return not any(isinstance(unit, Refusal) and unit.error.number == -113 for unit in units)
+
     def due_s(self) -> float | None:
         """When the next reply is there, if one is on its way."""
         if self._output:

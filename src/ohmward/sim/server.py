@@ -47,7 +47,12 @@ async def serve(
     clock = BenchClock(speed)
     addresses: dict[str, str] = {}
     async with trio.open_nursery() as nursery:
+        served: dict[int, str] = {}
         for name, device in bench.named.items():
+            first = served.setdefault(id(device), name)
+            if first != name:  # they share one link
+                addresses[name] = addresses[first]
+                continue
             link, port = links.get(name, "socket"), ports.get(name, 0)
             if link == "serial":
                 path = await nursery.start(SerialPort(device, clock).listen)
