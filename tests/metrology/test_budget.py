@@ -12,6 +12,7 @@ from ohmward.metrology.budget import (
     impedance_budget,
     leakage_budget,
 )
+from ohmward.metrology.coverage import coverage_factor
 from ohmward.metrology.errors import BadCovariance
 from ohmward.metrology.uncertain import Stated, UncertainImpedance
 
@@ -80,11 +81,10 @@ def test_the_end_gauge_of_the_guide() -> None:
     found = budget_of(50000838, "nm", sources)
     assert found.u == pytest.approx(32, abs=0.5)
     assert int(found.degrees) == 16
-    # k of a normal distribution for 99 % is 2.5758; the guide takes t99(16) = 2.92 of u rounded
-    # to 32 nm, which is 93 nm
-    at_99 = budget_of(50000838, "nm", sources, k_normal=2.5758293)
-    assert at_99.k == pytest.approx(2.92, abs=0.015)
-    assert at_99.k * 32 == pytest.approx(93, abs=0.5)
+    # k of a normal distribution for 99 % is 2.5758; the guide cuts ν to 16 and takes t99 = 2.92
+    # of u rounded to 32 nm, which is 93 nm
+    assert coverage_factor(int(found.degrees), 2.5758293) == pytest.approx(2.92, abs=0.005)
+    assert found.u * 2.92 == pytest.approx(93, abs=1)
 
 
 def test_leakage_sources_against_their_laws() -> None:
