@@ -159,6 +159,10 @@ class Bench:
         """Change something once, as soon as the condition holds."""
         self._when.append((condition, change))
 
+    def at(self, time_s: float, change: Callable[["Bench"], None]) -> None:
+        """Change something at an instant."""
+        self._script.append((time_s, change))
+
     def above(self, volts: float, change: Callable[["Bench"], None], after_s: float = 0.0) -> None:
         """Change something ``after_s`` after the part at position 1 has passed this voltage."""
 

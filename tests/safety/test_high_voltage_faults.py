@@ -9,6 +9,8 @@ from dataclasses import dataclass
 
 import pytest
 import trio
+from hypothesis import given, settings
+from hypothesis import strategies as st
 from tests.safety.rc_bench import Bench
 from tests.safety.test_high_voltage import Log, bench_of, virtual, warden_of
 
@@ -344,3 +346,70 @@ def test_after_a_part_fault_the_other_position_goes_on():
 
     virtual(main)
     assert bench.unlawful == []
+
+
+# ---- any fault at any time
+
+ANY = {
+    "interlock opens": put(enclosure_closed=False),
+    "supply trips": put(tripped=True),
+    "output goes off": put(on=False),
+    "supply hangs": put(supply_hangs=True),
+    "supply ignores OFF": put(obeys_off=False),
+    "supply ignores OFF and lies": put(obeys_off=False, lies_about_off=True),
+    "sense breaks": put(sense_broken=True),
+    "contact is lost": lost,
+    "scanner dies": put(scanner_dead=True),
+    "part shorts": leak(1.0),
+    "part leaks": leak(1e6),
+    **{
+        f"relay {channel} is stuck {stuck}": relay(channel, stuck)
+        for channel in ("1", "2", "101", "102", "103", "104", "106", "107")
+        for stuck in ("made", "broken")
+    },
+}
+
+
+@pytest.mark.slow
+@settings(max_examples=250, deadline=None, derandomize=True)
+@given(
+    fault=st.sampled_from(sorted(ANY)),
+    second=st.one_of(st.none(), st.sampled_from(sorted(ANY))),
+    farad=st.sampled_from([10e-9, 100e-9, 1e-6, 4.7e-6, 47e-6]),
+    at_s=st.floats(0.0, 40.0),
+    later_s=st.floats(0.0, 10.0),
+)
+def test_one_or_two_faults_at_any_instant(fault, second, farad, at_s, later_s):
+    """No end but proven or unproven, and proven means dead; the supply never above the permit."""
+    bench, log = bench_of(farad), Log()
+    bench.at(at_s, ANY[fault])
+    if second is not None:
+        bench.at(at_s + later_s, ANY[second])
+    hold = Hold(
+        part_id="C1", position="1", voltage_v=400.0, ramp_v_per_s=100.0, soak_s=10.0, every_s=2.0
+    )
+    outcomes: list[Outcome] = []
+
+    async def main() -> None:
+        warden = warden_of(bench, log, farad)
+        held, raised = None, None
+        try:
+            await warden.start()
+            held = await warden.hold(hold, log)
+        except OhmwardError as error:
+            raised = error
+        ending = await warden.stop()
+        ledger = warden._desk.ledger
+        outcomes.append(Outcome(held, raised, ending, ledger.positions["1"], ledger.source))
+
+    virtual(main)
+    assert bench.highest_v <= 400.0 * (1 + 1e-9)
+    outcome = outcomes[0]
+    if outcome.ending.proven:
+        assert bench.parts["1"].volts <= 1.0
+        assert not bench.on or bench.tripped
+        assert outcome.source is SourceState.ENDED_PROVEN
+    else:
+        assert outcome.ending.reasons
+    if outcome.position in {PositionState.DEAD, PositionState.ENDED_PROVEN}:
+        assert bench.parts["1"].volts <= 1.0

@@ -55,11 +55,6 @@ def charge_drawn_c(samples: Sequence[tuple[float, float]]) -> float:
     return total
 
 
-def charge_from_slope_c(*, capacitance_f: float, slope_v_per_s: float, time_s: float) -> float:
-    """Charge by C·dV/dt over a time (C)."""
-    return capacitance_f * slope_v_per_s * time_s
-
-
 def judge_charge(
     laws: Laws,
     *,
@@ -217,11 +212,23 @@ def judge_decay(
         resolution_v=resolution_v,
     ):
         return Decay.UNRESOLVED
+    fastest_s = laws.decay_low * resistance_ohm * capacitance_min_f
+    if _jumps(samples, fastest_s, least_v=max(laws.dead_v, 10.0 * resolution_v)):
+        return Decay.INSTANT
     found_s = time_constant_s(samples, least_v=floor)
     if found_s > slowest_s:
         return Decay.STAYS
-    fastest_s = laws.decay_low * resistance_ohm * capacitance_min_f
     return Decay.MATCHES if found_s >= fastest_s else Decay.INSTANT
+
+
+def _jumps(samples: Sequence[Sample], fastest_s: float, *, least_v: float) -> bool:
+    """Whether anywhere on the way down the voltage falls faster than the part can: lost there."""
+    return any(
+        abs(before.voltage_v) > least_v
+        and not abs(after.voltage_v)
+        >= 0.9 * abs(before.voltage_v) * exp(-(after.time_s - before.time_s) / fastest_s)
+        for before, after in pairwise(samples)
+    )
 
 
 def _too_slow(samples: Sequence[Sample], slowest_s: float, floor: float) -> bool:
