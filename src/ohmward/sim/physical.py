@@ -5,6 +5,7 @@ write, so that a mistake in one cannot hide in the other. Numbers are in SI unit
 the key.
 """
 
+import math
 import tomllib
 from collections.abc import Mapping
 from dataclasses import dataclass, field, fields
@@ -31,6 +32,15 @@ class PartModel:
     All kinds: ``esl_h`` in series, ``stray_f`` across; ``temperature_per_k`` of the value.
     ``spread`` is the standard deviation of the value over the marked tolerance, and no part is
     further off than ``spread_most`` of the tolerance.
+
+    Under voltage: ``leakage_per_k`` in the exponent of leakage; ``absorption`` is the share of
+    the voltage that comes back after 15 min of charge, a short of 10 s and 15 min of rest,
+    ``absorption_exponent`` that of charging current over time; ``breakdown_rated`` times the
+    rated voltage breaks it down (0: never); ``heals`` says that a breakdown clears itself the
+    first times. An oxide has ``ionic_s``: U_R·C over it is its current at the voltage up to
+    which it is formed; ``forming_charge`` times C is the charge that forms one volt more.
+    ``warm_k_w`` is how much warmer a watt makes the part in the end, ``warm_s`` how soon,
+    ``vents_c`` the temperature at which it opens (0: never).
     """
 
     kind: str
@@ -52,15 +62,29 @@ class PartModel:
     winding_ohm_h: float = 0.0
     winding_least_ohm: float = 0.0
     self_resonance_hz_h: float = 0.0
+    leakage_per_k: float = math.log(10) / 60  # τ at 25 °C over τ at 85 °C, makers' tables
+    absorption: float = 0.0
+    absorption_exponent: float = 1.0
+    breakdown_rated: float = 0.0
+    heals: bool = False
+    ionic_s: float = 0.0
+    forming_charge: float = 0.0
+    warm_k_w: float = 0.0
+    warm_s: float = 60.0
+    vents_c: float = 0.0
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
 class PartTruth:
-    """What one part of the lot really is: its model, its fault and what overrides the draw."""
+    """What one part of the lot really is: its model, its fault and what overrides the draw.
+
+    ``clears`` are weak spots that clear themselves, each at a voltage over the rated one.
+    """
 
     model: str
     fault: str = ""
     severity: float = 1.0
+    clears: tuple[float, ...] = ()
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
