@@ -100,7 +100,8 @@ class ScpiDevice:
 
     def receive(self, data: bytes, now_s: float) -> None:
         """Take bytes; every line is a program message."""
-        self._advance(now_s)
+        if self._running is not None or self._completion_asked:
+            self._advance(now_s)
         if self.message_based and data:
             self._interrupt()
         if self._running is None:
@@ -135,7 +136,9 @@ class ScpiDevice:
 
     def take(self, now_s: float) -> bytes:
         """Every reply byte that is there by now."""
-        self._advance(now_s)
+        running = self._running
+        if running is not None and running.due_s <= now_s:
+            self._advance(now_s)
         if not self._output:
             return b""
         data = bytes(self._output)
