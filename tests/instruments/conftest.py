@@ -98,6 +98,8 @@ class MemoryLink:
         self.dirty = True
 
     async def recover(self) -> None:
+        if not self.dirty:
+            return
         if self.gone:
             await trio.sleep(60.0)
             raise LinkError("beyond its budget")

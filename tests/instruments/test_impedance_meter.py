@@ -6,7 +6,7 @@ from pathlib import Path
 from typing import Any
 
 import pytest
-from hypothesis import HealthCheck, given, settings
+from hypothesis import HealthCheck, example, given, settings
 from hypothesis import strategies as st
 
 from ohmward.errors import InstrumentRefused, LinkError, Problems, WrongIdentity
@@ -299,6 +299,23 @@ def test_beyond_the_limits_nothing_of_it_is_sent(
     virtually(work)
 
 
+def test_what_was_taken_of_a_refused_point_is_not_taken_for_the_point_before(
+    meter: ImpedanceMeter, peer: Meter, virtually: Any
+) -> None:
+    async def work() -> None:
+        await prepared(meter)
+        await meter.set_point(Point(frequency_hz=1e3, level_v=0.5))
+        peer.deaf.add("VOLT")
+        with pytest.raises(InstrumentRefused):
+            await meter.set_point(Point(frequency_hz=1e4, level_v=0.2))
+        peer.deaf.clear()
+        assert float(peer.state["FREQ"]) == 1e4
+        await meter.set_point(Point(frequency_hz=1e3, level_v=0.5))
+        assert float(peer.state["FREQ"]) == 1e3
+
+    virtually(work)
+
+
 def test_what_falls_is_set_before_what_rises(
     meter: ImpedanceMeter, peer: Meter, virtually: Any
 ) -> None:
@@ -398,7 +415,9 @@ def test_after_a_fault_all_is_set_again_before_the_next_reading(
         link.faults[len(link.sent) + 1] = fault
         assert (await meter.read()).status is status
         peer.restart()
+        before = len(link.sent)
         reading = await meter.read()
+        assert link.sent[before] == b"*CLS"  # greeted anew, as after opening
         assert reading.status is Status.OK
         assert float(peer.state["FREQ"]) == 1e4
         assert (reading.level_v, reading.bias_v) == (0.5, 2.0)
@@ -495,6 +514,7 @@ KINDS = [
     faults=st.dictionaries(st.integers(1, 120), st.sampled_from(KINDS), max_size=12),
     visits=st.lists(st.sampled_from(POINTS), min_size=1, max_size=5),
 )
+@example(faults={1: "late", 57: "previous", 24: "late"}, visits=[POINTS[0], POINTS[1], POINTS[0]])
 @settings(max_examples=200, suppress_health_check=[HealthCheck.function_scoped_fixture])
 def test_whatever_happens_on_the_link_no_wrong_number_comes_out(
     link_to: Callable[[Any], Any],

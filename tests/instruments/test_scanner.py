@@ -27,6 +27,9 @@ class Relays:
     def handle(self, line: bytes) -> bytes | None:
         text = line.decode("ascii")
         self.history.append(text)
+        if text == "*CLS":
+            self.errors.clear()
+            return None
         if text == "*OPC?":
             return b"1"
         if text == "SYST:ERR?":

@@ -23,7 +23,7 @@ class Room:
         pass
 
     def handle(self, line: bytes) -> bytes | None:
-        return {b"MEAS:TEMP?": self.temperature, b"MEAS:HUM?": self.humidity}[line]
+        return {b"MEAS:TEMP?": self.temperature, b"MEAS:HUM?": self.humidity}.get(line)
 
 
 @pytest.fixture

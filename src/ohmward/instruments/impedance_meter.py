@@ -237,6 +237,8 @@ class ImpedanceMeter:
             touched = [name for name in go if name.startswith("bias")]
             for name in touched:
                 self._bias[name] = None  # in flight: neither on nor off until it is read back
+            for name in go:
+                self._set.pop(name, None)
             await self._talker.set_all(go)
             self._bias.update({name: go[name] for name in touched})
             self._set.update(go)
@@ -290,8 +292,8 @@ class ImpedanceMeter:
                 await self._persist(self._discard)
             except InstrumentRefused:
                 return self._bad(Status.NOT_SET)
-            except LinkError:
-                if self._beyond_recovery:
+            except LinkError as error:
+                if self._beyond_recovery or isinstance(error, WrongIdentity):
                     raise
                 return self._bad(Status.TIMEOUT)
         reply = b""
@@ -355,9 +357,10 @@ class ImpedanceMeter:
         """
         for last in (False,) * (TRIES - 1) + (True,):
             self._beyond_recovery = True
-            await self._talker.fresh()
+            await self._talker.link.recover()
             self._beyond_recovery = False
             try:
+                await self._talker.fresh()
                 if self._talker.link.recoveries != self._recoveries:
                     self._recoveries = self._talker.link.recoveries
                     self._forget()

@@ -55,6 +55,7 @@ class Talker:
         self.discards = 0
         """Readings that are still to be thrown away because of what was set."""
         self._serial_number = serial_number
+        self._recoveries = link.recoveries
         self._end = read_end(driver)
         self._unasked = codec.receiver()
         self._settings = {name: self._words(one) for name, one in driver.setting.items()}
@@ -80,10 +81,8 @@ class Talker:
         anything else is sent.
         """
         answer = await self.link.open()
-        table = self.driver.identity
-        if table is not None and self._asks_itself:
-            answer = await self._exchange(table.ask.encode("ascii"), answers=True)
-            identity_check(self.driver, serial_number=self._serial_number)(answer)
+        self._recoveries = self.link.recoveries
+        answer = await self._check_identity() or answer
         for name in self.driver.start:
             await self.act(name)
         if self.driver.errors is not None:
@@ -106,15 +105,30 @@ class Talker:
         return self.driver.link.echo and not self.driver.link.prompt
 
     async def fresh(self) -> bool:
-        """Recover a dirty link; True when it was dirty: the instrument may have forgotten all."""
-        if not self.link.dirty:
+        """Recover a dirty link, and greet an instrument that may have been off in between.
+
+        True when the link has recovered since the last time: the instrument may have forgotten
+        all that was set.
+        """
+        if self.link.dirty:
+            await self.link.recover()
+        recoveries = self.link.recoveries
+        if recoveries == self._recoveries:
             return False
-        await self.link.recover()
-        table = self.driver.identity
-        if table is not None and self._asks_itself:
-            answer = await self._exchange(table.ask.encode("ascii"), answers=True)
-            identity_check(self.driver, serial_number=self._serial_number)(answer)
+        await self._check_identity()
+        for name in self.driver.start:
+            await self.act(name)
+        self._recoveries = recoveries
         return True
+
+    async def _check_identity(self) -> bytes:
+        """Ask for the identity where the link cannot; b"" where it can, or there is none."""
+        table = self.driver.identity
+        if table is None or not self._asks_itself:
+            return b""
+        answer = await self._exchange(table.ask.encode("ascii"), answers=True)
+        identity_check(self.driver, serial_number=self._serial_number)(answer)
+        return answer
 
     async def aclose(self) -> None:
         """Close the link."""
