@@ -80,7 +80,10 @@ class Bridge:
 
     def _choose_range(self, now_s: float) -> None:
         drive = self.drive
-        z = self._seen_impedance(self.terminals.connection(now_s), self._target_offset_v())
+        connection = self.terminals.connection(now_s)
+        offset_v = self._target_offset_v()
+        bias_a = self._direct_current_a(connection, offset_v)
+        z = connection.impedance(drive.frequency_hz, drive.level_v, offset_v, bias_a)
         magnitude = abs(z)
         range_ohm = drive.range_ohm
         reach = _REACH * _HYSTERESIS

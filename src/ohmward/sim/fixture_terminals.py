@@ -63,6 +63,8 @@ class Connected:
         self._parts = tuple(parts.values())
         self._only = self._parts[0] if len(self._parts) == 1 else None
         self._clips = clips
+        self._clips_hz = math.nan
+        self._series = self._stray = 0j
         self._direct_ohm: float | None = None
 
     def impedance(
@@ -85,15 +87,17 @@ class Connected:
         return 1.0 / total
 
     def _in_clips(self, z: complex, frequency_hz: float) -> complex:
-        clips = self._clips
-        w = 2.0 * math.pi * frequency_hz
-        series = complex(clips.series_ohm, w * clips.series_h)
+        if frequency_hz != self._clips_hz:
+            clips, w = self._clips, 2.0 * math.pi * frequency_hz
+            self._clips_hz = frequency_hz
+            self._series = complex(clips.series_ohm, w * clips.series_h)
+            self._stray = complex(clips.stray_s, w * clips.stray_f)
         if z == 0:
-            return series
-        admittance = complex(clips.stray_s, w * clips.stray_f)
+            return self._series
+        admittance = self._stray
         if cmath.isfinite(z):
             admittance += 1.0 / z
-        return series + 1.0 / admittance if admittance else _NOTHING
+        return self._series + 1.0 / admittance if admittance else _NOTHING
 
     def resistance_dc_ohm(self) -> float:
         """Resistance to direct current at no bias."""
