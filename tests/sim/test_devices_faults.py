@@ -142,6 +142,9 @@ def test_silent_clamping() -> None:
     send(layer, b"VOLT 4", 1.0)
     assert send(layer, b"VOLT?", 2.0) == b"+2.000000E+00\n"
     assert send(layer, b"SYST:ERR?", 3.0) == b'0,"No error"\n'
+    layer.inject(Fault(kind="clamped"))
+    assert send(layer, b"VOLT? MAX", 4.0) == b"+1.000000E+01\n", "a query sets nothing"
+    assert send(layer, b"VOLT 8;VOLT?", 5.0) == b"+4.000000E+00\n", "set and asked in one line"
 
 
 def test_another_identity_after_the_next_connection() -> None:

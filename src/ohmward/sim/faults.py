@@ -61,7 +61,9 @@ class Fault:
         """Whether it strikes this message; counts it."""
         if self.times <= 0 or self.kind in OPENING_KINDS or self.matching not in message:
             return False
-        if (b"?" in message) == (self.kind in SETTING_KINDS):
+        header, _, values = message.partition(b" ")
+        sets = bool(values.strip()) and b"?" not in header
+        if not (sets if self.kind in SETTING_KINDS else b"?" in message):
             return False
         if self.after > 0:
             self.after -= 1
