@@ -18,7 +18,7 @@ class Meter:
     def changed(self, setting: str, now_s: float) -> None:
         raise AssertionError("nothing can be set")
 
-    def act(self, action: str, channels: tuple[str, ...], now_s: float) -> None:
+    def act(self, action: str, channels: tuple[str, ...], now_s: float) -> float:
         raise AssertionError("nothing can be asked for")
 
     def read(

@@ -5,7 +5,7 @@ import math
 from collections.abc import Mapping, Sequence
 from typing import Protocol
 
-from ohmward.sim.scanner import Contacts
+from ohmward.sim.terminals import Relays
 
 _NOTHING = complex(math.inf, 0.0)
 
@@ -128,7 +128,7 @@ class FixtureTerminals:
 
     def __init__(
         self,
-        contacts: Contacts,
+        contacts: Relays,
         positions: Mapping[str, Sequence[str]],
         clips: Clips,
         air: Air,

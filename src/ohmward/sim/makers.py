@@ -24,11 +24,11 @@ from ohmward.sim.responder_roles import (
     PerfectThermometer,
 )
 from ohmward.sim.room import SimulatedRoom
-from ohmward.sim.scanner import Contacts, Scanner
+from ohmward.sim.scanner import Scanner
 from ohmward.sim.scpi_supply import BiasSource, HighVoltageSupply
 from ohmward.sim.status_first_meter import StatusFirstMeter
 from ohmward.sim.supply_core import ScalarError
-from ohmward.sim.terminals import Terminals
+from ohmward.sim.terminals import Relays, Terminals
 from ohmward.sim.terminals_dc import Circuit
 from ohmward.sim.terse_supply import TerseSupply
 from ohmward.sim.thermometer import Thermometer
@@ -58,7 +58,7 @@ class Surroundings:
     """What the instruments of one bench are connected to."""
 
     seed: int
-    contacts: Contacts
+    contacts: Relays
     terminals: Terminals
     room: SimulatedRoom
     circuit: Circuit

@@ -171,10 +171,10 @@ class Responder:
         )
 
         def act(now_s: float, given: Mapping[str, str]) -> tuple[str | None, float]:
-            self._behaviour.act(name, channels_in(given), now_s)
+            done_s = self._behaviour.act(name, channels_in(given), now_s)
             if writer is None:
-                return None, now_s
-            return writer.write(self._behaviour.read(name, self._values, (), now_s)), now_s
+                return None, done_s
+            return writer.write(self._behaviour.read(name, self._values, (), done_s)), done_s
 
         if table.get("send"):
             self._add(table["send"], act)

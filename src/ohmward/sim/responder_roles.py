@@ -5,8 +5,7 @@ from collections.abc import Mapping
 from typing import Any, Protocol
 
 from ohmward.sim.meter_pairs import NOT_A_NUMBER, OVERFLOW, PAIRS
-from ohmward.sim.scanner import RELAY_S, Contacts
-from ohmward.sim.terminals import Room, Terminals
+from ohmward.sim.terminals import Relays, Room, Terminals
 
 _PAIRS = {
     "R-X": "RX",
@@ -33,8 +32,8 @@ class Behaviour(Protocol):
     def changed(self, setting: str, now_s: float) -> None:
         """A setting has been set."""
 
-    def act(self, action: str, channels: tuple[str, ...], now_s: float) -> None:
-        """An action has been asked for."""
+    def act(self, action: str, channels: tuple[str, ...], now_s: float) -> float:
+        """An action has been asked for; returns when it is done."""
 
     def read(
         self, reading: str, settings: Mapping[str, Any], channels: tuple[str, ...], now_s: float
@@ -48,8 +47,9 @@ class Passive:
     def changed(self, setting: str, now_s: float) -> None:
         """Nothing follows."""
 
-    def act(self, action: str, channels: tuple[str, ...], now_s: float) -> None:
+    def act(self, action: str, channels: tuple[str, ...], now_s: float) -> float:
         """Nothing follows."""
+        return now_s
 
     def read(
         self, reading: str, settings: Mapping[str, Any], channels: tuple[str, ...], now_s: float
@@ -97,18 +97,19 @@ class PerfectMeter(Passive):
 
 
 class PerfectScanner(Passive):
-    """Moves the bench's contacts; every relay has come to rest when it is asked again."""
+    """Moves the bench's contacts, and hears nothing more until they have come to rest."""
 
-    def __init__(self, contacts: Contacts) -> None:
+    def __init__(self, contacts: Relays) -> None:
         self._contacts = contacts
 
-    def act(self, action: str, channels: tuple[str, ...], now_s: float) -> None:
+    def act(self, action: str, channels: tuple[str, ...], now_s: float) -> float:
         """Close, open, open all."""
         known = [each for each in channels if each in self._contacts.channels]
         if action in ("close", "open"):
-            self._contacts.order(known, action == "close", now_s - RELAY_S)
-        elif action in ("open_all", "reset"):
-            self._contacts.order(self._contacts.channels, False, now_s - RELAY_S)
+            return self._contacts.order(known, action == "close", now_s)
+        if action in ("open_all", "reset"):
+            return self._contacts.order(self._contacts.channels, False, now_s)
+        return now_s
 
     def read(
         self, reading: str, settings: Mapping[str, Any], channels: tuple[str, ...], now_s: float

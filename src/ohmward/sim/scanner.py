@@ -5,6 +5,7 @@ from collections.abc import Callable, Iterable, Mapping
 
 from ohmward.sim.scpi_device import ScpiDevice
 from ohmward.sim.scpi_parameters import ChannelList
+from ohmward.sim.terminals import Relays
 
 RELAY_S = 0.005
 
@@ -16,11 +17,16 @@ class Contacts:
     """
 
     def __init__(self, channels: Iterable[str], stuck: Mapping[str, bool] | None = None) -> None:
-        self.channels = frozenset(channels)
+        self._channels = frozenset(channels)
         self.stuck = dict(stuck or {})
         self._closed = frozenset(channel for channel, closed in self.stuck.items() if closed)
         self._moves: list[tuple[float, str, bool]] = []
         self._changed_s = -math.inf
+
+    @property
+    def channels(self) -> frozenset[str]:
+        """Every channel that is fitted."""
+        return self._channels
 
     def order(self, channels: Iterable[str], close: bool, now_s: float) -> float:
         """Order contacts to close or open; returns when the last of them has come to rest."""
@@ -61,7 +67,7 @@ class Contacts:
 class Scanner(ScpiDevice):
     """Closes and opens contacts by channel; answers what the contacts really are."""
 
-    def __init__(self, name: str, serial_number: str, contacts: Contacts) -> None:
+    def __init__(self, name: str, serial_number: str, contacts: Relays) -> None:
         super().__init__("SCANNER", serial_number)
         self.name = name
         self._contacts = contacts

@@ -1,5 +1,6 @@
 """What an instrument sees of the bench: the ends of its leads, and the room it stands in."""
 
+from collections.abc import Iterable
 from typing import Protocol
 
 
@@ -22,6 +23,23 @@ class Connection(Protocol):
 
     def open_impedance(self, frequency_hz: float) -> complex:
         """What the meter sees with the fixture empty, in ohm."""
+
+
+class Relays(Protocol):
+    """The contacts of a bench, by channel, as they really are."""
+
+    @property
+    def channels(self) -> frozenset[str]:
+        """Every channel that is fitted."""
+
+    def order(self, channels: Iterable[str], close: bool, now_s: float) -> float:
+        """Order contacts to close or open; returns when the last of them has come to rest."""
+
+    def closed(self, now_s: float) -> frozenset[str]:
+        """The contacts that are closed now."""
+
+    def changed_s(self, now_s: float) -> float:
+        """When a contact moved last."""
 
 
 class Terminals(Protocol):
