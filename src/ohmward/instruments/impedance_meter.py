@@ -47,6 +47,7 @@ class ImpedanceMeter:
         self._beyond_recovery = False
         self._recoveries = talker.link.recoveries
         self._bias: dict[str, Value | None] = {}
+        self._confirmed_at = -1
         self._pair = talker.driver.meter.pair if talker.driver.meter else ""
         self._integration = ""
         self._query, self._layout = talker.reading("impedance")
@@ -160,7 +161,7 @@ class ImpedanceMeter:
         changes = {name: value for name, value in wanted if self._set.get(name) != value}
         if changes or not self._standing:
             self._standing = False
-            await self._apply(self._in_order(changes))
+            await self._apply(self._level_out_of_the_way(changes) + self._in_order(changes))
             self._standing = True
 
     def _wanted(self, point: Point) -> list[tuple[str, Value]]:
@@ -213,6 +214,27 @@ class ImpedanceMeter:
         self._pair = str(pair)
         return self._asked_pair is None or self._asked_pair == pair
 
+    def _level_out_of_the_way(self, changes: dict[str, Value]) -> list[dict[str, Value]]:
+        """The level to its least first, where what stands at the meter is not known.
+
+        Whatever bias stands there then passes neither limit on its way: bias + √2·level falls,
+        bias − √2·level rises.
+        """
+        least = self._least_level_v
+        if least is None or "level" in self._set or not changes.keys() & _OUTPUT.keys():
+            return []
+        off = self.bias_is_off and self._confirmed_at == self._recoveries
+        if off and not any(changes.get(name) for name in _OUTPUT):
+            return []
+        return [{"level": least}]
+
+    @property
+    def _least_level_v(self) -> float | None:
+        level = self.limits.get("level")
+        if level is None:
+            return None
+        return min(level.allowed, default=level.minimum)
+
     def _in_order(self, changes: dict[str, Value]) -> list[dict[str, Value]]:
         """The changes in two goes: the frequency and what falls, then what rises."""
         falling: dict[str, Value] = {}
@@ -241,6 +263,7 @@ class ImpedanceMeter:
                 self._set.pop(name, None)
             await self._talker.set_all(go)
             self._bias.update({name: go[name] for name in touched})
+            self._confirmed_at = self._recoveries
             self._set.update(go)
 
     async def rest(self) -> None:
@@ -252,9 +275,8 @@ class ImpedanceMeter:
         wanted: list[tuple[str, Value]] = []
         for name, output in _OUTPUT.items():
             wanted += [(name, 0.0), (output, False)]
-        least = self.limits["level"].minimum if "level" in self.limits else None
-        if least is not None:
-            wanted.append(("level", least))
+        if self._least_level_v is not None:
+            wanted.append(("level", self._least_level_v))
         self._point = None
         self._forget()
         failures: list[LinkError] = []
