@@ -4,6 +4,7 @@ import numpy as np
 import pytest
 from tests.results.lot import flat_accuracy, part_of, readings_of
 
+from ohmward.metrology.compensation import Compensation, Known
 from ohmward.output.columns import IMPEDANCE, RESULTS
 from ohmward.results.columns import IMPEDANCE_COLUMNS, RESULT_COLUMNS
 from ohmward.results.derive import derive_impedance
@@ -88,3 +89,32 @@ def test_the_level_that_is_set_counts_as_manuals_have_it() -> None:
     ]
     u = derive_impedance(readings_of(rows), [part_of()], accuracy)["u_impedance_ohm"]
     assert u[1] == pytest.approx(4 * u[0])
+
+
+def test_a_compensated_position_shows_the_part_and_not_the_fixture() -> None:
+    """A fixture of 0.5 ohm in series and 1 nF across, measured open and short."""
+    f = np.array([1e3, 1e4])
+    y = 2j * np.pi * f * 1e-9
+    part = R + 1j * X * 1e3 / f
+    seen = 0.5 + 1 / (y + 1 / part)
+    compensation = Compensation(
+        frequency_hz=f,
+        open_ohm=Known.of(0.5 + 1 / y),
+        short_ohm=Known.of(np.full(2, 0.5 + 0j)),
+        load_ohm=Known.of(0.5 + 1 / (y + 1e-3)),
+        load_standard_ohm=Known.of(np.full(2, 1000.0 + 0j)),
+        contact_ohm=(0.01, 0.0),
+    )
+    rows = [
+        {"first": z.real, "second": z.imag, "frequency_hz": at}
+        for z, at in zip(seen, f, strict=True)
+    ]
+    readings = readings_of([*rows, rows[0] | {"position": "2"}])
+    found = derive_impedance(readings, [part_of()], {}, compensations={"1": compensation})
+    assert found["resistance_ohm"][:2] == pytest.approx(part.real, rel=1e-9)
+    assert found["reactance_ohm"][:2] == pytest.approx(part.imag, rel=1e-9)
+    assert found["reactance_ohm"][2] == pytest.approx(seen[0].imag)
+    exact = {"meter": flat_accuracy(0.0, 0.0)}
+    found = derive_impedance(readings, [part_of()], exact, compensations={"1": compensation})
+    # the contact of the part itself, and that of the short that was taken off
+    assert found["u_resistance_ohm"][:2] == pytest.approx(0.01 * np.sqrt(2), rel=0.02)

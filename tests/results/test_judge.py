@@ -285,3 +285,104 @@ def test_a_meter_without_a_stated_accuracy_decides_nothing() -> None:
     assert "states no accuracy" in row["reason"]
     assert row["value"] == pytest.approx(1e-7)
     assert all(isnan(other["u_expanded"]) for other in rest)
+
+
+def _inductor_over_bias(currents_a: list[float]) -> list[Row]:
+    """1 mH at no bias, L = L0/(1 + (I/0.8 A)²): down by 20 % at 0.4 A."""
+    return [
+        {
+            "pair": "Ls-Rs",
+            "first": 1e-3 / (1 + (current / 0.8) ** 2),
+            "second": 0.5,
+            "bias_set_a": current,
+            "point": n,
+            "frequency_hz": 1e4,
+        }
+        for n, current in enumerate(currents_a)
+    ]
+
+
+STEPS = [0.0, 0.1, 0.2, 0.3, 0.35, 0.45, 0.5, 0.6]
+
+
+@pytest.mark.parametrize(
+    ("currents_a", "minimum", "maximum", "decision"),
+    [
+        (STEPS, 0.35, None, Decision.ACCEPT),
+        (STEPS, 0.5, None, Decision.REJECT),
+        (STEPS, 0.401, None, Decision.UNDECIDED),
+        (STEPS[:4], 0.2, None, Decision.ACCEPT),
+        (STEPS[:4], 0.35, None, Decision.UNDECIDED),
+        (STEPS[:4], None, 0.25, Decision.REJECT),
+        (STEPS[:1], 0.2, None, Decision.INVALID),
+    ],
+)
+def test_saturation_current(
+    currents_a: list[float], minimum: float | None, maximum: float | None, decision: Decision
+) -> None:
+    limit = limit_on("saturation_current_20pct_a", minimum, maximum)
+    rows = _rows(_inductor_over_bias(currents_a), limit, part=part_of(Kind.INDUCTOR, 1e-3))
+    assert rows[0]["decision"] is decision
+    if len(currents_a) == len(STEPS):
+        assert abs(rows[0]["value"] - 0.4) <= rows[0]["u_expanded"]
+        assert rows[0]["unit"] == "A"
+
+
+def _sweep(step: float, ranges: tuple[str, str] = ("1", "1")) -> list[Row]:
+    """100 nF with its lead, 20 Hz to 2 MHz; from 6.3 kHz on everything reads ``step`` more."""
+    rows = []
+    for n, f in enumerate(np.geomspace(20.0, 2e6, 51)):
+        w = 2 * np.pi * f
+        z = 0.05 + 1j * (w * 10e-9 - 1 / (w * 1e-7))
+        z *= 1 + step * (n >= 25)
+        plain = {"first": z.real, "second": z.imag, "frequency_hz": f, "point": n}
+        rows.append(plain | {"range": ranges[n >= 25]})
+    return rows
+
+
+def test_a_step_in_a_sweep_makes_it_invalid_unless_the_meter_changed_its_range() -> None:
+    limit = limit_on("self_resonance_hz", minimum=4e6)
+    assert _rows(_sweep(0.0), limit)[0]["decision"] is Decision.UNDECIDED
+    (row, *rest) = _rows(_sweep(0.005), limit)
+    assert row["decision"] is Decision.INVALID
+    assert "step of 0.5 %" in row["reason"]
+    assert all(isnan(other["value"]) for other in rest)
+    assert _rows(_sweep(0.005, ("1", "2")), limit)[0]["decision"] is Decision.UNDECIDED
+
+
+def test_the_stated_distribution_decides_where_one_rectangular_error_rules() -> None:
+    """±0.1 % rectangular: 95.45 % of it is ±0.09545 %, where first order says ±0.115 %."""
+    accuracy = {"meter": flat_accuracy(1e-3, 1e-5, distribution="rectangular")}
+    readings = readings_of([_capacitor(100e-9)])
+    table = derive_impedance(readings, [part_of()], accuracy)
+    limit = limit_on("cs_f", 95e-9, 105e-9)
+    (plain, *_) = judge(readings, table, [part_of()], [limit])
+    (stated, *_) = judge(readings, table, [part_of()], [limit], accuracies=accuracy)
+    assert plain["u_expanded"] == pytest.approx(0.2e-9 / np.sqrt(3), rel=1e-3)
+    assert stated["u_expanded"] == pytest.approx(0.09545e-9, rel=2e-3)
+    assert stated["coverage_k"] == pytest.approx(0.9545 * np.sqrt(3), rel=2e-3)
+
+
+@pytest.mark.slow
+def test_false_acceptance_stays_below_its_bound_for_parts_across_a_limit() -> None:
+    """500 parts spread evenly over ±3U about a limit, each with an instrument of its own."""
+    rng = np.random.default_rng(8)
+    count, half = 500, 1e-3
+    accuracy = {"meter": flat_accuracy(half, half, distribution="rectangular")}
+    true = 100e-9 * (1 + 3 * half * rng.uniform(-1, 1, count))
+    shown = true * (1 + half * rng.uniform(-1, 1, count))
+    parts = [part_of(part_id=f"P{n}") for n in range(count)]
+    readings = readings_of([_capacitor(c) | {"part_id": f"P{n}"} for n, c in enumerate(shown)])
+    table = derive_impedance(readings, parts, accuracy)
+    limits = [limit_on("cs_f", maximum=100e-9, part_id=part.part_id) for part in parts]
+    rows = judge(readings, table, parts, limits, accuracies=accuracy)
+    judged = [row for row in rows if row["quantity"] == "cs_f"]
+    assert len(judged) == count
+    bad = [row for row, c in zip(judged, true, strict=True) if c > 100e-9]
+    false = sum(row["decision"] is Decision.ACCEPT for row in bad)
+    assert false <= 0.025 * len(bad)
+    far = [
+        row for row, c in zip(judged, true, strict=True) if abs(c - 100e-9) >= 2 * row["u_expanded"]
+    ]
+    assert len(far) > 100
+    assert sum(row["decision"] is Decision.UNDECIDED for row in far) <= 0.05 * len(far)

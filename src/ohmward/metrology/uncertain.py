@@ -20,8 +20,8 @@ from ohmward.metrology.samples import normal_points, uniform_points
 Covariance = tuple[float, float, float]
 NOTHING: Covariance = (0.0, 0.0, 0.0)
 
-# 2.3 % in each tail is then counted to within 0.1 %
-SAMPLES = 20_000
+# 2.3 % in each tail is then counted to within about 0.1 %
+SAMPLES = 10_000
 RULES_FROM = 0.5
 
 

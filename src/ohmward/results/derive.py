@@ -7,6 +7,7 @@ from numpy.typing import NDArray
 
 from ohmward.metrology.accuracy import add_resolution, impedance_uncertainty
 from ohmward.metrology.arrays import FloatArray
+from ohmward.metrology.compensation import Compensation, Known, compensate
 from ohmward.metrology.immittance import VIEWS, impedance_of_pair, views
 from ohmward.results.columns import IMPEDANCE_COLUMNS
 from ohmward.terms.accuracy import ImpedanceAccuracy
@@ -25,6 +26,7 @@ def derive_impedance(
     run_id: str = "",
     simulated: bool = False,
     cable_m: Mapping[str, float] | None = None,
+    compensations: Mapping[str, Compensation] | None = None,
 ) -> dict[str, NDArray[np.generic]]:
     """The columns of impedance.csv, in order, one element per reading of the journal.
 
@@ -32,7 +34,9 @@ def derive_impedance(
     ``cable_m`` are keyed by the bench's name of the instrument. A reading whose status is not
     ``ok`` has NaN in every derived column. A view that the part's kind does not have is NaN.
     Where the instrument states no accuracy, or none for this point, values stand and their
-    uncertainties are NaN: nothing can be decided with them.
+    uncertainties are NaN: nothing can be decided with them. ``compensations`` are by position;
+    the meter's own uncertainty is carried through each in full, although a load takes some of
+    it away. Raises CompensationMismatch where a frequency was not compensated.
     """
     count = len(readings["reading"])
     ok = ok_readings(readings)
@@ -48,6 +52,12 @@ def derive_impedance(
             u_r[where], u_x[where], rho[where] = _type_b(
                 readings, where, accuracies[instrument], cable, r[where], x[where]
             )
+    for where, position in _each(readings["position"], ok) if compensations else ():
+        if compensations and position in compensations:
+            shown = Known.of(r[where] + 1j * x[where], u_r[where], u_x[where], rho[where])
+            part = compensate(compensations[position], f[where], shown)["part"]
+            r[where], x[where] = part.value.real, part.value.imag
+            u_r[where], u_x[where], rho[where] = part.u_real, part.u_imag, part.correlation
     derived: dict[str, NDArray[np.generic]] = {
         "resistance_ohm": r,
         "reactance_ohm": x,

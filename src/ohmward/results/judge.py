@@ -19,7 +19,8 @@ from ohmward.results.derive import Columns
 from ohmward.results.judged import Judged, Rule, Stage, expand, matches, why_not
 from ohmward.results.quantities import CHANGES, evaluate, reference_cell
 from ohmward.results.report import report_stage
-from ohmward.results.whole_stage import judge_resonance
+from ohmward.results.self_check import step_in
+from ohmward.results.whole_stage import judge_whole
 from ohmward.terms.accuracy import ImpedanceAccuracy
 from ohmward.terms.decision import Decision
 from ohmward.terms.limit import Limit
@@ -73,10 +74,9 @@ def judge(
 
 
 def _stage(cells: list[Cell], *, closes: bool) -> Stage:
-    if not closes:
-        return Stage(cells=cells)
-    rest, closure = split_closure(cells)
-    return Stage(cells=rest, drift=drift_of(rest[0], closure) if closure else "")
+    rest, closure = split_closure(cells) if closes else (cells, None)
+    drift = drift_of(rest[0], closure) if closure else ""
+    return Stage(cells=rest, drift=drift or step_in(rest))
 
 
 def part_decisions(rows: Iterable[Row], parts: Iterable[Part]) -> dict[str, Decision]:
@@ -91,7 +91,7 @@ def part_decisions(rows: Iterable[Row], parts: Iterable[Part]) -> dict[str, Deci
 def judge_limit(part: Part, limit: Limit, stage: Stage, rule: Rule) -> Judged:
     """One limit held against one stage of its part: its worst point where it covers several."""
     if QUANTITIES[limit.quantity].per == "part":
-        return judge_resonance(part, stage.cells, limit, rule, stage.drift)
+        return judge_whole(part, stage.cells, limit, rule, stage.drift)
     cells = [cell for cell in stage.cells if matches(limit, cell.point)]
     if limit.quantity in CHANGES:
         # the reference is 0 by definition: it proves nothing unless it is asked for

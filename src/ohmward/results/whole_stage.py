@@ -1,12 +1,15 @@
-"""Quantities that have one value for a whole stage: the self-resonance."""
+"""Quantities that have one value for a whole stage: self-resonance and saturation current."""
 
 from math import isnan
 
+from ohmward.metrology.bias import saturation_current
 from ohmward.metrology.decide import decide
+from ohmward.metrology.errors import TooFewPoints
 from ohmward.metrology.resonance import Resonance, self_resonance
 from ohmward.results import reasons
 from ohmward.results.cells import Cell
 from ohmward.results.judged import Judged, Rule, matches
+from ohmward.results.quantities import evaluate, same_setting
 from ohmward.terms.condition import Point
 from ohmward.terms.decision import Decision
 from ohmward.terms.kind import Kind
@@ -17,6 +20,43 @@ from ohmward.units.values import format_quantity
 _NAME = "self_resonance_hz"
 # the sign of the reactance that a part has below its self-resonance; a resistor has either
 _SIGN_BELOW = {Kind.CAPACITOR: -1, Kind.INDUCTOR: 1}
+
+
+def judge_whole(part: Part, cells: list[Cell], limit: Limit, rule: Rule, drift: str) -> Judged:
+    """A limit on a quantity that is one value for a part and stage."""
+    if limit.quantity == _NAME:
+        return judge_resonance(part, cells, limit, rule, drift)
+    return judge_saturation(cells, limit, rule, drift)
+
+
+def judge_saturation(cells: list[Cell], limit: Limit, rule: Rule, drift: str) -> Judged:
+    """A limit on the current at which L has dropped by the percentage in the quantity's name.
+
+    Where it has not within the sweep, the saturation current is above the highest bias.
+    """
+    name = limit.quantity
+    good = [cell for cell in cells if cell.good and not isnan(cell.type_b[1])]
+    alike = [cell for cell in good if same_setting(cell, good[0])]
+    changes = [evaluate("inductance_change", cell, alike) for cell in alike]
+    try:
+        found = saturation_current(
+            [cell.point.bias_a for cell in alike],
+            [change.value for change in changes],
+            [change.u for change in changes],
+            int(name.split("_")[2].removesuffix("pct")) / 100,
+        )
+    except TooFewPoints:
+        few = f"{name} needs two bias currents with good readings in stage {limit.stage!r}"
+        return Judged(decision=Decision.INVALID, reason=few)
+    if drift:
+        return Judged(decision=Decision.INVALID, reason=f"{name}: {drift}")
+    point = Point(frequency_hz=alike[0].point.frequency_hz, level_v=alike[0].point.level_v)
+    if isnan(found.current_a):
+        above = (
+            f"{name} is above {format_quantity(found.highest_a, 'A')}, no such drop in the sweep"
+        )
+        return _bounded(above, found.highest_a, float("inf"), limit, point)
+    return _decided(found.current_a, found.u_a, limit, rule, point)
 
 
 def judge_resonance(part: Part, cells: list[Cell], limit: Limit, rule: Rule, drift: str) -> Judged:
@@ -38,15 +78,17 @@ def judge_resonance(part: Part, cells: list[Cell], limit: Limit, rule: Rule, dri
         return Judged(decision=Decision.UNDECIDED, reason=f"{doubt}, {reasons.bounds(limit)}")
     if isnan(found.frequency_hz):
         return _without_change(part, found, limit, point)
-    u, k = found.u_hz, rule.coverage_k
-    decision, probability = decide(
-        found.frequency_hz, u, k, limit.minimum, limit.maximum, rule.guard
-    )
-    said = reasons.measured(_NAME, found.frequency_hz, k * u, k)
+    return _decided(found.frequency_hz, found.u_hz, limit, rule, point)
+
+
+def _decided(value: float, u: float, limit: Limit, rule: Rule, point: Point) -> Judged:
+    k = rule.coverage_k
+    decision, probability = decide(value, u, k, limit.minimum, limit.maximum, rule.guard)
+    said = reasons.measured(limit.quantity, value, k * u, k)
     return Judged(
         decision=decision,
         reason=reasons.judged(said, limit, decision, probability),
-        value=found.frequency_hz,
+        value=value,
         u_expanded=k * u,
         k=k,
         probability=probability,
@@ -118,21 +160,18 @@ def _without_change(part: Part, found: Resonance, limit: Limit, point: Point) ->
     bound = (
         f"below {format_quantity(high, 'Hz')}" if beyond else f"above {format_quantity(low, 'Hz')}"
     )
-    minimum = -1.0 if limit.minimum is None else limit.minimum
+    said = f"{_NAME} is {bound}, no sign change in the sweep"
+    return _bounded(said, low, high, limit, point)
+
+
+def _bounded(said: str, low: float, high: float, limit: Limit, point: Point) -> Judged:
+    """A decision on what is only known to lie between two values."""
+    minimum = float("-inf") if limit.minimum is None else limit.minimum
     maximum = float("inf") if limit.maximum is None else limit.maximum
     if minimum <= low and high <= maximum:
-        decision = Decision.ACCEPT
+        decision, how = Decision.ACCEPT, "within"
     elif high < minimum or low > maximum:
-        decision = Decision.REJECT
+        decision, how = Decision.REJECT, "outside"
     else:
-        decision = Decision.UNDECIDED
-    how = {
-        Decision.ACCEPT: "within",
-        Decision.REJECT: "outside",
-        Decision.UNDECIDED: "which leaves open",
-    }[decision]
-    return Judged(
-        decision=decision,
-        reason=f"{_NAME} is {bound}, no sign change in the sweep: {how} {reasons.bounds(limit)}",
-        point=point,
-    )
+        decision, how = Decision.UNDECIDED, "which leaves open"
+    return Judged(decision=decision, reason=f"{said}: {how} {reasons.bounds(limit)}", point=point)

@@ -48,9 +48,10 @@ def cannot_decide(
     found: list[CannotDecide] = []
     for limit in limits:
         stage = of_part[limit.part_id, limit.stage]
-        if QUANTITIES[limit.quantity].per == "part":
+        doubt: CannotDecide | None = None
+        if limit.quantity == "self_resonance_hz":
             doubt = _resonance_doubt(limit, stage)
-        else:
+        elif QUANTITIES[limit.quantity].per == "point":
             doubt = _point_doubt(limit, stage, meter, decision)
         if doubt is not None:
             found.append(doubt)

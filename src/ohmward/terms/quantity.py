@@ -58,5 +58,15 @@ QUANTITIES: dict[str, Quantity] = {
             per="part",
             meaning="lowest frequency at which the reactance changes sign",
         ),
+        *(
+            Quantity(
+                name=f"saturation_current_{percent}pct_a",
+                unit="A",
+                kinds=_L,
+                per="part",
+                meaning=f"bias current at which L is down by {percent} % from the least bias",
+            )
+            for percent in (10, 20, 30)
+        ),
     )
 }
