@@ -102,7 +102,7 @@ def accuracies_of(drivers: Mapping[str, Driver]) -> dict[str, ImpedanceAccuracy]
     return {name: accuracy for name, accuracy in found if accuracy is not None}
 
 
-def journal_columns(store: Store, rows_at_once: int = 8192) -> Iterator[Arrays]:
+def journal_columns(store: Store, rows_at_once: int = 2048) -> Iterator[Arrays]:
     """The journal's readings as arrays by column, batch by batch, in order."""
     stages = store.stages()
     names = ("reading", *schema.IMPEDANCE_COLUMNS)

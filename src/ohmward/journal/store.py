@@ -133,7 +133,7 @@ class Store:
         )
         return rows[0] if rows else None
 
-    def impedance(self, rows_at_once: int = 8192) -> Iterator[list[Row]]:
+    def impedance(self, rows_at_once: int = 2048) -> Iterator[list[Row]]:
         """Readings in order, in batches: ``reading`` then schema.IMPEDANCE_COLUMNS."""
         names = ", ".join(("reading", *schema.IMPEDANCE_COLUMNS))
         cursor = self._connection.execute(f"SELECT {names} FROM impedance ORDER BY reading")

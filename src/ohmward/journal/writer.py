@@ -17,7 +17,7 @@ from ohmward.errors import OhmwardError
 from ohmward.journal.store import Row, Store
 
 MOST_WAITING = 64
-ROWS_PER_COMMIT = 4096
+ROWS_PER_COMMIT = 1024
 
 
 class Writer(Protocol):
