@@ -86,10 +86,10 @@ class Tally:
         self.widths += other.widths
 
 
-def _tallies(parts: int, samples: int) -> Iterator[tuple[str, str, int, Tally]]:
+def _tallies(parts: int, samples: int, decades: range) -> Iterator[tuple[str, str, int, Tally]]:
     """One tally for each kind, quantity and decade of |Z|."""
     for kind, (angle, quantities) in KINDS.items():
-        for decade in DECADES:
+        for decade in decades:
             rng = np.random.default_rng([ord(kind[0]), decade + 5])
             found = {name: Tally() for name in quantities}
             for _ in range(parts):
@@ -125,10 +125,10 @@ def _count(
     tally.widths.append(2 * plain.u_expanded / float(high - low))
 
 
-def _check(parts: int, samples: int, slack: float) -> None:
+def _check(parts: int, samples: int, slack: float, decades: range = DECADES) -> None:
     whole: dict[tuple[str, str], Tally] = {}
     print("\nkind      quantity        decade   MC %   GUM %  GUM/MC  rms(e/u)")
-    for kind, name, decade, tally in _tallies(parts, samples):
+    for kind, name, decade, tally in _tallies(parts, samples, decades):
         share = tally.held / parts
         print(f"{kind:10}{name:16}{decade:4}   {100 * share:6.2f}", end="")
         assert 0.935 - slack <= share <= 0.965 + slack, (kind, name, decade)
@@ -143,9 +143,9 @@ def _check(parts: int, samples: int, slack: float) -> None:
         assert 0.85 - slack <= rms <= 1.15 + slack, (kind, name, decade)
         whole.setdefault((kind, name), Tally()).add(tally)
     for (kind, name), tally in whole.items():
-        # nine decades together have a third of the binomial spread
+        # five decades or more together have less than half of the binomial spread
         share = tally.held / tally.parts
-        assert 0.935 - slack / 3 <= share <= 0.965 + slack / 3, (kind, name)
+        assert 0.935 - slack / 2 <= share <= 0.965 + slack / 2, (kind, name)
         assert tally.held_first_order / tally.straight >= 0.935, (kind, name)
         assert 0.85 <= sqrt(tally.squares / tally.straight) <= 1.15, (kind, name)
 
@@ -153,7 +153,7 @@ def _check(parts: int, samples: int, slack: float) -> None:
 @pytest.mark.slow
 def test_intervals_hold_the_truth_as_often_as_they_say() -> None:
     """200 parts a cell: three binomial standard deviations of 0.0147 are allowed for."""
-    _check(200, 2000, 0.045)
+    _check(200, 1000, 0.045, DECADES[::2])
 
 
 @pytest.mark.soak
