@@ -86,7 +86,15 @@ def tabulate(
     closures = {stage.stage for stage in brief.stages if stage.closure}
     rule = Rule(guard=brief.guard, coverage_k=brief.coverage_k)
     results = judge(
-        readings, derived, brief.parts, brief.limits, rule=rule, closures=closures, run_id=run_id
+        readings,
+        derived,
+        brief.parts,
+        brief.limits,
+        rule=rule,
+        closures=closures,
+        accuracies=accuracies_of(drivers),
+        cable_m=cable_m,
+        run_id=run_id,
     )
     with TableWriter(folder, columns.RESULTS) as table:
         table.rows(results)
