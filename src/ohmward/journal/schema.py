@@ -114,8 +114,10 @@ def insert(table: str, columns: tuple[str, ...]) -> str:
 INSERT_IMPEDANCE = insert("impedance", IMPEDANCE_COLUMNS)
 INSERT_EVENT = insert("event", EVENT_COLUMNS)
 INSERT_FACT = "INSERT OR REPLACE INTO run (key, value) VALUES (?, ?)"
-INSERT_INSTRUMENT = insert(
-    "instrument", ("name", "role", "address", "identity", "driver", "driver_sha256")
+# A run that is taken up again meets the instruments that it began with: they are there already.
+INSERT_INSTRUMENT = (
+    insert("instrument", ("name", "role", "address", "identity", "driver", "driver_sha256"))
+    + " ON CONFLICT (name) DO NOTHING"
 )
 BEGIN_STAGE = (
     "INSERT INTO stage (number, name, kind, part_id, position, state)"

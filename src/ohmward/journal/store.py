@@ -79,11 +79,16 @@ class Store:
 
     def close(self) -> None:
         """Commit, checkpoint, leave WAL so that the folder copies whole, and close."""
-        with _told(self.path):
-            self._connection.commit()
-            self._connection.execute("PRAGMA wal_checkpoint(TRUNCATE)").fetchall()
-            self._connection.execute("PRAGMA journal_mode = DELETE").fetchall()
-            self._connection.close()
+        try:
+            with _told(self.path):
+                self._connection.commit()
+                # Somebody who reads the journal meanwhile keeps it in WAL; nothing is lost by
+                # that, and a run must not fail for it.
+                with contextlib.suppress(sqlite3.OperationalError):
+                    self._connection.execute("PRAGMA wal_checkpoint(TRUNCATE)").fetchall()
+                    self._connection.execute("PRAGMA journal_mode = DELETE").fetchall()
+        finally:
+            self.abandon()
 
     def abandon(self) -> None:
         """Close without a checkpoint: after a failed write, or after reading only."""
@@ -169,7 +174,8 @@ def _check(path: Path) -> None:
 def _connect_read_only(path: Path) -> sqlite3.Connection:
     # A journal that a killed run left has its newest rows in the WAL, which only a connection
     # that may write the -shm file can read; one that was closed in order is opened immutable.
-    left_open = path.with_name(path.name + "-wal").exists()
+    # So is a rollback journal that was left while WAL was switched on or off.
+    left_open = any(path.with_name(path.name + end).exists() for end in ("-wal", "-journal"))
     mode = "mode=rw" if left_open else "mode=ro&immutable=1"
     return sqlite3.connect(f"{path.absolute().as_uri()}?{mode}", uri=True, check_same_thread=False)
 

@@ -130,6 +130,9 @@ class ThreadWriter:
                 self._store.commit()
             except OhmwardError as error:
                 failure = error
+            except Exception as error:  # whoever waits for this thread must learn of its end
+                failure = OhmwardError(f"the journal could not be written: {error!r}")
+                failure.__cause__ = error
             with contextlib.suppress(trio.RunFinishedError):
                 self._token.run_sync_soon(self._tell, 0 if failure else len(batch), failure)
             if ended or failure:
