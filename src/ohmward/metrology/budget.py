@@ -12,7 +12,8 @@ from math import hypot, inf, isfinite, nan, sqrt
 from ohmward.metrology.accuracy import divisor
 from ohmward.metrology.coverage import coverage_factor, effective_degrees
 from ohmward.metrology.errors import BadCovariance
-from ohmward.metrology.uncertain import UncertainImpedance, spread
+from ohmward.metrology.immittance import View
+from ohmward.metrology.uncertain import Stated, UncertainImpedance, spread
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -89,51 +90,55 @@ def impedance_budget(name: str, unit: str, z: UncertainImpedance, k_normal: floa
     R and X correlated: each is one contribution, in the unit of the result.
     """
     view = z.view(name)
-    a, b = float(view.by_r), float(view.by_x)
-    size = hypot(z.r, z.x)
-    sources = []
-    if z.stated is not None:
-        c, s = (z.r / size, z.x / size) if size else (1.0, 0.0)
-        shape, scale = z.stated.distribution, 1 / divisor(z.stated.distribution)
-        sources = [
-            Source(
-                name="accuracy of the magnitude",
-                u=size * z.stated.magnitude_rel * scale,
-                unit="ohm",
-                sensitivity=a * c + b * s,
-                distribution=shape,
-            ),
-            Source(
-                name="accuracy of the phase",
-                u=z.stated.phase_rad * scale,
-                unit="rad",
-                sensitivity=b * z.r - a * z.x,
-                distribution=shape,
-            ),
-            Source(
-                name="frequency",
-                u=z.frequency_hz * z.stated.frequency_rel / sqrt(3),
-                unit="Hz",
-                sensitivity=b * z.x / z.frequency_hz,
-                distribution="rectangular",
-            ),
-        ]
+    sources = [] if z.stated is None else _stated_sources(view, z, z.stated)
     sources += [
         Source(name=cause, u=spread(view, covariance), unit=unit, sensitivity=1.0)
         for cause, covariance in z.normal.items()
     ]
-    sources.append(
-        Source(
-            name="repeatability",
-            u=spread(view, z.repeat),
-            unit=unit,
-            sensitivity=1.0,
-            distribution="normal" if z.degrees == inf else "t",
-            degrees=z.degrees,
-        )
-    )
+    sources.append(_repeats(spread(view, z.repeat), unit, z.degrees))
     value = float(view.value) if isfinite(float(view.value)) else nan
     return budget_of(value, unit, (s for s in sources if s.u > 0), k_normal)
+
+
+def _stated_sources(view: View, z: UncertainImpedance, stated: Stated) -> list[Source]:
+    a, b = float(view.by_r), float(view.by_x)
+    size = hypot(z.r, z.x)
+    c, s = (z.r / size, z.x / size) if size else (1.0, 0.0)
+    scale = 1 / divisor(stated.distribution)
+    return [
+        Source(
+            name="accuracy of the magnitude",
+            u=size * stated.magnitude_rel * scale,
+            unit="ohm",
+            sensitivity=a * c + b * s,
+            distribution=stated.distribution,
+        ),
+        Source(
+            name="accuracy of the phase",
+            u=stated.phase_rad * scale,
+            unit="rad",
+            sensitivity=b * z.r - a * z.x,
+            distribution=stated.distribution,
+        ),
+        Source(
+            name="frequency",
+            u=z.frequency_hz * stated.frequency_rel / sqrt(3),
+            unit="Hz",
+            sensitivity=b * z.x / z.frequency_hz,
+            distribution="rectangular",
+        ),
+    ]
+
+
+def _repeats(u: float, unit: str, degrees: float) -> Source:
+    return Source(
+        name="repeatability",
+        u=u,
+        unit=unit,
+        sensitivity=1.0,
+        distribution="normal" if degrees == inf else "t",
+        degrees=degrees,
+    )
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -172,10 +177,14 @@ def leakage_budget(given: LeakageInput, k_normal: float = 2.0) -> Budget:
     current moves by t/RC − 1 times a relative change of R and by t/RC times one of C; the
     greater is taken (``charging_over_tau`` is t/RC).
     """
-    scale, root = 1 / divisor(given.distribution), sqrt(3)
     net = given.current_a - given.background_a - given.charging_a
-    charging = given.charging_a * max(given.charging_over_tau, 1.0)
-    sources = (
+    sources = (*_current_meter(given), *_circumstances(given, net))
+    return budget_of(net, "A", (source for source in sources if source.u > 0), k_normal)
+
+
+def _current_meter(given: LeakageInput) -> tuple[Source, ...]:
+    scale = 1 / divisor(given.distribution)
+    return (
         Source(
             name="current meter, gain",
             u=given.reading_rel * scale,
@@ -191,6 +200,13 @@ def leakage_budget(given: LeakageInput, k_normal: float = 2.0) -> Budget:
             distribution=given.distribution,
         ),
         Source(name="background", u=given.u_background_a, unit="A", sensitivity=-1.0),
+        _repeats(given.u_reading_a, "A", given.degrees),
+    )
+
+
+def _circumstances(given: LeakageInput, net_a: float) -> tuple[Source, ...]:
+    root = sqrt(3)
+    return (
         Source(
             name="supply drift",
             u=given.u_rate_v_per_s,
@@ -201,23 +217,14 @@ def leakage_budget(given: LeakageInput, k_normal: float = 2.0) -> Budget:
             name="charging current",
             u=given.series_rel / root,
             unit="1",
-            sensitivity=-charging,
+            sensitivity=-given.charging_a * max(given.charging_over_tau, 1.0),
             distribution="rectangular",
         ),
         Source(
             name="moment of reading",
             u=given.time_s / root,
             unit="s",
-            sensitivity=-given.exponent * net / given.since_voltage_s,
+            sensitivity=-given.exponent * net_a / given.since_voltage_s,
             distribution="rectangular",
         ),
-        Source(
-            name="repeatability",
-            u=given.u_reading_a,
-            unit="A",
-            sensitivity=1.0,
-            distribution="normal" if given.degrees == inf else "t",
-            degrees=given.degrees,
-        ),
     )
-    return budget_of(net, "A", (source for source in sources if source.u > 0), k_normal)

@@ -52,7 +52,7 @@ def derive_impedance(
             u_r[where], u_x[where], rho[where] = _type_b(
                 readings, where, accuracies[instrument], cable, r[where], x[where]
             )
-    for where, position in _each(readings["position"], ok) if compensations else ():
+    for where, position in _each(readings["position"], ok):
         if compensations and position in compensations:
             shown = Known.of(r[where] + 1j * x[where], u_r[where], u_x[where], rho[where])
             part = compensate(compensations[position], f[where], shown)["part"]
