@@ -64,7 +64,9 @@ class Cell:
             r=self.r,
             x=self.x,
             stated=self.stated,
-            normal={"other": _without(self.type_b, plain.stated_covariance())},
+            normal={
+                "resolution and compensation": _without(self.type_b, plain.stated_covariance())
+            },
             repeat=self.type_a,
             degrees=self.good - 1 if self.good > 1 else float("inf"),
         )

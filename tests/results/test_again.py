@@ -1,0 +1,66 @@
+"""Looking at a run again: the budget behind a value, and what other limits would decide."""
+
+from math import sqrt
+
+import pytest
+from tests.results.lot import flat_accuracy, limit_on, part_of, readings_of
+
+from ohmward.results.budgets import NoBudget, budgets
+from ohmward.results.compare import changes
+from ohmward.results.derive import derive_impedance
+from ohmward.results.judge import judge
+from ohmward.terms.decision import Decision
+
+ACCURACY = {"meter": flat_accuracy(1e-3, 1e-3, distribution="rectangular")}
+ROW = {"pair": "Cs-D", "first": 1e-7, "second": 1e-3, "first_resolution": 1e-10}
+
+
+def test_the_budget_is_that_of_the_judged_value() -> None:
+    readings = readings_of([ROW])
+    table = derive_impedance(readings, [part_of()], ACCURACY)
+    ((stage, point, budget),) = budgets(readings, table, "P1", "cs_f", ACCURACY)
+    assert (stage, point.frequency_hz) == ("sweep", 1000.0)
+    assert budget.u == pytest.approx(float(table["u_cs_f"][0]), rel=1e-6)
+    by_name = {part.source.name: part.source.contribution for part in budget.contributions}
+    # by hand: 0.1 % rectangular of C, and a last digit of 0.1 nF
+    assert by_name["accuracy of the magnitude"] == pytest.approx(1e-10 / sqrt(3), rel=1e-5)
+    assert by_name["resolution and compensation"] == pytest.approx(1e-10 / sqrt(12), rel=1e-5)
+
+
+def test_what_has_no_budget_is_refused_by_name() -> None:
+    readings = readings_of([ROW | {"status": "overload"}])
+    table = derive_impedance(readings, [part_of()], ACCURACY)
+    for quantity in ("cs_f", "self_resonance_hz", "capacitance_change", "colour"):
+        with pytest.raises(NoBudget):
+            budgets(readings, table, "P1", quantity, ACCURACY)
+
+
+def test_other_limits_show_what_changes_and_nothing_else() -> None:
+    readings = readings_of([ROW])
+    table = derive_impedance(readings, [part_of()], ACCURACY)
+
+    def rows(*limits: object) -> list[dict[str, object]]:
+        return judge(readings, table, [part_of()], limits, accuracies=ACCURACY)
+
+    loose = rows(limit_on("cs_f", 95e-9, 105e-9), limit_on("d", maximum=0.01))
+    tight = rows(limit_on("cs_f", 101e-9, 105e-9), limit_on("d", maximum=0.01))
+    assert changes(loose, loose) == []
+    (change,) = changes(loose, tight)
+    assert (change.quantity, change.before, change.after) == (
+        "cs_f",
+        Decision.ACCEPT,
+        Decision.REJECT,
+    )
+    assert "101 nF" in change.reason
+    (gone,) = changes(loose, loose[:1])
+    assert (gone.quantity, gone.before, gone.after) == ("d", Decision.ACCEPT, None)
+
+
+def test_two_limits_at_one_condition_are_kept_apart() -> None:
+    readings = readings_of([ROW])
+    table = derive_impedance(readings, [part_of()], ACCURACY)
+    both = [limit_on("cs_f", 95e-9, 105e-9), limit_on("cs_f", 99e-9, 101e-9)]
+    other = [both[0], limit_on("cs_f", 101e-9, 102e-9)]
+    before = judge(readings, table, [part_of()], both)
+    (change,) = changes(before, judge(readings, table, [part_of()], other))
+    assert (change.before, change.after) == (Decision.ACCEPT, Decision.REJECT)
