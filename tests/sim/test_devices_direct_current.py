@@ -175,13 +175,13 @@ def test_the_line_must_rest_after_a_prompt() -> None:
 class Current(OpenInput):
     def __init__(self, ampere: float) -> None:
         self.ampere = ampere
-        self.off: bool | None = None
+        self.ohm = math.nan
 
     def current_a(self, now_s: float) -> float:
         return self.ampere
 
-    def take_off(self, now_s: float, *, off: bool) -> None:
-        self.off = off
+    def load(self, now_s: float, ohm: float) -> None:
+        self.ohm = ohm
 
 
 def current_meter(ampere: float) -> tuple[CurrentMeter, Current]:
@@ -196,10 +196,10 @@ def numbers(text: str) -> list[float]:
 
 def test_zero_check_takes_the_input_off_the_terminals() -> None:
     device, port = current_meter(5e-9)
-    assert port.off
+    assert port.ohm == 10e3
     assert abs(numbers(ask(device, "READ?", 1.0))[0]) < 6e-6
     ask(device, "INP:ZERO OFF", 2.0)
-    assert not port.off
+    assert port.ohm == pytest.approx(5e6), "10 mV of burden at 2 nA, the range for nothing"
     for now_s in (3.0, 4.0, 5.0):
         last = numbers(ask(device, "READ?", now_s))
     assert last[0] == pytest.approx(5e-9, abs=5e-9 * 5e-3 + 5e-12)

@@ -16,8 +16,9 @@ from ohmward.sim.room import SimulatedRoom
 from ohmward.sim.scanner import Contacts
 from ohmward.sim.scpi_device import ScpiDevice
 from ohmward.sim.shared_link import SharedLink
-from ohmward.sim.terminals_dc import Circuit
+from ohmward.sim.terminals import Relays
 from ohmward.sim.tray import Models, fill
+from ohmward.sim.wired_circuit import CircuitRelays, WiredCircuit
 
 __all__ = ["SIMULATORS", "InstrumentAt", "SimulatedBench"]
 
@@ -44,7 +45,7 @@ class SimulatedBench:
         *,
         models: Path | None = None,
         faulty: Collection[str] = (),
-        circuit: Circuit | None = None,
+        circuit: WiredCircuit | None = None,
     ) -> None:
         self._physical = read_physical(physical) if physical else Physical()
         folders = [physical.parent / "parts"] if physical else []
@@ -56,7 +57,9 @@ class SimulatedBench:
         self._by_hand = frozenset(name for name, channels in positions.items() if not channels)
         room = self._physical.room
         self.room = SimulatedRoom(room.temperature_c, room.swing_k, room.humidity_pct)
-        self.contacts = self._contacts(instruments, positions)
+        self.contacts: Relays = self._contacts(instruments, positions)
+        if circuit is not None:
+            self.contacts = CircuitRelays(circuit, self.contacts)
         self.terminals = FixtureTerminals(
             self.contacts, positions, self._physical.fixture, self.room
         )

@@ -22,6 +22,8 @@ FIGURES = {
 RANGES_A = tuple(FIGURES)
 APERTURE_S = {"SHOR": 0.010, "MED": 0.100, "LONG": 0.500}
 RANGING_S = 0.050
+BURDEN_V = 0.010
+ZERO_CHECK_OHM = 10e3
 _STEP_DOWN = 0.09  # of the range: the reading that makes automatic ranging take a lower one
 _UNSETTLED_READINGS = 2
 
@@ -39,7 +41,7 @@ class CurrentMeter(ScpiDevice):
         self._set_defaults()
         self._add_settings()
         self.tree.add("READ?", self._read)
-        port.take_off(0.0, off=True)
+        self._load(0.0)
 
     def _set_defaults(self) -> None:
         self._range_a = RANGES_A[-1]
@@ -51,7 +53,7 @@ class CurrentMeter(ScpiDevice):
     def reset(self, now_s: float) -> None:
         """The highest range, automatic, zero check on."""
         self._set_defaults()
-        self._port.take_off(now_s, off=True)
+        self._load(now_s)
 
     def _add_settings(self) -> None:
         self.add_setting(
@@ -79,25 +81,30 @@ class CurrentMeter(ScpiDevice):
     def _hold(self, now_s: float, value: object) -> None:
         asked = float(value)  # type: ignore[arg-type]  # the parameter is a Number
         self._automatic = False
-        self._take_range(next(each for each in RANGES_A if each >= asked * (1 - 1e-9)))
+        self._take_range(now_s, next(each for each in RANGES_A if each >= asked * (1 - 1e-9)))
 
-    def _take_range(self, range_a: float) -> bool:
+    def _take_range(self, now_s: float, range_a: float) -> bool:
         if range_a == self._range_a:
             return False
         self._range_a = range_a
         self._unsettled = _UNSETTLED_READINGS
+        self._load(now_s)
         return True
 
     def _check_zero(self, now_s: float, value: object) -> None:
         self._zero = bool(value)
-        self._port.take_off(now_s, off=self._zero)
+        self._load(now_s)
+
+    def _load(self, now_s: float) -> None:
+        """What lies between the terminals now: a range's burden, or what joins them meanwhile."""
+        self._port.load(now_s, ZERO_CHECK_OHM if self._zero else BURDEN_V / self._range_a)
 
     def _current_a(self, now_s: float) -> float:
         return 0.0 if self._zero else self._port.current_a(now_s)
 
     def _read(self, now_s: float) -> Later:
         ends_s = now_s + APERTURE_S[self._aperture]
-        if self._automatic and self._take_range(self._fitting(abs(self._current_a(now_s)))):
+        if self._automatic and self._take_range(now_s, self._fitting(abs(self._current_a(now_s)))):
             ends_s += RANGING_S
         return Later(ends_s, self._measured, True)
 

@@ -79,9 +79,6 @@ class OpenInput:
         """None."""
         return 0.0
 
-    def take_off(self, now_s: float, *, off: bool) -> None:
-        """Nothing follows."""
-
     def voltage_v(self, now_s: float) -> float:
         """None."""
         return 0.0

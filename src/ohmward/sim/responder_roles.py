@@ -115,7 +115,7 @@ class PerfectScanner(Passive):
         self, reading: str, settings: Mapping[str, Any], channels: tuple[str, ...], now_s: float
     ) -> dict[str, Any]:
         """What the contacts are."""
-        closed = self._contacts.closed(now_s)
+        closed = self._contacts.reported(now_s)
         return {
             "channels": tuple(sorted(closed)),
             "closed": tuple(each in closed for each in channels),

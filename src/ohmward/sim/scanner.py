@@ -46,6 +46,10 @@ class Contacts:
             self._settle(now_s)
         return self._closed
 
+    def reported(self, now_s: float) -> frozenset[str]:
+        """The contacts themselves: these relays have a second contact that tells."""
+        return self.closed(now_s)
+
     def changed_s(self, now_s: float) -> float:
         """When a contact moved last."""
         if self._moves:
@@ -89,9 +93,9 @@ class Scanner(ScpiDevice):
         return order
 
     def _are_closed(self, now_s: float, channels: tuple[str, ...]) -> str:
-        closed = self._contacts.closed(now_s)
+        closed = self._contacts.reported(now_s)
         return ",".join(str(int(channel in closed)) for channel in channels)
 
     def _closed(self, now_s: float) -> str:
-        closed = sorted(self._contacts.closed(now_s), key=int)
+        closed = sorted(self._contacts.reported(now_s), key=int)
         return f"(@{','.join(closed)})"

@@ -38,6 +38,9 @@ class Relays(Protocol):
     def closed(self, now_s: float) -> frozenset[str]:
         """The contacts that are closed now."""
 
+    def reported(self, now_s: float) -> frozenset[str]:
+        """The channels that a scanner says are closed, as far as it can know."""
+
     def changed_s(self, now_s: float) -> float:
         """When a contact moved last."""
 

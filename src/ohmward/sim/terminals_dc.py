@@ -40,8 +40,8 @@ class CurrentPort(Protocol):
     def current_a(self, now_s: float) -> float:
         """Current into the high terminal."""
 
-    def take_off(self, now_s: float, *, off: bool) -> None:
-        """Take the input off the terminals, which are then joined through 10 kΩ."""
+    def load(self, now_s: float, ohm: float) -> None:
+        """From now on this resistance is between the terminals: the range's burden, or a zero."""
 
 
 class VoltagePort(Protocol):
