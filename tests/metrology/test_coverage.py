@@ -1,4 +1,4 @@
-"""Do intervals hold the truth as often as they say? Instruments drawn anew for every part.
+"""Intervals hold the truth as often as they say, over instruments drawn anew for every part.
 
 Each part is measured five times by an instrument of its own, whose errors of magnitude and phase
 are drawn from the distributions that the budget states; the readings scatter besides. The bounds

@@ -1,4 +1,4 @@
-"""Draws the two safety tables as state diagrams in text, for DEVELOPERS.md. Pure."""
+"""Draws the two safety tables as state diagrams in text, for DEVELOPERS.md; pure."""
 
 from collections import defaultdict
 from collections.abc import Iterable

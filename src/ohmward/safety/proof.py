@@ -1,4 +1,4 @@
-"""What counts as proof: that a part is connected, and that it is dead. Pure.
+"""What counts as proof: that a part is connected, and that it is dead; pure.
 
 The evidence is numbers with times; what was not resolved is said to be unresolved, never
 taken for a pass.

@@ -1,1 +1,1 @@
-""""""
+"""A simulated bench, which shares no physics, no codec and no reader with what it tests."""
