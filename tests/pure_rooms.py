@@ -9,6 +9,7 @@ import json
 import os
 import pkgutil
 import sys
+from collections.abc import Callable
 from importlib import import_module
 from itertools import product
 from pathlib import Path
@@ -82,7 +83,8 @@ def plan(read: dict[str, Any]) -> Any:
     )
     problems.raise_if_any()
     assert brief is not None
-    return brief.as_dict()["name"], brief
+    brief.as_dict()
+    return brief
 
 
 def talk(read: dict[str, Any]) -> None:
@@ -98,6 +100,7 @@ def talk(read: dict[str, Any]) -> None:
     for piece in (NUMBERS[:20], NUMBERS[20:]):
         receiver.feed(piece)
         message = receiver.next()
+    assert isinstance(message, bytes)
     assert codec.layout(reading).decode(message).values["first"] == 10.0
 
 
@@ -130,10 +133,10 @@ def judge(read: dict[str, Any], brief: Any) -> None:
     for name, value in plain.items():
         columns[name] = np.full(count, value)
     for name in ("frequency_hz", "level_v", "bias_v", "bias_a"):
-        values = np.array([getattr(point, name) for _, point in points], dtype=np.float64)
-        columns[name] = values
+        numbers = np.array([getattr(point, name) for _, point in points], dtype=np.float64)
+        columns[name] = numbers
         if name != "frequency_hz":
-            columns[name.replace("_v", "_set_v").replace("_a", "_set_a")] = values
+            columns[name.replace("_v", "_set_v").replace("_a", "_set_a")] = numbers
     accuracies = {"meter": read["drivers"]["meter"].impedance_accuracy}
     derived = derive_impedance(columns, brief.parts, accuracies)
     assert judge_all(columns, derived, brief.parts, brief.limits, accuracies=accuracies)
@@ -186,13 +189,13 @@ def guard() -> None:
     assert check_request(permit, "C1", "1", bias_v=440.0, level_v=1.0) is ceiling
 
 
-def work() -> None:
-    """All of it, the reading of files apart."""
+def work(name: str) -> None:
+    """All of it; the name is that of the phase, the reading of files apart."""
     global phase
     phase = "reading"
     read = read_files()
-    phase = "memory" if warm else "warming"
-    _, brief = plan(read)
+    phase = name
+    brief = plan(read)
     talk(read)
     judge(read, brief)
     measure()
@@ -206,22 +209,23 @@ def sin(name: str) -> None:
     import sqlite3
     import subprocess
 
-    {
+    deeds: dict[str, Callable[[], object]] = {
         "read": lambda: Path(__file__).read_text("utf-8"),
         "write": lambda: Path(os.devnull).write_text("x", "utf-8"),
         "socket": lambda: socket.socket().close(),
         "subprocess": lambda: subprocess.run(["true"], check=True),
         "sqlite": lambda: sqlite3.connect(":memory:").close(),
         "remove": lambda: Path("/nowhere/at/all").unlink(missing_ok=True),
-    }[name]()
+    }
+    deeds[name]()
 
 
 sys.addaudithook(watch)
 names = modules()
 for name in names:
     import_module(name)
-for warm in (False, True):
-    work()
+for name in ("warming", "memory"):
+    work(name)
 for name in sys.argv[1:]:
     phase = "reading"
     phase = "memory"
