@@ -210,6 +210,7 @@ def test_an_unknown_kind_is_refused() -> None:
         Fault(kind="gremlin")
 
 
+@pytest.mark.slow
 @given(st.integers(0, 1000), st.sampled_from(sorted(KINDS)))
 def test_the_same_seed_gives_the_same_faults(seed: int, kind: str) -> None:
     def record() -> tuple[list[bytes], list[tuple[float, str]]]:

@@ -294,6 +294,7 @@ def test_the_error_stays_for_a_part_and_differs_between_instruments_and_parts() 
     assert len(others) == 3
 
 
+@pytest.mark.slow
 def test_the_error_is_within_its_figures_and_evenly_spread_in_magnitude_and_phase() -> None:
     figures = MeterFigures()
     widths = figures.half_widths(1e3, 1e3, 1.0)

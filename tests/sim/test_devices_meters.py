@@ -191,6 +191,7 @@ magnitudes = st.floats(1e-12, 9e5) | st.just(0.0)
 numbers = st.builds(lambda m, s: s * m, magnitudes, st.sampled_from([-1.0, 1.0]))
 
 
+@pytest.mark.slow
 @given(numbers, numbers, st.integers(0, 0xFFFF))
 def test_any_number_fits_a_frame(first: float, second: float, counter: int) -> None:
     frame = frame_of(Drive(pair="RX"), Reading(first, second, 0, 0.6, 0.0), 0, counter)
@@ -209,6 +210,7 @@ FACTORS = {
 }  # fmt: skip
 
 
+@pytest.mark.slow
 @given(numbers, numbers)
 def test_any_number_fits_a_line(first: float, second: float) -> None:
     line = line_of(Drive(pair="RX"), Reading(first, second, 0, 0.6, 0.0), 0, 1)

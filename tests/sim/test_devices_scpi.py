@@ -253,6 +253,7 @@ def test_channel_lists() -> None:
         assert refused.value.number == number, text
 
 
+@pytest.mark.slow
 @given(st.lists(st.binary(max_size=40), max_size=8), st.booleans())
 def test_no_bytes_break_the_device(pieces: list[bytes], message_based: bool) -> None:
     device = Adjustable()
@@ -264,6 +265,7 @@ def test_no_bytes_break_the_device(pieces: list[bytes], message_based: bool) -> 
     assert ask(device, "*IDN?", 60.0) == "GENERIC,ADJUSTABLE,7,1.0\n"
 
 
+@pytest.mark.slow
 @given(st.floats(-10, 10), st.integers(1, 40))
 def test_a_line_means_the_same_however_it_is_cut(volts: float, cut: int) -> None:
     line = f"VOLT {volts!r};VOLT?;*ESR?\n".encode()

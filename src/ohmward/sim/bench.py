@@ -67,20 +67,31 @@ class SimulatedBench:
         self.named: dict[str, Device] = {}
         self.devices: dict[str, Device] = {}
         self.layers: dict[str, FaultLayer] = {}
-        around = Surroundings(
-            seed=seed,
-            contacts=self.contacts,
-            terminals=self.terminals,
-            room=self.room,
-            circuit=circuit or OpenCircuit(),
+        self._install(
+            instruments,
+            Surroundings(
+                seed=seed,
+                contacts=self.contacts,
+                terminals=self.terminals,
+                room=self.room,
+                circuit=circuit or OpenCircuit(),
+            ),
+            faulty,
         )
+
+    def _install(
+        self,
+        instruments: Sequence[InstrumentAt],
+        around: Surroundings,
+        faulty: Collection[str],
+    ) -> None:
         by_address: dict[str, list[InstrumentAt]] = {}
         for instrument in instruments:
             by_address.setdefault(instrument.address, []).append(instrument)
         for address, neighbours in by_address.items():
             device = self._device(neighbours, around)
             if any(one.name in faulty for one in neighbours):
-                device = layer = FaultLayer(device, seed)
+                device = layer = FaultLayer(device, around.seed)
                 self.layers.update({one.name: layer for one in neighbours})
             self.devices[address] = device
             self.named.update({one.name: device for one in neighbours})
