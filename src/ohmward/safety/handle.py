@@ -48,6 +48,9 @@ class Warden(Protocol):
         because there a person is asked for that part. One lease at a time.
         """
 
+    async def holds(self) -> bool:
+        """Whether the contacts of the open lease, and no others, still read back closed."""
+
     async def release(self) -> None:
         """End the lease: open the meter path and read back that it is open."""
 

@@ -61,6 +61,16 @@ class ScannerWarden:
                 f"but {_named(after)} read back closed"
             )
 
+    async def holds(self) -> bool:
+        """Whether the leased contacts, and no others, read back closed."""
+        if self._leased is None:
+            return False
+        try:
+            return await self._scanner.closed() == frozenset(self._meter_channels[self._leased])
+        except LinkError as error:
+            await self._open_everything(f"after a fault on the scanner's link ({error})")
+            raise
+
     async def release(self) -> None:
         """Open the meter path; nothing may read back closed afterwards."""
         if self._leased is None:
@@ -140,6 +150,10 @@ class HandLoadedWarden:
             await self._operator.place(part_id, position)
             self._placed = (part_id, position)
         self._leased = position
+
+    async def holds(self) -> bool:
+        """While a lease is open: there are no contacts that could fall off."""
+        return self._leased is not None
 
     async def release(self) -> None:
         """End the lease; the part stays where it is until another is placed."""

@@ -15,3 +15,4 @@ class Status(StrEnum):
     NOT_SET = "not-set"  # the meter did not take a setting: the read-back differs
     UNSETTLED = "unsettled"  # the settle rule was not met in its time
     REFUSED = "refused"  # the meter reported an error of its own
+    DISCONNECTED = "disconnected"  # the part's contacts were found open afterwards
