@@ -2,8 +2,9 @@
 
 import json
 import secrets
+import sys
 from collections.abc import Callable, Mapping
-from contextlib import nullcontext
+from contextlib import nullcontext, suppress
 from dataclasses import dataclass
 from datetime import timedelta
 from importlib.metadata import version
@@ -34,6 +35,7 @@ from ohmward.run.bench import Connections
 from ohmward.run.recorder import Recorder
 from ohmward.run.resuming import Progress, note_differences, progress_of
 from ohmward.run.runner import Order, carry_out
+from ohmward.run.stopping import StopSignals, catch_signals
 from ohmward.run.watcher import Silent, Watcher
 
 RECORDED_PACKAGES = ("pyvisa", "pyvisa-py", "numpy", "scipy", "pandas", "pydantic", "trio")
@@ -58,33 +60,39 @@ def dry_run(prepared: Prepared, *, out: Path, seed: int = 0, watch: bool = False
     run_id = f"dry-{prepared.brief.hash[:12]}-{seed}"
     journal = run_folder.make(out, prepared.sources, prepared.brief)
     facts = _facts(prepared, run_id=run_id, simulated=True, seed=seed)
-    return _go(_Task(prepared, out, journal, facts, seed=seed), watch=watch)
+    with run_folder.held(out):
+        return _go(_Task(prepared, out, journal, facts, seed=seed), watch=watch)
 
 
 def run(prepared: Prepared, *, out: Path, watch: bool = False) -> Outcome:
     """Carry the brief out on the real bench.
 
-    Raises BadInput when ``out`` exists or a stage energises, and whatever ended the run early;
-    what was measured until then is in the folder.
+    Raises BadInput when ``out`` exists, a stage energises or nobody is there to load parts, and
+    whatever ended the run early; what was measured until then is in the folder.
     """
     refuse_energising(prepared)
+    refuse_unattended(prepared)
     now = today_utc()
     run_id = f"{now:%Y%m%dT%H%M%SZ}-{secrets.token_hex(2)}"
     journal = run_folder.make(out, prepared.sources, prepared.brief)
     facts = _facts(prepared, run_id=run_id, simulated=False, seed=None)
-    return _go(_Task(prepared, out, journal, facts), watch=watch)
+    with run_folder.held(out):
+        return _go(_Task(prepared, out, journal, facts), watch=watch)
 
 
 def resume(folder: Path, *, watch: bool = False) -> Outcome:
     """Go on with a run that was stopped or killed; readings that were taken are kept.
 
-    Raises BadInput naming every difference when sequence, bench, parts or drivers are not those
-    that the run began with, or another instrument answers.
+    Raises BadInput when there is no run in the folder, or naming every difference when sequence,
+    bench, parts or drivers are not those that the run began with, or another instrument answers.
     """
+    with run_folder.held(folder):
+        return _resume(folder, watch=watch)
+
+
+def _resume(folder: Path, *, watch: bool) -> Outcome:
     progress = progress_of(folder)
     facts = dict(progress.facts)
-    if not {"paths", "hashes", "brief_sha256", "run_id"} <= set(facts):
-        raise OhmwardError(f"{folder}: this run never began; start it again in a new folder")
     paths = json.loads(facts["paths"])
     prepared = prepare(paths["sequence"], bench=paths["bench"], parts=paths["parts"])
     problems = Problems()
@@ -96,6 +104,8 @@ def resume(folder: Path, *, watch: bool = False) -> Outcome:
     task = _Task(prepared, folder, folder / run_folder.JOURNAL, facts, seed=seed, progress=progress)
     if progress.finished:
         return _finish(task, _truth_of(task))
+    if not task.simulated:
+        refuse_unattended(prepared)
     return _go(task, watch=watch)
 
 
@@ -109,6 +119,23 @@ def refuse_energising(prepared: Prepared) -> None:
             key=f"stage '{stage}'",
             expected="no stage that energises: this version runs those on simulated benches only",
             found="one that does",
+        )
+    problems.raise_if_any()
+
+
+def refuse_unattended(prepared: Prepared) -> None:
+    """Raise BadInput where a person has to load each part and there is no terminal to ask at.
+
+    Told before anything is opened or written: it is how the run was started that is wrong.
+    """
+    problems = Problems()
+    if prepared.bench.fixture.loading == "by hand" and not sys.stdin.isatty():
+        problems.add(
+            id="nobody-to-load-parts",
+            file=prepared.bench.path,
+            key="fixture.loading",
+            expected="a terminal at which a person is asked for each part, or a scanner",
+            found="'by hand', and standard input is no terminal",
         )
     problems.raise_if_any()
 
@@ -134,27 +161,29 @@ def _go(task: _Task, *, watch: bool) -> Outcome:
     console = Console(stderr=True, highlight=False)
     bar = ProgressBar(console) if watch else nullcontext(Silent())
     truth: Truth | None = None
-    try:
-        with bar as watcher:
-            if task.simulated:
-                truth = _run_dry(task, watcher)
-            else:
-                _run_real(task, watcher)
-    except OhmwardError as error:
-        if not isinstance(error, BadInput):
+    with catch_signals() as stop:  # until the tables are there: a second Ctrl-C must not tear them
+        try:
+            with bar as watcher:
+                if task.simulated:
+                    truth = _run_dry(task, watcher, stop)
+                else:
+                    _run_real(task, watcher, stop)
+        except BadInput:
+            raise
+        except Exception as error:
             _finish_what_there_is(task, error)
-        raise
-    return _finish(task, truth)
+            raise
+        return _finish(task, truth)
 
 
-def _run_dry(task: _Task, watcher: Watcher) -> Truth:
+def _run_dry(task: _Task, watcher: Watcher, stop: StopSignals) -> Truth:
     bench = simulation.build(task.prepared, seed=task.seed)
     last_s = task.progress.last_elapsed_s if task.progress else 0.0
 
     async def main(clock: Clock) -> None:
         connections = simulation.connections(bench)
         recorder = Recorder(InlineWriter(_store(task)), clock, elapsed_offset_s=last_s)
-        await _carry_out(task, connections, recorder, watcher)
+        await _carry_out(task, connections, recorder, watcher, stop)
 
     run_in_virtual_time(main, start_utc=DRY_RUN_START_UTC + timedelta(seconds=last_s))
     return simulation.truth_of(bench)
@@ -166,7 +195,7 @@ def _truth_of(task: _Task) -> Truth | None:
     return simulation.truth_of(simulation.build(task.prepared, seed=task.seed))
 
 
-def _run_real(task: _Task, watcher: Watcher) -> None:
+def _run_real(task: _Task, watcher: Watcher, stop: StopSignals) -> None:
     from pyvisa import ResourceManager
 
     from ohmward.links.thread_waiter import ThreadWaiter
@@ -179,7 +208,7 @@ def _run_real(task: _Task, watcher: Watcher) -> None:
         )
         recorder = Recorder(ThreadWriter(_store(task)), clock, elapsed_offset_s=elapsed_s)
         try:
-            await _carry_out(task, connections, recorder, watcher)
+            await _carry_out(task, connections, recorder, watcher, stop)
         finally:
             manager.close()
 
@@ -192,14 +221,26 @@ def _store(task: _Task) -> Store:
 
 
 async def _carry_out(
-    task: _Task, connections: Connections, recorder: Recorder, watcher: Watcher
+    task: _Task,
+    connections: Connections,
+    recorder: Recorder,
+    watcher: Watcher,
+    stop: StopSignals,
 ) -> None:
     progress, brief = task.progress, task.prepared.brief
     ended = progress.ended if progress else frozenset()
     behind_s = sum(stage.duration_s for stage in brief.stages if stage.number in ended)
-    if progress is None:
-        for key, value in task.facts.items():
-            await recorder.fact(key, value)
+    try:
+        if progress is None:
+            for key, value in task.facts.items():
+                await recorder.fact(key, value)
+        else:
+            await recorder.event("resumed")
+        await recorder.settled()
+    except OhmwardError:
+        with suppress(OhmwardError):
+            await recorder.close()
+        raise
     order = Order(
         brief=brief,
         bench=task.prepared.bench,
@@ -213,7 +254,7 @@ async def _carry_out(
         ),
     )
     watcher.begun(brief, behind_s=behind_s)
-    await carry_out(order, connections, recorder, watcher)
+    await carry_out(order, connections, recorder, watcher, stop)
 
 
 def _facts(prepared: Prepared, *, run_id: str, simulated: bool, seed: int | None) -> dict[str, str]:
@@ -239,18 +280,19 @@ def _facts(prepared: Prepared, *, run_id: str, simulated: bool, seed: int | None
 
 
 def _finish(task: _Task, truth: Truth | None) -> Outcome:
-    """Tables and manifest of a run's folder, made anew from its journal."""
-    run_folder.forget_derived(task.folder)
+    """Tables and manifest of a run's folder, made anew from its journal.
+
+    Raises FolderUnusable when they cannot be written.
+    """
     prepared = task.prepared
-    results = tabulate(task.folder, prepared.brief, prepared.drivers, prepared.cable_m, truth)
-    manifest.write(
-        task.folder,
-        {
-            "run_id": task.facts["run_id"],
-            "ohmward": task.facts["ohmward"],
-            "brief_sha256": task.facts["brief_sha256"],
-        },
-    )
+    about = {key: task.facts[key] for key in ("run_id", "ohmward", "brief_sha256")}
+    try:
+        run_folder.forget_derived(task.folder)
+        results = tabulate(task.folder, prepared.brief, prepared.drivers, prepared.cable_m, truth)
+        manifest.write(task.folder, about)
+    except OSError as error:
+        reason = error.strerror or str(error)
+        raise run_folder.FolderUnusable(f"{error.filename or task.folder}: {reason}") from error
     return Outcome(
         folder=task.folder,
         run_id=task.facts["run_id"],
@@ -260,9 +302,9 @@ def _finish(task: _Task, truth: Truth | None) -> Outcome:
     )
 
 
-def _finish_what_there_is(task: _Task, error: OhmwardError) -> None:
+def _finish_what_there_is(task: _Task, error: Exception) -> None:
     """Tables of a run that ended early; a failure here must not hide what ended it."""
     try:
         _finish(task, None)
-    except (OhmwardError, OSError) as second:
+    except Exception as second:
         error.add_note(f"its tables could not be written either: {second}")

@@ -6,6 +6,8 @@ are NULL. A reading is one row with the reply's bytes beside the decoded numbers
 hand can decode it again.
 """
 
+from ohmward.terms.status import Status
+
 USER_VERSION = 1
 
 TABLES = """
@@ -122,6 +124,10 @@ INSERT_INSTRUMENT = (
 BEGIN_STAGE = (
     "INSERT INTO stage (number, name, kind, part_id, position, state)"
     " VALUES (?, ?, ?, ?, ?, 'begun') ON CONFLICT (number) DO UPDATE SET state = 'begun'"
+)
+DISCONNECT = (
+    f"UPDATE impedance SET status = '{Status.DISCONNECTED}'"
+    f" WHERE stage = ? AND elapsed_s >= ? AND status = '{Status.OK}'"
 )
 END_STAGE = "UPDATE stage SET state = ? WHERE number = ?"
 INSERT_SETTING = (

@@ -97,6 +97,12 @@ class Store:
 
     # -- reading -----------------------------------------------------------------------------
 
+    def examine(self) -> None:
+        """Read every page; raises JournalUnusable where one is damaged."""
+        found = [row[0] for row in self._select("PRAGMA quick_check(3)")]
+        if found != ["ok"]:
+            raise JournalUnusable(f"{self.path}: damaged: {'; '.join(found)}")
+
     def facts(self) -> dict[str, str]:
         """What the run table says: identity, hashes, paths, state."""
         return dict(self._select("SELECT key, value FROM run"))
@@ -141,9 +147,10 @@ class Store:
     def impedance(self, rows_at_once: int = 2048) -> Iterator[list[Row]]:
         """Readings in order, in batches: ``reading`` then schema.IMPEDANCE_COLUMNS."""
         names = ", ".join(("reading", *schema.IMPEDANCE_COLUMNS))
-        cursor = self._connection.execute(f"SELECT {names} FROM impedance ORDER BY reading")
-        while batch := cursor.fetchmany(rows_at_once):
-            yield batch
+        with _told(self.path):
+            cursor = self._connection.execute(f"SELECT {names} FROM impedance ORDER BY reading")
+            while batch := cursor.fetchmany(rows_at_once):
+                yield batch
 
     def events(self) -> list[Row]:
         """Events in order: ``event`` then schema.EVENT_COLUMNS."""

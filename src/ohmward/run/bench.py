@@ -20,6 +20,8 @@ from ohmward.setup.bench import Bench
 from ohmward.setup.driver import Driver
 from ohmward.terms.role import Role
 
+CANNOT_ENERGISE = frozenset({Role.SCANNER, Role.THERMOMETER})
+
 
 @dataclass(frozen=True, kw_only=True, slots=True)
 class Connections:
@@ -32,13 +34,18 @@ class Connections:
 
 @dataclass(frozen=True, kw_only=True, slots=True)
 class OpenBench:
-    """A bench whose instruments have all said who they are."""
+    """A bench whose instruments have all said who they are.
+
+    Where ``only_meter_energises``, nothing on the bench can hold a voltage on a part while the
+    meter's own bias is off, whatever the relays do.
+    """
 
     identities: Mapping[str, str]
     meter: ImpedanceMeter
     meter_name: str
     thermometer: Thermometer | None
     warden: Warden
+    only_meter_energises: bool
 
 
 @asynccontextmanager
@@ -64,7 +71,7 @@ async def open_bench(
             try:
                 identities[name] = await talker.identify()
             except LinkError as error:
-                error.add_note(f"instrument {name} of bench {bench.name}")
+                error.add_note(f"instrument {name} of {bench.name}")
                 raise
         yield _gather(bench, talkers, identities, connections.operator)
     finally:
@@ -92,8 +99,9 @@ def _gather(
         )
     return OpenBench(
         identities=identities,
-        meter=ImpedanceMeter(talkers[meter_name]),
+        meter=ImpedanceMeter(talkers[meter_name], cable_m=bench.instruments[meter_name].cable_m),
         meter_name=meter_name,
         thermometer=Thermometer(talkers[thermometer]) if thermometer else None,
         warden=warden,
+        only_meter_energises=set(names) <= CANNOT_ENERGISE | {Role.IMPEDANCE_METER},
     )

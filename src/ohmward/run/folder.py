@@ -1,12 +1,15 @@
 """The folder of a run: made new, with copies of what the run was made from."""
 
+import fcntl
 import json
+import os
 import shutil
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 
-from ohmward.errors import BadInput, OhmwardError, Problem
+from ohmward.errors import BadInput, BenchHeld, OhmwardError, Problem
 from ohmward.sequence.brief import Brief
 from ohmward.setup.driver import Driver
 
@@ -15,7 +18,7 @@ INPUTS = "inputs"
 
 
 class FolderUnusable(OhmwardError):
-    """The run's folder cannot be made or written to."""
+    """The run's folder cannot be written to."""
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -29,22 +32,52 @@ class Sources:
 def refuse_existing(out: Path) -> None:
     """Raise BadInput when the folder is there already: nothing is ever written over."""
     if out.exists() or out.is_symlink():
-        problem = Problem(
-            id="output-exists",
-            file=str(out),
-            key="--out",
-            expected="a folder that does not exist yet",
-            found="one that does",
+        raise _out_refused(
+            "output-exists", out, "a folder that does not exist yet", "one that does"
         )
-        raise BadInput((problem,))
+
+
+def _out_refused(id: str, out: Path, expected: str, found: str) -> BadInput:  # noqa: A002
+    problem = Problem(id=id, file=str(out), key="--out", expected=expected, found=found)
+    return BadInput((problem,))
+
+
+@contextmanager
+def held(folder: Path) -> Iterator[None]:
+    """Keep other processes from writing into a run's folder; ends with the process at the latest.
+
+    Raises BenchHeld when another process holds it. Where the file system knows no locks, nobody
+    is kept from anything.
+    """
+    try:
+        descriptor = os.open(folder, os.O_RDONLY | os.O_DIRECTORY)
+    except OSError:
+        yield  # there is no such folder: whoever reads it will say so
+        return
+    try:
+        fcntl.flock(descriptor, fcntl.LOCK_EX | fcntl.LOCK_NB)
+    except BlockingIOError:
+        os.close(descriptor)
+        raise BenchHeld(f"{folder}: this run is being carried out by another process") from None
+    except OSError:
+        pass
+    try:
+        yield
+    finally:
+        os.close(descriptor)
 
 
 def make(out: Path, sources: Sources, brief: Brief) -> Path:
     """Make the folder with copies of the inputs; returns the path of the journal to be.
 
-    Raises BadInput when it exists, FolderUnusable when it cannot be written.
+    Raises BadInput when it exists or cannot be made, FolderUnusable when it cannot be written.
     """
     refuse_existing(out)
+    try:
+        out.mkdir(parents=True)
+    except OSError as error:
+        reason = error.strerror or str(error)
+        raise _out_refused("output-unusable", out, "a place for a new folder", reason) from error
     try:
         inputs = out / INPUTS
         (inputs / "drivers").mkdir(parents=True)

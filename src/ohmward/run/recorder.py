@@ -114,6 +114,16 @@ class Recorder:
         )
         await self._writer.add(schema.INSERT_IMPEDANCE, row)
 
+    def elapsed_s(self) -> float:
+        """Seconds since the run began, as they are written."""
+        return self._clock.elapsed_s() + self._offset_s
+
+    async def disconnected(self, stage: PlannedStage, since_s: float) -> None:
+        """Keep that the part was not connected: its readings from ``since_s`` on are no numbers."""
+        await self._writer.add(schema.DISCONNECT, (stage.number, since_s))
+        await self.event("contact-lost", part=stage.part, stage=stage.stage)
+        await self._writer.settled()  # before another reading, so that it meets only the old ones
+
     async def settled(self) -> None:
         """Return when everything kept so far is lasting."""
         await self._writer.settled()

@@ -5,12 +5,14 @@ from dataclasses import dataclass
 from datetime import datetime, timedelta
 from pathlib import Path
 
-from ohmward.errors import Problems
-from ohmward.journal.store import Store
+from ohmward.errors import BadInput, Problem, Problems
+from ohmward.journal.store import JournalUnusable, Store
 from ohmward.run.folder import JOURNAL
 from ohmward.run.recorder import EPOCH
 from ohmward.sequence.brief import Brief
 from ohmward.setup.driver import Driver
+
+NEEDED_FACTS = {"run_id", "simulated", "seed", "ohmward", "brief_sha256", "hashes", "paths"}
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -43,9 +45,26 @@ class Progress:
 
 
 def progress_of(folder: Path) -> Progress:
-    """Read the journal of a run's folder. Raises JournalUnusable."""
+    """Read the journal of a run's folder. Raises BadInput when it holds no run of ours."""
+    try:
+        progress = _progress_of(folder)
+    except JournalUnusable as error:
+        raise _no_run(folder, "no-journal", "the folder of a run", str(error)) from error
+    if not set(progress.facts) >= NEEDED_FACTS:
+        found = "one that ended before anything was done; start it again in a new folder"
+        raise _no_run(folder, "run-never-began", "a run that has begun", found)
+    return progress
+
+
+def _no_run(folder: Path, id: str, expected: str, found: str) -> BadInput:  # noqa: A002
+    problem = Problem(id=id, file=str(folder), key="DIR", expected=expected, found=found)
+    return BadInput((problem,))
+
+
+def _progress_of(folder: Path) -> Progress:
     store = Store.read(folder / JOURNAL)
     try:
+        store.examine()
         stages = store.stages()
         begun = [number for number, stage in stages.items() if stage["state"] != "ended"]
         last = store.last_instant()

@@ -6,13 +6,21 @@ closed; only then does the exception travel on.
 """
 
 from collections.abc import Mapping
-from contextlib import nullcontext, suppress
+from contextlib import ExitStack, nullcontext, suppress
 from dataclasses import dataclass
 from functools import partial
 
 import trio
 
-from ohmward.errors import BadInput, NotProvenSafe, OhmwardError, Problem, Stopped
+from ohmward.errors import (
+    BadInput,
+    LinkError,
+    NotProvenSafe,
+    OhmwardError,
+    Problems,
+    Stopped,
+    WrongIdentity,
+)
 from ohmward.run.bench import Connections, OpenBench, open_bench
 from ohmward.run.recorder import Recorder
 from ohmward.run.stopping import StopSignals, catch_signals
@@ -42,46 +50,86 @@ class Order:
 
 
 async def carry_out(
-    order: Order, connections: Connections, recorder: Recorder, watcher: Watcher
-) -> Ending:
-    """Run the order to its end and close the journal; returns how the bench was left.
+    order: Order,
+    connections: Connections,
+    recorder: Recorder,
+    watcher: Watcher,
+    stop: StopSignals | None = None,
+) -> None:
+    """Run the order to its end and close the journal.
 
+    ``stop`` are the signals that end it, where the caller catches them already.
     Raises Stopped after a signal, LinkError when a link is lost beyond its budget, SafetyTrip
     after a trip, BadInput when the bench is not the one that the run began with: each after the
     orderly end. NotProvenSafe stands before them all: the end could not be proven.
     """
     try:
-        with catch_signals() as stop:
-            async with open_bench(order.bench, order.drivers, connections) as bench:
-                await _note_identities(order, bench, recorder)
-                ending = await _work_then_end(order, bench, recorder, watcher, stop)
+        with ExitStack() as stack:
+            signals = stop or stack.enter_context(catch_signals())
+            await signals.run(partial(_on_open_bench, order, connections, recorder, watcher))
         await recorder.fact("state", "finished")
     except BaseException as error:
         with trio.CancelScope(shield=True):
             await _close_after(recorder, error)
         raise
     await recorder.close()
-    return ending
+
+
+async def _on_open_bench(
+    order: Order, connections: Connections, recorder: Recorder, watcher: Watcher
+) -> None:
+    """Open the bench, see that it is the right one, work on it and leave it at rest."""
+    opened = False
+    try:
+        async with open_bench(order.bench, order.drivers, connections) as bench:
+            opened = True
+            await _note_identities(order, bench, recorder)
+            await _work_then_end(order, bench, recorder, watcher)
+    except WrongIdentity as error:
+        if order.identities and not opened:
+            raise _another_bench(order, error) from error
+        raise
+
+
+def _another_bench(order: Order, error: WrongIdentity) -> BadInput:
+    """An instrument other than the bench file's own answers where a run is to be gone on with."""
+    problems = Problems()
+    for name, instrument in order.bench.instruments.items():
+        if instrument.address == error.address and name in order.identities:
+            _identity_changed(problems, order, name, str(error))
+    return BadInput(tuple(problems))
+
+
+def _identity_changed(problems: Problems, order: Order, name: str, found: str) -> None:
+    problems.add(
+        id="identity-changed",
+        file=order.bench.path,
+        key=f"instrument.{name}",
+        expected=f"{order.identities[name]!r}, with which this run began",
+        found=found,
+    )
 
 
 async def _work_then_end(
-    order: Order, bench: OpenBench, recorder: Recorder, watcher: Watcher, stop: StopSignals
-) -> Ending:
+    order: Order, bench: OpenBench, recorder: Recorder, watcher: Watcher
+) -> None:
     """Do the work, and whatever comes of it bring the bench to rest."""
     try:
-        await stop.run(partial(_work, order, bench, recorder, watcher))
+        await _work(order, bench, recorder, watcher)
     except BaseException as error:
-        ending = await _bring_to_rest(bench, recorder)
+        ending = await _bring_to_rest(bench, recorder, watcher)
         if not ending.proven:
             raise NotProvenSafe("; ".join(ending.reasons)) from error
+        if isinstance(error, NotProvenSafe) and isinstance(error.__cause__, LinkError):
+            raise error.__cause__ from None  # relays that nobody reaches, and no voltage on them
         raise
-    ending = await _bring_to_rest(bench, recorder)
+    ending = await _bring_to_rest(bench, recorder, watcher)
     if not ending.proven:
         raise NotProvenSafe("; ".join(ending.reasons))
-    return ending
 
 
 async def _work(order: Order, bench: OpenBench, recorder: Recorder, watcher: Watcher) -> None:
+    await bench.meter.rest()  # before any relay moves: it may stand there with its bias on
     await bench.warden.start()
     room = Room(bench.thermometer)
     for stage in order.brief.stages:
@@ -93,6 +141,7 @@ async def _work(order: Order, bench: OpenBench, recorder: Recorder, watcher: Wat
             stage,
             meter=bench.meter,
             meter_name=bench.meter_name,
+            warden=bench.warden,
             room=room,
             recorder=recorder,
             watcher=watcher,
@@ -116,12 +165,19 @@ async def _note_stage_end(recorder: Recorder, stage: PlannedStage, state: str) -
         await recorder.stage_ended(stage, state)
 
 
-async def _bring_to_rest(bench: OpenBench, recorder: Recorder) -> Ending:
-    """Meter at rest, everything open; never raises, so that nothing keeps the rest from it."""
+async def _bring_to_rest(bench: OpenBench, recorder: Recorder, watcher: Watcher) -> Ending:
+    """Meter at rest, everything open; never raises, so that nothing keeps the rest from it.
+
+    Relays that cannot be reached are told, but where the meter's bias is off and nothing else
+    can energise, there is nothing that they could let through.
+    """
     with trio.CancelScope(shield=True):
-        endings = [await _rest_meter(bench), await bench.warden.stop()]
-        ending = Ending.of_all(tuple(endings))
+        rest, relays = await _rest_meter(bench), await bench.warden.stop()
+        ending = Ending.of_all((rest, relays))
         detail = "proven" if ending.proven else "; ".join(ending.reasons)
+        if rest.proven and bench.only_meter_energises and not relays.proven:
+            ending = rest
+            watcher.note(f"The meter's bias is off, but {'; '.join(relays.reasons)}")
         with suppress(OhmwardError):  # a failing journal raises again where it is closed
             await recorder.event("made-safe" if ending.proven else "not-proven-safe", detail)
     return ending
@@ -140,18 +196,13 @@ async def _rest_meter(bench: OpenBench) -> Ending:
 
 
 async def _note_identities(order: Order, bench: OpenBench, recorder: Recorder) -> None:
+    problems = Problems()
     for name, identity in bench.identities.items():
-        expected = order.identities.get(name, identity)
+        if identity != order.identities.get(name, identity):
+            _identity_changed(problems, order, name, repr(identity))
+    problems.raise_if_any()
+    for name, identity in bench.identities.items():
         instrument, driver = order.bench.instruments[name], order.drivers[name]
-        if identity != expected:
-            problem = Problem(
-                id="identity-changed",
-                file=str(order.bench.path),
-                key=f"instrument.{name}",
-                expected=f"{expected!r}, with which this run began",
-                found=repr(identity),
-            )
-            raise BadInput((problem,))
         await recorder.instrument(
             name=name,
             role=instrument.role.value,
@@ -172,4 +223,5 @@ async def _close_after(recorder: Recorder, error: BaseException) -> None:
             stopped = isinstance(error, Stopped)
             await recorder.fact("state", "stopped" if stopped else "failed")
             await recorder.event("stopped" if stopped else "failed", str(error))
+    with suppress(OhmwardError):
         await recorder.close()

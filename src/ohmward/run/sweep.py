@@ -10,12 +10,15 @@ from ohmward.instruments.impedance_meter import ImpedanceMeter
 from ohmward.instruments.thermometer import Thermometer
 from ohmward.run.recorder import Recorder
 from ohmward.run.watcher import Watcher
+from ohmward.safety.handle import Warden
 from ohmward.sequence.brief import PlannedSweep, Settle
 from ohmward.terms.condition import Point
 from ohmward.terms.reading import Environment, ImpedanceReading
 from ohmward.terms.status import Status
 
 ENVIRONMENT_HOLDS_S = 60.0  # rooms change slowly; a thermometer is asked once a minute
+AFTER_A_FAULT = frozenset({Status.TIMEOUT, Status.STALE})
+"""A reading that ended so may have met a power cut, which opens a scanner's relays as well."""
 
 
 class Room:
@@ -36,7 +39,11 @@ class Room:
 
 
 class Sweep:
-    """One planned sweep on a meter that is connected to the part."""
+    """One planned sweep on a meter that is connected to the part.
+
+    Connected, or nothing counts: the contacts are read back at the end, and after a fault of
+    the meter's link; readings since they were last seen closed count only if they still are.
+    """
 
     def __init__(
         self,
@@ -44,6 +51,7 @@ class Sweep:
         *,
         meter: ImpedanceMeter,
         meter_name: str,
+        warden: Warden,
         room: Room,
         recorder: Recorder,
         watcher: Watcher,
@@ -51,34 +59,63 @@ class Sweep:
         self._stage = stage
         self._meter = meter
         self._meter_name = meter_name
+        self._warden = warden
         self._room = room
         self._recorder = recorder
         self._watcher = watcher
         self._done = 0
+        self._connected_s = 0.0
 
     async def carry_out(self, taken: set[tuple[int, int]]) -> None:
         """Take every reading that is not in ``taken`` (point index, repeat), in order.
 
-        Raises LinkError when the meter is lost beyond its link's budget; what was read before
-        is kept.
+        The lease on the part has just been given. Raises LinkError when a link is lost beyond
+        its budget; what was read before is kept.
         """
         stage = self._stage
         self._done = len(taken)
-        found = await self._meter.prepare(
-            pair=stage.pair, integration=stage.integration, range_ohm=stage.range_ohm
-        )
+        self._connected_s = self._recorder.elapsed_s()
+        left = [
+            (index, point, repeats)
+            for index, point in enumerate(stage.points)
+            if (repeats := [r for r in range(stage.repeats) if (index, r) not in taken])
+        ]
+        if not left:
+            return
+        try:
+            found = await self._meter.prepare(
+                pair=stage.pair, integration=stage.integration, range_ohm=stage.range_ohm
+            )
+        except InstrumentRefused as error:
+            await self._tell_refused(error)
+            for index, point, repeats in left:
+                await self._keep_not_set(index, point, repeats)
+            return
         await self._recorder.settings(stage, self._meter_name, found)
-        for index, point in enumerate(stage.points):
-            repeats = [r for r in range(stage.repeats) if (index, r) not in taken]
-            if repeats:
-                await self._take(index, point, repeats)
+        for index, point, repeats in left:
+            await self._take(index, point, repeats)
+        await self._see_contacts()
+
+    async def _see_contacts(self) -> None:
+        """Count what was read since the contacts were last seen only if they are still closed."""
+        if not await self._warden.holds():
+            await self._recorder.disconnected(self._stage, self._connected_s)
+            part = self._stage.part
+            self._watcher.note(
+                f"{part.part_id}, {self._stage.stage}: its contacts did not stay closed; "
+                "readings since they were last seen closed do not count"
+            )
+            await self._warden.release()
+            await self._warden.lease(part.position, part.part_id)
+        self._connected_s = self._recorder.elapsed_s()
 
     async def _take(self, index: int, point: Point, repeats: list[int]) -> None:
         stage = self._stage
         try:
             await self._meter.set_point(point)
         except InstrumentRefused as error:
-            await self._refused(index, point, repeats, error)
+            await self._tell_refused(error)
+            await self._keep_not_set(index, point, repeats)
             return
         if stage.dwell_s:
             await trio.sleep(stage.dwell_s)
@@ -87,10 +124,13 @@ class Sweep:
         for count, repeat in enumerate(repeats):
             if stage.interval_s:
                 await trio.sleep_until(start_s + count * stage.interval_s)
+            environment = await self._room.now()
             reading = await self._meter.read()
             if not settled and reading.status is Status.OK:
                 reading = replace(reading, status=Status.UNSETTLED)
-            await self._keep(index, repeat, point, reading)
+            await self._keep(index, repeat, point, reading, environment)
+            if reading.status in AFTER_A_FAULT:
+                await self._see_contacts()
 
     async def _settle(self, rule: Settle) -> bool:
         """Read until the last few agree within the rule's tolerance, or its time has passed."""
@@ -107,13 +147,13 @@ class Sweep:
             await trio.sleep(0)
         return False
 
-    async def _refused(
-        self, index: int, point: Point, repeats: list[int], error: InstrumentRefused
-    ) -> None:
-        """Keep that the meter did not take this point: its readings are not-set, never numbers."""
+    async def _tell_refused(self, error: InstrumentRefused) -> None:
         part, name = self._stage.part, self._stage.stage
         await self._recorder.event("not-set", str(error), part=part, stage=name)
         self._watcher.note(f"{part.part_id}, {name}: {error}")
+
+    async def _keep_not_set(self, index: int, point: Point, repeats: list[int]) -> None:
+        """Keep that the meter did not take this point: its readings are not-set, never numbers."""
         missing = ImpedanceReading(
             pair=self._stage.pair or "R-X",
             first=float("nan"),
@@ -121,9 +161,16 @@ class Sweep:
             status=Status.NOT_SET,
         )
         for repeat in repeats:
-            await self._keep(index, repeat, point, missing)
+            await self._keep(index, repeat, point, missing, await self._room.now())
 
-    async def _keep(self, index: int, repeat: int, point: Point, reading: ImpedanceReading) -> None:
+    async def _keep(
+        self,
+        index: int,
+        repeat: int,
+        point: Point,
+        reading: ImpedanceReading,
+        environment: Environment,
+    ) -> None:
         await self._recorder.impedance(
             self._stage,
             index,
@@ -131,7 +178,7 @@ class Sweep:
             point,
             reading,
             integration=self._stage.integration,
-            environment=await self._room.now(),
+            environment=environment,
             instrument=self._meter_name,
         )
         self._done += 1
