@@ -2,12 +2,15 @@
 
 import json
 import sys
+from collections.abc import Mapping
+from functools import partial
 
 import trio
 
 from ohmward.api.simulation import build_bench
 from ohmward.errors import OhmwardError, Problems
 from ohmward.protocol.check import check_driver
+from ohmward.run.stopping import catch_signals
 from ohmward.setup.bench import Bench, load_bench
 from ohmward.setup.bench_drivers import load_drivers
 from ohmward.setup.driver import Driver
@@ -16,11 +19,19 @@ from ohmward.setup.resources import find_file
 from ohmward.sim.server import serve as serve_devices
 
 
-def serve(bench: str, *, parts: str | None, seed: int, as_json_line: bool) -> None:
+def serve(
+    bench: str,
+    *,
+    parts: str | None,
+    seed: int,
+    as_json_line: bool,
+    ports: Mapping[str, int] | None = None,
+) -> None:
     """Serve the bench until stopped; prints, once all listens, where each instrument is.
 
     As TOML this is the bench file that ``run`` needs; as JSON one line with each instrument's
-    address, role and whether it speaks SCPI. Raises BadInput with every problem.
+    address, role and whether it speaks SCPI. ``ports`` gives TCP ports by the instrument's name;
+    the others get any free one. Raises BadInput with every problem, Stopped after a signal.
     """
     problems = Problems()
     loaded = load_bench(find_file(bench, "simulators"), problems)
@@ -28,6 +39,7 @@ def serve(bench: str, *, parts: str | None, seed: int, as_json_line: bool) -> No
     for driver in (drivers or {}).values():
         check_driver(driver, problems)
     rows = load_parts(find_file(parts, "simulators", ".csv"), loaded, problems) if parts else ()
+    _check_ports(ports or {}, loaded, problems)
     problems.raise_if_any()
     if loaded is None or drivers is None:
         raise OhmwardError(f"{bench} was refused without a problem that says why")
@@ -42,10 +54,24 @@ def serve(bench: str, *, parts: str | None, seed: int, as_json_line: bool) -> No
         sys.stdout.write(text + "\n")
         sys.stdout.flush()
 
-    async def main() -> None:
-        await serve_devices(simulated, ready=ready)
+    with catch_signals() as stop:
+        try:
+            trio.run(stop.run, partial(serve_devices, simulated, ports=ports, ready=ready))
+        except* OSError as group:
+            reasons = "; ".join(sorted({str(error) for error in group.exceptions}))
+            raise OhmwardError(f"the bench cannot be served: {reasons}") from group
 
-    trio.run(main)
+
+def _check_ports(ports: Mapping[str, int], bench: Bench | None, problems: Problems) -> None:
+    known = sorted(bench.instruments) if bench is not None else sorted(ports)
+    for name in sorted(set(ports) - set(known)):
+        problems.add(
+            id="unknown-instrument",
+            file="command line",
+            key="--port",
+            expected=f"an instrument of the bench: {', '.join(known)}",
+            found=name,
+        )
 
 
 def _as_json(

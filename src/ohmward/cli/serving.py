@@ -19,6 +19,14 @@ def serve(
         typer.Option("--parts", metavar="PARTS", help="Parts list: what lies in the positions."),
     ] = None,
     seed: Annotated[int, typer.Option("--seed", min=0, help="Draws parts and noise.")] = 0,
+    port: Annotated[
+        list[str] | None,
+        typer.Option(
+            "--port",
+            metavar="NAME=NUMBER",
+            help="TCP port of an instrument; may be given for each. Any free one otherwise.",
+        ),
+    ] = None,
     json: Annotated[
         bool, typer.Option("--json", help="Print the instruments as JSON, one line.")
     ] = False,
@@ -26,4 +34,15 @@ def serve(
     """Serve a simulated bench on loopback sockets until stopped; prints the bench file for run."""
     from ohmward import api
 
-    api.serve(bench, parts=parts, seed=seed, as_json_line=json)
+    ports = dict(_port(text) for text in port or ())
+    api.serve(bench, parts=parts, seed=seed, as_json_line=json, ports=ports)
+
+
+def _port(text: str) -> tuple[str, int]:
+    """An instrument's name and its TCP port."""
+    name, _, number = text.partition("=")
+    if not name or not number.isascii() or not number.isdigit() or not 0 < int(number) < 65536:
+        raise typer.BadParameter(
+            f"{text!r} is not NAME=NUMBER with a TCP port", param_hint="--port"
+        )
+    return name, int(number)
