@@ -2,6 +2,7 @@
 
 import json
 import os
+import signal
 import sys
 
 import typer
@@ -43,7 +44,15 @@ def _program(
 
 def main() -> None:
     """Run the program and exit with the code that the outcome has."""
+    for number in (signal.SIGTERM, signal.SIGHUP):
+        if signal.getsignal(number) == signal.SIG_DFL:  # else it is to be ignored, as by nohup
+            signal.signal(number, _as_interrupt)
     sys.exit(_outcome())
+
+
+def _as_interrupt(number: int, frame: object) -> None:
+    """Any signal that asks the program to stop ends it as Ctrl-C does."""
+    raise KeyboardInterrupt
 
 
 def _outcome() -> int:
