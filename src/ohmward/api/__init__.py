@@ -1,24 +1,39 @@
 """The public Python of ohmward: what the commands call, and any program may."""
 
+from ohmward.api.checking import check_bench, exercise_driver, read_driver, try_address
 from ohmward.api.converting import Converted, convert
 from ohmward.api.preparing import Prepared, prepare
 from ohmward.api.running import Outcome, dry_run, resume, run
 from ohmward.api.schemas import schema
 from ohmward.api.serving import serve
-from ohmward.api.showing import as_json, show_brief, show_run
+from ohmward.api.showing import (
+    as_json,
+    show_bench,
+    show_brief,
+    show_commands,
+    show_exercise,
+    show_run,
+)
 
 __all__ = [
     "Converted",
     "Outcome",
     "Prepared",
     "as_json",
+    "check_bench",
     "convert",
     "dry_run",
+    "exercise_driver",
     "prepare",
+    "read_driver",
     "resume",
     "run",
     "schema",
     "serve",
+    "show_bench",
     "show_brief",
+    "show_commands",
+    "show_exercise",
     "show_run",
+    "try_address",
 ]

@@ -4,10 +4,15 @@ import json
 from typing import Any
 
 from rich.console import Console
+from rich.table import Table
 
+from ohmward.api import checking
 from ohmward.api.running import Outcome
+from ohmward.instruments.exercise import Exercised
+from ohmward.instruments.transcript import escaped
 from ohmward.output import screen
 from ohmward.sequence.brief import Brief
+from ohmward.setup.driver import Driver
 
 PIPE_COLUMNS = 120
 
@@ -29,6 +34,59 @@ def show_run(outcome: Outcome) -> None:
     for note in outcome.notes:
         console.print(note, markup=False, soft_wrap=True)
     console.print(f"Tables: {outcome.folder}", markup=False, soft_wrap=True)
+
+
+def show_commands(driver: Driver) -> None:
+    """Print what a driver without a problem sends."""
+    table = _table("entry", "command", "query")
+    for row in checking.commands_of(driver):
+        table.add_row(*row)
+    console = _console()
+    console.print(table)
+    console.print(f"{driver.name or driver.path.stem}: no problem found in the file")
+
+
+def show_exercise(driver: Driver, address: str) -> bool:
+    """Try a driver on its instrument, printing each entry as it is done; True if all did well."""
+    console = _console()
+
+    def told(one: Exercised) -> None:
+        sent = "  ".join(
+            f"{escaped(e.sent) or '(nothing)'} -> {escaped(e.received)}" for e in one.exchanges
+        )
+        line = f"{one.entry:<34}{1e3 * one.took_s:7.1f} ms  {one.verdict}"
+        if one.value:
+            line += f": {one.value}"
+        console.print(line, markup=False, soft_wrap=True)
+        if sent and one.failed:
+            console.print(f"{'':<34}{sent}", markup=False, soft_wrap=True)
+
+    return checking.exercise_driver(driver, address, told)
+
+
+def show_bench(file: str) -> bool:
+    """Open a bench's instruments and print who answered; True if all did."""
+    bench, found = checking.check_bench(file)
+    table = _table("instrument", "role", "address", "identity", "remarks")
+    for one in found:
+        identity = one.identity or "-"
+        table.add_row(one.name, one.role, one.address, identity, "; ".join(one.remarks))
+    console = _console()
+    console.print(table)
+    failed = [one.name for one in found if one.failed]
+    console.print(
+        f"{bench.name}: " + (f"no answer from {', '.join(failed)}" if failed else "all answer"),
+        markup=False,
+        soft_wrap=True,
+    )
+    return not failed
+
+
+def _table(*headings: str) -> Table:
+    table = Table(box=None, pad_edge=False, header_style="bold")
+    for heading in headings:
+        table.add_column(heading, overflow="fold")
+    return table
 
 
 def _console() -> Console:

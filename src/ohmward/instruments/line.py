@@ -17,8 +17,9 @@ class Wire(Protocol):
     def dirty(self) -> bool:
         """Whether the next command will first have to recover the link."""
 
-    recoveries: int
-    """How often the link has recovered: what was set before it may be forgotten since."""
+    @property
+    def recoveries(self) -> int:
+        """How often the link has recovered: what was set before it may be forgotten since."""
 
     async def open(self) -> bytes:
         """Open the link and return the identity."""

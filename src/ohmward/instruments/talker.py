@@ -10,6 +10,7 @@ import trio
 from ohmward.errors import InstrumentRefused, LinkError, LinkTimeout, ReplyMalformed
 from ohmward.instruments.identity import identity_check
 from ohmward.instruments.line import Wire, hello_of, link_settings, read_end
+from ohmward.instruments.transcript import TappedWire, Transcript
 from ohmward.links.link import Link
 from ohmward.links.waiter import Waiter
 from ohmward.protocol.codec import Codec, Command, Decoded, Layout, Value, codec_of
@@ -392,14 +393,20 @@ def open_talker(
     manager: pyvisa.ResourceManager,
     waiter: Waiter,
     serial_number: str = "",
+    transcript: Transcript | None = None,
 ) -> Talker:
-    """A talker for the instrument at an address; nothing is opened before ``identify``."""
+    """A talker for the instrument at an address; nothing is opened before ``identify``.
+
+    With a ``transcript`` every exchange is kept in it.
+    """
     codec = codec_of(driver)
-    link = Link(
+    link: Wire = Link(
         address=address,
         settings=link_settings(driver, codec),
         manager=manager,
         waiter=waiter,
         hello=hello_of(driver, codec, address=address, serial_number=serial_number),
     )
+    if transcript is not None:
+        link = TappedWire(link, transcript)
     return Talker(link, driver, codec, serial_number=serial_number)
