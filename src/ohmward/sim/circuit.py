@@ -179,6 +179,11 @@ class Circuit:
         """Whether a channel is closed, as its scanner sees it: the coil, not the contact."""
         return self._relays[channel].powered
 
+    def channel_stands(self, channel: str) -> bool:
+        """Whether a channel looks closed to a scanner that watches its armature, not its coil."""
+        relay = self._relays[channel]
+        return relay.closed != relay.contact.rests_closed
+
     @property
     def channels(self) -> frozenset[str]:
         """Every relay."""

@@ -12,6 +12,8 @@ from dataclasses import dataclass, field, fields
 from pathlib import Path
 from typing import Any, TypeVar
 
+from ohmward.sim.path import ContactAt, PathTruth, PlaceTruth, RelayKind, SupplyTruth
+
 
 class PhysicalFileError(ValueError):
     """A physical file or part model that cannot be used; says which key."""
@@ -108,12 +110,13 @@ class RoomTruth:
 
 @dataclass(frozen=True, kw_only=True, slots=True)
 class Physical:
-    """A physical file: parts by id, the fixture, the room, and figures of instruments."""
+    """A physical file: parts by id, the fixture, the room, figures of instruments, the path."""
 
     parts: Mapping[str, PartTruth] = field(default_factory=dict)
     fixture: FixtureTruth = FixtureTruth()
     room: RoomTruth = RoomTruth()
     instruments: Mapping[str, Mapping[str, Any]] = field(default_factory=dict)
+    path: PathTruth | None = None
 
 
 T = TypeVar("T")
@@ -130,17 +133,54 @@ def read_model(path: Path) -> PartModel:
 def read_physical(path: Path) -> Physical:
     """A physical file. Raises PhysicalFileError naming the key."""
     data = _read(path)
-    known = {"part", "fixture", "room", "instrument"}
+    known = {"part", "fixture", "room", "instrument", "high_voltage"}
     unknown = set(data) - known
     if unknown:
         raise PhysicalFileError(f"{path}: unknown {', '.join(sorted(unknown))}")
     parts = data.get("part", {})
+    high = data.get("high_voltage")
     return Physical(
-        parts={name: _make(PartTruth, one, f"{path}: part.{name}") for name, one in parts.items()},
+        parts={name: _part(one, f"{path}: part.{name}") for name, one in parts.items()},
+        path=None if high is None else _path(high, f"{path}: high_voltage"),
         fixture=_make(FixtureTruth, data.get("fixture", {}), f"{path}: fixture"),
         room=_make(RoomTruth, data.get("room", {}), f"{path}: room"),
         instruments=data.get("instrument", {}),
     )
+
+
+def _part(data: Mapping[str, Any], where: str) -> PartTruth:
+    return _make(PartTruth, {**data, "clears": tuple(data.get("clears", ()))}, where)
+
+
+def _path(data: Mapping[str, Any], where: str) -> PathTruth:
+    """The wiring of high voltage; contacts are tables with a channel."""
+    plain = dict(data)
+    kinds = plain.pop("relay", {})
+    relays = {name: _make(RelayKind, one, f"{where}.relay.{name}") for name, one in kinds.items()}
+
+    def contact(one: Mapping[str, Any], key: str) -> ContactAt:
+        made = _make(ContactAt, one, f"{where}.{key}")
+        if made.relay and made.relay not in relays:
+            raise PhysicalFileError(f"{where}.{key}: there is no relay {made.relay!r}")
+        return made
+
+    def place(one: Mapping[str, Any], key: str) -> PlaceTruth:
+        row = dict(one)
+        for name in ("connect", "discharge", "short"):
+            if name in row:
+                row[name] = contact(row[name], f"{key}.{name}")
+        for name in ("sense", "meter"):
+            row[name] = tuple(contact(each, f"{key}.{name}") for each in row.get(name, ()))
+        row["broken"] = frozenset(row.get("broken", ()))
+        return _make(PlaceTruth, row, f"{where}.{key}")
+
+    for name in ("supply", "bypass"):
+        if name in plain:
+            plain[name] = contact(plain[name], name)
+    plain["source"] = _make(SupplyTruth, plain.get("source", {}), f"{where}.source")
+    places = enumerate(plain.pop("position", ()), start=1)
+    plain["places"] = tuple(place(one, f"position[{number}]") for number, one in places)
+    return _make(PathTruth, {**plain, "relays": relays}, where)
 
 
 def _read(path: Path) -> dict[str, Any]:
