@@ -8,7 +8,7 @@ is read. Voltages and currents agree within 1e-3.
 import os
 import shutil
 import subprocess
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from pathlib import Path
 
 import numpy as np
@@ -228,11 +228,12 @@ def test_charging_at_the_current_limit_with_the_divider(wanted: str, tmp_path: P
     ours.advance(0.1)
     ours.set_supply(300.0, 1e-3, True)
     times = (0.2, 0.5, 1.0, 1.3, 1.5, 1.55, 1.6, 1.7, 2.0, 3.0)
-    look, expression = {
+    looks: dict[str, tuple[Callable[[], float], str]] = {
         "the part": (lambda: ours.voltage("A"), "v(core)-v(low)"),
         "the divider": (ours.divider_voltage, "v(vmh)-v(vml)"),
         "the supply": (ours.supply_current, "i(vs)"),
-    }[wanted]
+    }
+    look, expression = looks[wanted]
     found = []
     for at_s in times:
         ours.advance(at_s)
