@@ -16,6 +16,7 @@ from ohmward.sim.room import SimulatedRoom
 from ohmward.sim.scanner import Contacts
 from ohmward.sim.scpi_device import ScpiDevice
 from ohmward.sim.shared_link import SharedLink
+from ohmward.sim.standards import IDEAL, Standard
 from ohmward.sim.terminals import Relays
 from ohmward.sim.tray import Models, fill
 from ohmward.sim.wired_circuit import CircuitRelays, WiredCircuit
@@ -48,6 +49,8 @@ class SimulatedBench:
         circuit: WiredCircuit | None = None,
     ) -> None:
         self._physical = read_physical(physical) if physical else Physical()
+        self._seed = seed
+        self._insertions = 0
         folders = [physical.parent / "parts"] if physical else []
         folders += [models] if models else []
         self.parts: dict[str, PhysicalPart] = fill(
@@ -145,6 +148,17 @@ class SimulatedBench:
         for name in sorted(self._by_hand):
             here = {part_id: self.parts[part_id]} if name == wanted else {}
             self.terminals.load(name, here, now_s)
+
+    def place_standard(self, kind: str, position: str, now_s: float = float("-inf")) -> None:
+        """Put the open, short or load into a position, instead of what lay there.
+
+        Its contacts are drawn anew each time. Raises KeyError for a position that is not there,
+        ValueError for another kind.
+        """
+        self._insertions += 1
+        truth = self._physical.standards.get(kind) or IDEAL.get(kind, IDEAL["open"])
+        standard = Standard(kind, truth, self._seed, position, self._insertions)
+        self.terminals.load(position, {f"the {kind}": standard}, now_s)
 
     def truth(
         self,

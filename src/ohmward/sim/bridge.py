@@ -13,6 +13,7 @@ RANGES_OHM = (1.0, 10.0, 100.0, 1e3, 1e4, 1e5, 1e6)
 _REACH = math.sqrt(10.0)  # a range is meant for |Z| from R/reach to R·reach
 _HYSTERESIS = 1.1
 _HELD_OVERLOAD = 20.0
+_MOSTLY_OPEN = 0.01  # a larger error at a high impedance is the open's
 _NOTHING_OHM = 1e12
 _OFFSET_LIMIT_A = 0.1
 _OFFSET_LIMIT_V = 40.0
@@ -143,6 +144,9 @@ class Bridge:
         if figures.cable_m is not None:
             wrong_m = figures.cable_m - drive.length_m
             turn_rad += 2.0 * math.pi * frequency_hz * _CABLE_DELAY_S_PER_M * wrong_m
+        if widths[0] > _MOSTLY_OPEN and magnitude > drive.range_ohm:
+            # what an open leaves over is an admittance that adds to the part's own
+            return z / (complex(1.0 - relative, -turn_rad) or 1e-12)
         return z * (1.0 + relative) * cmath.exp(1j * turn_rad)
 
     def _corrected(self, z: complex, connection: Connection) -> complex:

@@ -13,6 +13,7 @@ from pathlib import Path
 from typing import Any, TypeVar
 
 from ohmward.sim.path import ContactAt, PathTruth, PlaceTruth, RelayKind, SupplyTruth
+from ohmward.sim.standards import KINDS, StandardTruth
 
 
 class PhysicalFileError(ValueError):
@@ -110,13 +111,14 @@ class RoomTruth:
 
 @dataclass(frozen=True, kw_only=True, slots=True)
 class Physical:
-    """A physical file: parts by id, the fixture, the room, figures of instruments, the path."""
+    """A physical file: parts by id, fixture, room, figures of instruments, path, standards."""
 
     parts: Mapping[str, PartTruth] = field(default_factory=dict)
     fixture: FixtureTruth = FixtureTruth()
     room: RoomTruth = RoomTruth()
     instruments: Mapping[str, Mapping[str, Any]] = field(default_factory=dict)
     path: PathTruth | None = None
+    standards: Mapping[str, StandardTruth] = field(default_factory=dict)
 
 
 T = TypeVar("T")
@@ -133,11 +135,15 @@ def read_model(path: Path) -> PartModel:
 def read_physical(path: Path) -> Physical:
     """A physical file. Raises PhysicalFileError naming the key."""
     data = _read(path)
-    known = {"part", "fixture", "room", "instrument", "high_voltage"}
+    known = {"part", "fixture", "room", "instrument", "high_voltage", "standard"}
     unknown = set(data) - known
     if unknown:
         raise PhysicalFileError(f"{path}: unknown {', '.join(sorted(unknown))}")
     parts = data.get("part", {})
+    standards = data.get("standard", {})
+    strange = set(standards) - set(KINDS)
+    if strange:
+        raise PhysicalFileError(f"{path}: unknown standard {', '.join(sorted(strange))}")
     high = data.get("high_voltage")
     return Physical(
         parts={name: _part(one, f"{path}: part.{name}") for name, one in parts.items()},
@@ -145,6 +151,10 @@ def read_physical(path: Path) -> Physical:
         fixture=_make(FixtureTruth, data.get("fixture", {}), f"{path}: fixture"),
         room=_make(RoomTruth, data.get("room", {}), f"{path}: room"),
         instruments=data.get("instrument", {}),
+        standards={
+            name: _make(StandardTruth, one, f"{path}: standard.{name}")
+            for name, one in standards.items()
+        },
     )
 
 
