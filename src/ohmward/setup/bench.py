@@ -9,6 +9,7 @@ from pydantic import BeforeValidator, Field, PrivateAttr
 
 from ohmward.errors import Problems
 from ohmward.setup.address import Address, AddressError, read_address
+from ohmward.setup.files import is_file
 from ohmward.setup.high_voltage import HighVoltage
 from ohmward.setup.high_voltage_check import findings, missing
 from ohmward.setup.names import INSTRUMENT_NAME, Channel, Name
@@ -54,6 +55,9 @@ class Fixture(Model):
         description="a scanner connects one position after another, or a person loads each part"
     )
     name: str = Field("", description="what the fixture is called, for its compensation")
+    standards: str = Field(
+        "", description="file that says what its open, short and load are, for its compensation"
+    )
 
 
 class Position(Model):
@@ -113,6 +117,11 @@ class Bench(Model):
             return None
         return self._path.parent / self.simulation.physical_file
 
+    @property
+    def standards_path(self) -> Path | None:
+        """The standards file, found beside the bench file; None where the bench names none."""
+        return self._path.parent / self.fixture.standards if self.fixture.standards else None
+
     def of_role(self, role: Role) -> BenchInstrument | None:
         """The instrument of a role, or None."""
         return next((one for one in self.instruments.values() if one.role is role), None)
@@ -155,7 +164,7 @@ def _across(bench: Bench, data: dict[str, Any], *, whole: bool) -> Iterator[_Fin
     if whole:
         yield from _scanner_findings(bench)
         physical = bench.physical_path
-        if physical is not None and not physical.is_file():
+        if physical is not None and not is_file(physical):
             yield "file-missing", "simulation.physical_file", "a file", f"none at {physical}"
 
     if bench.high_voltage is not None:

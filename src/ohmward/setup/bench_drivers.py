@@ -3,6 +3,7 @@
 from ohmward.errors import Problems
 from ohmward.setup.bench import Bench
 from ohmward.setup.driver import Driver, load_driver
+from ohmward.setup.files import is_file
 from ohmward.setup.resources import shipped
 from ohmward.setup.toml import one_of
 
@@ -41,7 +42,7 @@ def _load(bench: Bench, name: str, wanted: str, problems: Problems) -> Driver | 
     """One driver; a name or path that leads nowhere is the bench file's problem."""
     known = sorted(path.stem for path in shipped("drivers").glob("*.toml"))
     is_path = wanted.endswith(".toml") or "/" in wanted or "\\" in wanted
-    if is_path and not (bench.path.parent / wanted).is_file():
+    if is_path and not is_file(bench.path.parent / wanted):
         expected, found = "a driver file", f"none at {bench.path.parent / wanted}"
     elif not is_path and wanted not in known:
         expected, found = one_of(wanted, known), f"'{wanted}'"

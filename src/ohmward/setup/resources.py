@@ -27,6 +27,14 @@ def find_file(name_or_path: str, folder: str, suffix: str = ".toml") -> Path:
     """
     path = Path(name_or_path)
     plain = path.suffix != suffix and "/" not in name_or_path and "\\" not in name_or_path
-    if plain and not path.exists():
+    if plain and not _exists(path):
         return shipped(folder) / f"{name_or_path}{suffix}"
     return path
+
+
+def _exists(path: Path) -> bool:
+    """Whether something has that name; False too for a name that nothing can have."""
+    try:
+        return path.exists()
+    except (OSError, ValueError):
+        return False

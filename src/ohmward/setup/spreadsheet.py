@@ -8,6 +8,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from ohmward.errors import Problems
+from ohmward.setup.files import read_bytes
 from ohmward.setup.toml import nearest, shown
 
 DELIMITERS = (",", ";", "\t")
@@ -71,14 +72,8 @@ def read_sheet(
 
 def _text(path: Path, problems: Problems) -> str | None:
     """The file's text: UTF-8, UTF-16 with its mark, else Windows-1252."""
-    try:
-        raw = path.read_bytes()
-    except FileNotFoundError:
-        problems.add(id="file-missing", file=path, key="-", expected="a file", found="none")
-        return None
-    except OSError as error:
-        found = error.strerror or str(error)
-        problems.add(id="file-unreadable", file=path, key="-", expected="a file", found=found)
+    raw = read_bytes(path, problems)
+    if raw is None:
         return None
     marked = raw.startswith((b"\xff\xfe", b"\xfe\xff"))
     for encoding in ("utf-16",) if marked else ("utf-8-sig", "cp1252"):

@@ -16,6 +16,7 @@ from pydantic import BaseModel, ValidationError
 
 from ohmward.errors import Problems
 from ohmward.setup.fields import known_keys
+from ohmward.setup.files import read_bytes
 from ohmward.setup.quantities import WRITTEN
 
 FORMAT = 1
@@ -27,18 +28,14 @@ Location = tuple[int | str, ...]
 
 def read_toml(path: Path, problems: Problems) -> dict[str, Any] | None:
     """The file's table, or None with a problem noted: missing, not UTF-8, not TOML."""
-    try:
-        text = path.read_bytes().decode("utf-8-sig")
-    except FileNotFoundError:
-        problems.add(id="file-missing", file=path, key="-", expected="a file", found="none")
+    raw = read_bytes(path, problems)
+    if raw is None:
         return None
+    try:
+        text = raw.decode("utf-8-sig")
     except UnicodeDecodeError as error:
         found = f"byte 0x{error.object[error.start]:02X} at offset {error.start}"
         problems.add(id="not-utf8", file=path, key="-", expected="UTF-8 text", found=found)
-        return None
-    except OSError as error:
-        found = error.strerror or str(error)
-        problems.add(id="file-unreadable", file=path, key="-", expected="a file", found=found)
         return None
     try:
         return tomllib.loads(text)
