@@ -57,11 +57,15 @@ class Relay:
         return self.powered != self.contact.made_unpowered
 
 
-def wiring() -> Wiring:
-    """Two positions; the discharge connects without power, everything else isolates."""
+def wiring(*, weak: dict[str, float] | None = None) -> Wiring:
+    """Two positions; the discharge connects without power, everything else isolates.
+
+    ``weak`` gives channels a hot-switch voltage of their own.
+    """
 
     def high(channel: str, *, made: bool = False) -> Contact:
-        return Contact(channel=channel, switch_v=1000.0, switch_a=0.5, made_unpowered=made)
+        volts = (weak or {}).get(channel, 1000.0)
+        return Contact(channel=channel, switch_v=volts, switch_a=0.5, made_unpowered=made)
 
     def dry(channel: str) -> Contact:
         return Contact(channel=channel, switch_v=1.0, switch_a=0.05, stand_off_v=1000.0)

@@ -21,7 +21,7 @@ from tests.safety.rc_bench import (
     wiring,
 )
 
-from ohmward.errors import SafetyTrip
+from ohmward.errors import NotProvenSafe, SafetyTrip
 from ohmward.safety.messages import Directive, Event, Hold, Observation, Recover
 from ohmward.safety.rules import PositionState
 from ohmward.safety.voltage import HighVoltageWarden
@@ -48,14 +48,15 @@ class Log:
         self.events.append(event)
 
 
-def bench_of(farad: float, **properties: float) -> Bench:
-    return Bench(parts={n: Part(farad=farad, **properties) for n in ("1", "2")})
+def bench_of(farad: float, *, weak: dict[str, float] | None = None, **properties: float) -> Bench:
+    parts = {n: Part(farad=farad, **properties) for n in ("1", "2")}
+    return Bench(parts=parts, wired=wiring(weak=weak))
 
 
 def warden_of(bench: Bench, log: Log, nominal_f: float, **limits: float) -> HighVoltageWarden:
     return HighVoltageWarden(
         permit=permit(nominal_f=nominal_f, **limits),
-        wiring=wiring(),
+        wiring=bench.wired,
         equipment=bench.equipment(),
         facts=facts(),
         events=log,
@@ -309,6 +310,22 @@ def test_a_request_beyond_the_permit_trips_before_anything_is_energised(hold, wo
 
     virtual(main)
     assert not any(entry == "on" for _, entry in bench.log)
+
+
+@pytest.mark.parametrize("channel", ["102", "104"])
+def test_a_part_whose_way_down_could_not_be_switched_is_not_charged(channel):
+    """A discharge or sense contact rated for 300 V below a part of 450 V."""
+    bench, log = bench_of(1e-6, weak={channel: 300.0}), Log()
+
+    async def main() -> None:
+        warden = warden_of(bench, log, 1e-6)
+        await warden.start()
+        with pytest.raises((SafetyTrip, NotProvenSafe), match=f"contact {channel} may move at 300"):
+            await warden.hold(FILM, log)
+
+    virtual(main)
+    assert bench.highest_v <= 1.0
+    assert bench.unlawful == []
 
 
 def test_an_inductor_holds_no_voltage():

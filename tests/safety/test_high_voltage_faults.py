@@ -72,10 +72,16 @@ def lost(bench: Bench) -> None:
 
 
 def suffer(
-    farad: float, fault: Fault, *, at_v: float | None, after_s: float = 3.0, log: Log | None = None
+    farad: float,
+    fault: Fault,
+    *,
+    at_v: float | None,
+    after_s: float = 3.0,
+    log: Log | None = None,
+    weak: dict[str, float] | None = None,
 ) -> tuple[Bench, Outcome]:
     """One hold with one fault: from the beginning, or once the part has passed a voltage."""
-    bench, log = bench_of(farad), log or Log()
+    bench, log = bench_of(farad, weak=weak), log or Log()
     outcomes: list[Outcome] = []
 
     async def main() -> None:
@@ -251,6 +257,39 @@ def test_a_lost_contact_leaves_a_live_part_that_nobody_calls_dead():
     assert bench.parts["1"].volts > 100.0
     assert outcome.position is PositionState.ENDED_UNPROVEN
     assert not bench.on
+
+
+def test_a_supply_contact_that_may_not_break_its_current_stays_closed():
+    """Rated for 50 V: opening it under 400 V would weld it; a person has to switch off."""
+    bench, outcome = suffer(4.7e-6, put(obeys_off=False), at_v=SOAK_V, weak={"1": 50.0})
+    assert_honest(bench, outcome)
+    assert isinstance(outcome.raised, NotProvenSafe)
+    assert bench.made(bench.wired.supply)
+    assert "may be closed" in str(outcome.ending.reasons)
+    assert outcome.position is PositionState.ENDED_UNPROVEN
+    assert not bench.made(bench.wired.positions[0].discharge)  # nor is the resistor cooked
+
+
+def test_a_contact_that_is_lost_on_the_way_down_is_noticed_though_it_comes_back():
+    bench, log = bench_of(4.7e-6), Log()
+    discharge = bench.wired.positions[0].discharge
+    bench.above(
+        SOAK_V,
+        lambda b: b.when(lambda x: x.made(discharge) and x.parts["1"].volts < 300.0, lost),
+    )
+    bench.when(
+        lambda b: "1" in b.contact_lost,
+        lambda b: b.at(b.now_s + 1.0, lambda x: x.contact_lost.clear()),
+    )
+
+    async def main() -> None:
+        warden = warden_of(bench, log, 4.7e-6)
+        await warden.start()
+        with pytest.raises(NotProvenSafe, match="vanished faster"):
+            await warden.hold(HOLD, log)
+        assert not (await warden.stop()).proven
+
+    virtual(main)
 
 
 # ---- the part is the cause: it stops, the lot goes on

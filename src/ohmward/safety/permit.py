@@ -49,6 +49,7 @@ class Laws:
         says otherwise).
     droop_s: how long a part is watched at most, off and not yet discharged, for the droop
         that its own divider causes (s).
+    run_down_s: how long an inductor's current is waited for before its supply goes off (s).
     path_ohm: what a direct short through contacts and leads still has (ohm, common practice).
     """
 
@@ -73,6 +74,7 @@ class Laws:
     bypass_share: float = 0.5
     meter_foreign_v: float = 1.0
     droop_s: float = 2.0
+    run_down_s: float = 10.0
     path_ohm: float = 0.05
 
     def __post_init__(self) -> None:
@@ -244,6 +246,27 @@ def short_target_v(laws: Laws, wired: PositionWiring) -> float:
     """
     by_current_v = wired.short.switch_a * max(wired.short_ohm, laws.path_ohm)
     return max(min(laws.target_v, wired.short.switch_v, by_current_v), laws.test_ceiling_v)
+
+
+def check_way_down(
+    laws: Laws, wired: PositionWiring, *, voltage_v: float, divider_ohm: float
+) -> None:
+    """Before a part is charged: its way down must be able to move at that voltage.
+
+    The discharge closes at U with U/R, and the sense contacts may move at U with what the
+    divider takes; a part that could not be brought down is not brought up.
+    """
+    current_a = closing_current_a(laws, voltage_v=voltage_v, resistance_ohm=wired.discharge_ohm)
+    check_relay_move(wired.discharge, voltage_v=voltage_v, current_a=current_a)
+    for contact in wired.sense:
+        check_relay_move(contact, voltage_v=voltage_v, current_a=voltage_v / divider_ohm)
+    for contact in (*wired.meter, wired.short):
+        if not voltage_v <= contact.stand_off_v:
+            raise LawBroken(
+                "relay",
+                f"contact {contact.channel} holds back {contact.stand_off_v:g} V, "
+                f"not {voltage_v:g} V",
+            )
 
 
 def check_bypass_opening(laws: Laws, *, predicted_a: float, range_a: float) -> None:

@@ -31,6 +31,7 @@ from ohmward.terms.reading import CurrentReading, SupplyReading
 from ohmward.terms.status import Status
 
 DIVIDER_SHARE = 0.5  # an open bypass lets the meter see at least this share of the divider current
+INSTANT_S = 1e-6  # clocks add up in floating point: what is due within this is due now
 CLOSED_SHARE = 0.2  # and a closed one at most this share of what flows
 
 
@@ -158,7 +159,9 @@ class Charger:
             raise BenchFault(f"{max(volts, supply.voltage_v):.6g} V are above the permit")
         return supply, volts
 
-    async def _watch(self, hold: Hold, since_s: float, course: Course) -> SupplyReading:
+    async def _watch(
+        self, hold: Hold, since_s: float, course: Course
+    ) -> tuple[SupplyReading, float]:
         """One look at a part that has its voltage."""
         desk, known = self._desk, self._positions.charge(hold.position)
         supply, volts = await self._look(hold, course)
@@ -175,7 +178,7 @@ class Charger:
                 self._judge_connection(hold, course)
         net_a = supply.current_a - volts / desk.wiring.divider_ohm - desk.facts.supply_error_a
         self._check_part(hold, net_a, volts)
-        return supply
+        return supply, volts
 
     def _check_part(self, hold: Hold, net_a: float, volts: float) -> None:
         """The part's own limits of current and power, and its permit's."""
@@ -233,6 +236,9 @@ class Charger:
             return
         desk, laws = self._desk, self._desk.laws
         least_f, most_f = self._bounds(hold)
+        fastest_v_per_s = course.set_v / self._positions.drain_ohm() / max(least_f, 1e-15)
+        if fastest_v_per_s * laws.droop_s < 10.0 * desk.facts.voltmeter_resolution_v:
+            return  # too large a part to be seen drooping: its discharge will tell
         began_s, samples = desk.time.now_s(), []
         while True:
             volts = await self._positions.read_v()
@@ -266,11 +272,15 @@ class Charger:
         while True:
             due_s = min(check_s, soak_s if reading_s is None else reading_s, soak_s)
             await desk.time.sleep(max(began_s + due_s - desk.time.now_s(), 0.0))
-            since_s = desk.time.now_s() - began_s
-            supply = await self._watch(hold, since_s, course)
-            check_s = max(check_s, since_s) + desk.facts.check_s
+            since_s = desk.time.now_s() - began_s + INSTANT_S
+            volts: float | None = None
+            if since_s >= check_s:
+                supply, volts = await self._watch(hold, since_s, course)
+                check_s = since_s + desk.facts.check_s
+                if course.range_a is None:
+                    await self._open_bypass(hold, supply, course)
             if reading_s is not None and since_s >= reading_s:
-                directive = await self._observe(hold, began_s, supply, observer, course)
+                directive = await self._observe(hold, began_s, volts, observer, course)
                 if directive.do != "continue":
                     return directive
                 reading_s = next(readings, None)
@@ -281,15 +291,19 @@ class Charger:
         self,
         hold: Hold,
         began_s: float,
-        supply: SupplyReading,
+        seen_v: float | None,
         observer: Observer,
         course: Course,
     ) -> Directive:
-        """One reading, kept by the runner before anything else is done; then its answer."""
+        """One reading, kept by the runner before anything else is done; then its answer.
+
+        ``seen_v`` is the part's voltage where this instant's check has read it already.
+        """
         desk = self._desk
-        await self._set_range(hold, supply, course)
-        volts = await self._positions.read_v()
+        volts = await self._positions.read_v() if seen_v is None else seen_v
         reading = await self._read_current() if course.range_a is not None else None
+        while reading is not None and await self._fit_range(reading, course):
+            reading = await self._read_current() if course.range_a is not None else None
         divider_a = volts / desk.wiring.divider_ohm
         if reading is not None:
             self._check_bypass_open(reading, divider_a, course)
@@ -301,7 +315,7 @@ class Charger:
             voltage_v=volts,
             current_a=None if reading is None else reading.current_a,
             divider_a=divider_a,
-            range_a=course.range_a,
+            range_a=None if reading is None else reading.range_a,
             status=Status.UNSETTLED if reading is None else reading.status,
             current_reply="" if reading is None else reading.reply.decode("ascii", "replace"),
         )
@@ -310,22 +324,16 @@ class Charger:
             directive = await observer.observe(observation)
         if directive is None:
             raise BenchFault("the runner does not answer")
-        if reading is not None:
-            if reading.status is Status.OVERLOAD:
-                await self._close_bypass(course)
-            else:
-                self._positions.charge(hold.position).drain_a = reading.current_a
-                self._check_part(hold, reading.current_a - divider_a, volts)
+        if reading is not None and reading.status is Status.OK:
+            self._positions.charge(hold.position).drain_a = reading.current_a
+            self._check_part(hold, reading.current_a - divider_a, volts)
         return directive
 
     # ---- the current meter and its bypass
 
-    async def _set_range(self, hold: Hold, supply: SupplyReading, course: Course) -> None:
+    async def _open_bypass(self, hold: Hold, supply: SupplyReading, course: Course) -> None:
         """The lowest range whose half is above what is predicted; the bypass opens on it."""
         desk, laws = self._desk, self._desk.laws
-        if course.range_a is not None:
-            await self._finer_range(course)
-            return
         divider_a = course.set_v / desk.wiring.divider_ohm
         predicted_a = max(abs(supply.current_a), divider_a) + desk.facts.supply_error_a
         range_a = self._tester.range_for(predicted_a)
@@ -344,23 +352,26 @@ class Charger:
         await desk.board.move(desk.wiring.bypass, make=False, current_a=predicted_a)
         course.range_a = range_a
         await desk.time.sleep(desk.facts.settle_s)
-        await self._finer_range(course)
+        await self._fit_range(await self._read_current(), course)
 
-    async def _finer_range(self, course: Course) -> None:
-        """With the bypass open: a lower range, if what is read now is below half of it."""
+    async def _fit_range(self, reading: CurrentReading, course: Course) -> bool:
+        """With the bypass open: a lower range, if what was read is below half of it.
+
+        Where the range is too low the bypass closes, and opens again after the next check.
+        Returns whether a reading has to be taken anew.
+        """
         assert course.range_a is not None
-        reading = await self._read_current()
-        if reading.status is not Status.OK:
-            await self._close_bypass(course)
-            return
         error_a = self._error_a(course.range_a)
         range_a = self._tester.range_for(abs(reading.current_a) + error_a)
-        if range_a is not None and range_a < course.range_a:
-            await self._range(range_a)
-            course.range_a = range_a
-            await self._desk.time.sleep(self._desk.facts.settle_s)
-        elif range_a is None or range_a > course.range_a:
+        if reading.status is not Status.OK or range_a is None or range_a > course.range_a:
             await self._close_bypass(course)
+            return False
+        if range_a == course.range_a:
+            return False
+        await self._range(range_a)
+        course.range_a = range_a
+        await self._desk.time.sleep(self._desk.facts.settle_s)
+        return True
 
     def _check_bypass_open(self, reading: CurrentReading, divider_a: float, course: Course) -> None:
         """The meter must see at least what the voltmeter's divider takes."""

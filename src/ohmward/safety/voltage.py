@@ -23,7 +23,7 @@ from ohmward.safety.messages import (
     Observer,
     Recover,
 )
-from ohmward.safety.permit import LawBroken, Permit, check_request
+from ohmward.safety.permit import LawBroken, Permit, check_request, check_way_down
 from ohmward.safety.positions import Desk, Positions
 from ohmward.safety.proof import Connection, Decay
 from ohmward.safety.proving import Prover
@@ -224,6 +224,12 @@ class HighVoltageWarden:
             known.least_f = min(known.least_f, 0.9 * hold.measured_f)
             known.most_f = max(known.most_f, 1.1 * hold.measured_f)
         known.witnessed = False
+        check_way_down(
+            desk.laws,
+            self._positions.wired(hold.position),
+            voltage_v=desk.permit.highest_v(ceiling),
+            divider_ohm=desk.wiring.divider_ohm,
+        )
         await self._positions.event(hold.position, E.JOIN)
         await desk.source.join()
         self._say("connected", hold.position, hold.part_id)
