@@ -11,7 +11,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from ohmward.output.columns import EVENTS, IMPEDANCE, RESULTS, TRUTH, Column, Table
+from ohmward.output.columns import EVENTS, IMPEDANCE, LEAKAGE, RESULTS, TRUTH, Column, Table
 from ohmward.output.tables import TableWriter, harmless, metadata
 from ohmward.terms.quantity import QUANTITIES
 
@@ -98,7 +98,9 @@ def test_a_table_is_never_written_over(tmp_path: Path) -> None:
     assert (tmp_path / "small.csv").read_text() == "mine"
 
 
-@pytest.mark.parametrize("table", [IMPEDANCE, RESULTS, EVENTS, TRUTH], ids=lambda t: t.file)
+@pytest.mark.parametrize(
+    "table", [IMPEDANCE, LEAKAGE, RESULTS, EVENTS, TRUTH], ids=lambda t: t.file
+)
 def test_metadata_describes_every_column(table: Table) -> None:
     described = json.loads(json.dumps(metadata(table)))
     assert described["url"] == table.file

@@ -66,6 +66,33 @@ CREATE TABLE impedance (
     reply BLOB NOT NULL,
     UNIQUE (stage, point, repeat)
 );
+CREATE TABLE hold (
+    stage INTEGER NOT NULL REFERENCES stage (number) DEFERRABLE INITIALLY DEFERRED,
+    hold INTEGER NOT NULL,
+    asked TEXT NOT NULL,
+    held TEXT NOT NULL,
+    PRIMARY KEY (stage, hold)
+) WITHOUT ROWID;
+CREATE TABLE leakage (
+    reading INTEGER PRIMARY KEY,
+    stage INTEGER NOT NULL REFERENCES stage (number) DEFERRABLE INITIALLY DEFERRED,
+    hold INTEGER NOT NULL,
+    time_us INTEGER NOT NULL,
+    elapsed_s REAL NOT NULL,
+    since_voltage_s REAL NOT NULL,
+    voltage_set_v REAL NOT NULL,
+    voltage_v REAL,
+    current_a REAL,
+    divider_a REAL NOT NULL,
+    background_a REAL,
+    range_a REAL,
+    status TEXT NOT NULL,
+    temperature_c REAL,
+    humidity_pct REAL,
+    instrument TEXT NOT NULL,
+    current_reply TEXT NOT NULL,
+    voltage_reply TEXT NOT NULL
+);
 CREATE TABLE event (
     event INTEGER PRIMARY KEY,
     time_us INTEGER NOT NULL,
@@ -104,6 +131,25 @@ IMPEDANCE_COLUMNS = (
     "instrument",
     "reply",
 )
+LEAKAGE_COLUMNS = (
+    "stage",
+    "hold",
+    "time_us",
+    "elapsed_s",
+    "since_voltage_s",
+    "voltage_set_v",
+    "voltage_v",
+    "current_a",
+    "divider_a",
+    "background_a",
+    "range_a",
+    "status",
+    "temperature_c",
+    "humidity_pct",
+    "instrument",
+    "current_reply",
+    "voltage_reply",
+)
 EVENT_COLUMNS = ("time_us", "elapsed_s", "part_id", "position", "stage", "kind", "detail")
 
 
@@ -114,6 +160,10 @@ def insert(table: str, columns: tuple[str, ...]) -> str:
 
 
 INSERT_IMPEDANCE = insert("impedance", IMPEDANCE_COLUMNS)
+INSERT_LEAKAGE = insert("leakage", LEAKAGE_COLUMNS)
+INSERT_HOLD = "INSERT OR REPLACE INTO hold (stage, hold, asked, held) VALUES (?, ?, ?, ?)"
+FORGET_LEAKAGE = "DELETE FROM leakage WHERE stage = ?"
+FORGET_HOLDS = "DELETE FROM hold WHERE stage = ?"
 INSERT_EVENT = insert("event", EVENT_COLUMNS)
 INSERT_FACT = "INSERT OR REPLACE INTO run (key, value) VALUES (?, ?)"
 # A run that is taken up again meets the instruments that it began with: they are there already.

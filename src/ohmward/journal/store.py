@@ -152,6 +152,18 @@ class Store:
             while batch := cursor.fetchmany(rows_at_once):
                 yield batch
 
+    def leakage(self, rows_at_once: int = 2048) -> Iterator[list[Row]]:
+        """Readings under voltage in order, in batches: ``reading``, then LEAKAGE_COLUMNS."""
+        names = ", ".join(("reading", *schema.LEAKAGE_COLUMNS))
+        cursor = self._connection.execute(f"SELECT {names} FROM leakage ORDER BY reading")
+        while batch := cursor.fetchmany(rows_at_once):
+            yield batch
+
+    def holds(self) -> dict[tuple[int, int], tuple[str, str]]:
+        """What was asked and how it went, as JSON, by (stage, hold)."""
+        rows = self._select("SELECT stage, hold, asked, held FROM hold ORDER BY 1, 2")
+        return {(stage, hold): (asked, held) for stage, hold, asked, held in rows}
+
     def events(self) -> list[Row]:
         """Events in order: ``event`` then schema.EVENT_COLUMNS."""
         names = ", ".join(("event", *schema.EVENT_COLUMNS))

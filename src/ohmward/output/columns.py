@@ -110,6 +110,36 @@ IMPEDANCE = Table(
     ),
 )
 
+LEAKAGE = Table(
+    file="leakage.csv",
+    row="a current reading under voltage",
+    key=("run_id", "reading"),
+    columns=(
+        RUN_ID,
+        READING,
+        PART_ID,
+        POSITION,
+        STAGE,
+        TIME_UTC,
+        ELAPSED_S,
+        _number(
+            "since_voltage_s", "s", "time since the part's voltage was within 1 % of the set one"
+        ),
+        _number("voltage_set_v", "V", "DC voltage set", required=True),
+        _number("voltage_v", "V", "DC voltage across the part's own terminals"),
+        _number("current_a", "A", "current through the part: as read, less divider and background"),
+        _number("background_a", "A", "current read with the position empty, taken off"),
+        _number("u_current_a", "A", "standard uncertainty of current_a"),
+        _number("insulation_ohm", "ohm", "insulation resistance: voltage over current"),
+        _text("range", "the current meter's range"),
+        STATUS,
+        TEMPERATURE_C,
+        HUMIDITY_PCT,
+        INSTRUMENT,
+        SIMULATED,
+    ),
+)
+
 CONDITIONS = (
     _number("frequency_hz", "Hz", "frequency of the value; empty where it has none"),
     _number("level_v", "V", "AC level of the value, rms"),
