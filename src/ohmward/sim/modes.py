@@ -241,6 +241,8 @@ class Course:
 
     def _modal(self, t: float) -> Modal:
         """y(t) = e^(−λt)·y(0) + φ₁·fed + φ₂·rising; φ₁ = ∫e^(−λs)ds, φ₂ = ∫φ₁ds over 0…t."""
+        if t == 0.0:
+            return self._y
         x = self.modes.rates * t
         gone = -np.expm1(-x)
         found = self._y + gone * (self._fed - self._y)
@@ -311,10 +313,8 @@ def _spread(first_s: float, last_s: float, per_decade: int) -> Array:
 
 
 def _phi2(x: Modal, gone: Modal) -> Modal:
-    """(x − (1 − e^(−x)))/x², 1/2 at 0; a series where the difference would cancel."""
-    small = np.abs(x) < 1e-3
-    safe = np.where(small, 1.0, x)
-    return np.where(small, 0.5 - x / 6 + x * x / 24, (safe - gone) / (safe * safe))
+    """(x − (1 − e^(−x)))/x²; 1/2 where the difference would cancel."""
+    return np.where(np.abs(x) < 1e-6, 0.5, (x - gone) / (x * x))
 
 
 def _narrow(
