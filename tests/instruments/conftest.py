@@ -106,6 +106,10 @@ class MemoryLink:
         self.dirty = False
         self.recoveries += 1
 
+    async def renew(self) -> None:
+        self.dirty = True
+        await self.recover()
+
     async def aclose(self) -> None:
         self.dirty = True
 

@@ -39,6 +39,9 @@ class Wire(Protocol):
     async def recover(self) -> None:
         """Recover a dirty link now."""
 
+    async def renew(self) -> None:
+        """Abandon the session, whatever is pending in it, and open a fresh one."""
+
     async def aclose(self) -> None:
         """Close the link."""
 

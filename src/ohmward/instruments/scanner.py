@@ -3,6 +3,7 @@
 from collections.abc import Iterable
 
 from ohmward.errors import InstrumentRefused, ReplyMalformed
+from ohmward.instruments.agreed import agreed
 from ohmward.instruments.talker import Talker
 
 
@@ -33,7 +34,7 @@ class Scanner:
 
     async def closed(self) -> frozenset[str]:
         """The channels that the scanner says are closed."""
-        answer = await self._talker.ask("state")
+        answer = await agreed(self._talker, "state", "channels")
         channels = answer.values["channels"]
         if not isinstance(channels, tuple):
             self._talker.link.distrust(f"{answer.reply!r} is no list of channels")

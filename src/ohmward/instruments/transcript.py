@@ -123,6 +123,10 @@ class TappedWire:
         """Recover a dirty link now."""
         await self._wire.recover()
 
+    async def renew(self) -> None:
+        """Abandon the session and open a fresh one."""
+        await self._wire.renew()
+
     async def aclose(self) -> None:
         """Close the link."""
         await self._wire.aclose()

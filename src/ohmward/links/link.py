@@ -191,6 +191,21 @@ class Link:
         finally:
             self._release()
 
+    async def renew(self) -> None:
+        """Abandon the session, whatever is pending in it, and open a fresh one.
+
+        What was written and may still be on its way goes down with the old session, as far as
+        the link allows that. Raises as ``recover``.
+        """
+        await self._acquire()
+        try:
+            if not isinstance(self._ended, WrongIdentity):
+                self._ended = None
+            self._dirt, self._reopen = "its session was abandoned", True
+            await self._recover()
+        finally:
+            self._release()
+
     async def aclose(self) -> None:
         """Close the link; a clean one lets its last command arrive. Never raises LinkError."""
         with trio.CancelScope(shield=True):
