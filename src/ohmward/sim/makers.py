@@ -11,6 +11,7 @@ from ohmward.sim.free_responder import FreeResponder
 from ohmward.sim.handheld_meter import FIGURES as HANDHELD_FIGURES
 from ohmward.sim.handheld_meter import HandheldMeter, frame_of, line_of
 from ohmward.sim.impedance_meter import ImpedanceMeter
+from ohmward.sim.interlock import Interlock
 from ohmward.sim.meter_error import MeterError, MeterFigures
 from ohmward.sim.multimeter import RANGES_V, Multimeter
 from ohmward.sim.physical import PhysicalFileError
@@ -187,6 +188,10 @@ def _multimeter(order: _Order) -> Device:
     return Multimeter(order.name, order.serial_number, port, errors)
 
 
+def _interlock(order: _Order) -> Device:
+    return Interlock(order.name, order.serial_number, order.around.circuit)
+
+
 _MAKERS: Mapping[str, Callable[[_Order], Device]] = {
     IMPEDANCE_METER: _impedance_meter,
     SCANNER: _scanner,
@@ -199,6 +204,7 @@ _MAKERS: Mapping[str, Callable[[_Order], Device]] = {
     "bias-source-scpi": _bias_source,
     "current-meter-scpi": _current_meter,
     "multimeter-scpi": _multimeter,
+    "interlock-scpi": _interlock,
 }
 SIMULATORS = frozenset(_MAKERS)
 

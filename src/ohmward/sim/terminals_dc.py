@@ -70,3 +70,6 @@ class Circuit(Protocol):
 
     def voltage_input(self, name: str) -> VoltagePort:
         """The input of a voltmeter."""
+
+    def interlock_closed(self, now_s: float) -> bool:
+        """Whether the door of the enclosure is closed."""

@@ -111,6 +111,10 @@ class WiredCircuit:
         self._rail_taken = True
         return _Rail(self)
 
+    def interlock_closed(self, now_s: float) -> bool:
+        """Whether the door is closed."""
+        return self.interlock
+
     def current_input(self, name: str) -> CurrentPort:
         """The input of the current meter in the return."""
         return _Return(self)
