@@ -11,6 +11,7 @@ from ohmward.sim.makers import SIMULATORS, InstrumentAt, Surroundings, make
 from ohmward.sim.open_ports import OpenCircuit
 from ohmward.sim.parts import PhysicalPart
 from ohmward.sim.physical import Physical, read_physical
+from ohmward.sim.record import Recorded
 from ohmward.sim.responder import Responder
 from ohmward.sim.room import SimulatedRoom
 from ohmward.sim.scanner import Contacts
@@ -32,8 +33,8 @@ class SimulatedBench:
     the parts list as plain data: part_id, position, kind, nominal, tolerance_low and _high,
     rated_v, rated_a, dielectric, polarity. ``models`` is the folder of part models; one
     named ``parts`` beside the physical file comes first. ``faulty`` names the instruments that
-    get a fault layer, ``circuit`` is the high-voltage side (open where there is none). Raises
-    PhysicalFileError or ValueError for what cannot be simulated.
+    get a fault layer and a record, ``circuit`` is the high-voltage side (open where there is
+    none). Raises PhysicalFileError or ValueError for what cannot be simulated.
     """
 
     def __init__(
@@ -70,6 +71,7 @@ class SimulatedBench:
         self.named: dict[str, Device] = {}
         self.devices: dict[str, Device] = {}
         self.layers: dict[str, FaultLayer] = {}
+        self.records: dict[str, Recorded] = {}
         self._install(
             instruments,
             Surroundings(
@@ -94,8 +96,10 @@ class SimulatedBench:
         for address, neighbours in by_address.items():
             device = self._device(neighbours, around)
             if any(one.name in faulty for one in neighbours):
-                device = layer = FaultLayer(device, around.seed)
+                recorded = Recorded(device)
+                device = layer = FaultLayer(recorded, around.seed)
                 self.layers.update({one.name: layer for one in neighbours})
+                self.records.update({one.name: recorded for one in neighbours})
             self.devices[address] = device
             self.named.update({one.name: device for one in neighbours})
 

@@ -11,7 +11,7 @@ from collections.abc import Callable, Iterable
 from dataclasses import dataclass
 
 from ohmward.sim.device import Device
-from ohmward.sim.mutations import MUTATIONS, clamp
+from ohmward.sim.mutations import MUTATIONS, clamp, sets
 
 KINDS: dict[str, str] = {
     "late": "the reply comes delay_s late",
@@ -61,9 +61,7 @@ class Fault:
         """Whether it strikes this message; counts it."""
         if self.times <= 0 or self.kind in OPENING_KINDS or self.matching not in message:
             return False
-        header, _, values = message.partition(b" ")
-        sets = bool(values.strip()) and b"?" not in header
-        if not (sets if self.kind in SETTING_KINDS else b"?" in message):
+        if not (sets(message) if self.kind in SETTING_KINDS else b"?" in message):
             return False
         if self.after > 0:
             self.after -= 1
@@ -74,11 +72,23 @@ class Fault:
 
 @dataclass(frozen=True, kw_only=True, slots=True)
 class Chance:
-    """Faults at random: each query meets one of ``kinds`` with this ``share``."""
+    """Faults at random: each message meets one of the ``kinds`` that fit it with this ``share``."""
 
     kinds: tuple[str, ...]
     share: float
     delay_s: float = 1.0
+
+    @property
+    def on_queries(self) -> tuple[str, ...]:
+        """The kinds that concern queries."""
+        return tuple(
+            kind for kind in self.kinds if kind not in SETTING_KINDS and kind not in OPENING_KINDS
+        )
+
+    @property
+    def on_settings(self) -> tuple[str, ...]:
+        """The kinds that concern settings."""
+        return tuple(kind for kind in self.kinds if kind in SETTING_KINDS)
 
 
 class FaultLayer:
@@ -215,12 +225,15 @@ class FaultLayer:
             if fault.strikes(message):
                 return fault
         chance = self._chance
-        if chance is None or b"?" not in message:
+        if chance is None:
+            return None
+        fitting = chance.on_queries if b"?" in message else chance.on_settings
+        if not fitting or not (b"?" in message or sets(message)):
             return None
         draw = self._draw()
         if draw.random() >= chance.share:
             return None
-        return Fault(kind=draw.choice(chance.kinds), times=0, delay_s=chance.delay_s)
+        return Fault(kind=draw.choice(fitting), times=0, delay_s=chance.delay_s)
 
     def _draw(self) -> random.Random:
         """Random numbers for one event, the same for the same seed and count of events."""

@@ -45,8 +45,24 @@ MUTATIONS: dict[str, Callable[[bytes, random.Random], bytes]] = {
 }
 
 
+_TERSE = re.compile(rb"([A-Za-z]+)([+-]?\d+(?:\.\d*)?)(\s*)")
+
+
+def sets(message: bytes) -> bool:
+    """Whether a command sets something: ``VOLT 5`` and, without a blank, ``U0500.0``."""
+    header, _, values = message.partition(b" ")
+    if b"?" in header:
+        return False
+    return bool(values.strip()) or _TERSE.fullmatch(message) is not None
+
+
 def clamp(message: bytes) -> bytes:
     """A setting whose first number is halved; one without a number stays as it is."""
+    terse = _TERSE.fullmatch(message)
+    if terse is not None:  # the instrument wants its digits as they are
+        letters, number, end = terse.groups()
+        decimals = len(number.partition(b".")[2])
+        return letters + b"%0*.*f" % (len(number), decimals, float(number) / 2.0) + end
     header, space, rest = message.partition(b" ")
     halved = _NUMBER.sub(lambda found: b"%.6E" % (float(found.group()) / 2.0), rest, count=1)
     return header + space + halved
