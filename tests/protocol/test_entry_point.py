@@ -71,7 +71,7 @@ def test_a_package_adds_a_codec(tmp_path: Path, installed: str) -> None:
     assert driver is not None, list(problems)
     codec = codec_of(driver)
     layout = codec.layout(driver.reading["temperature"])
-    assert layout.decode(b"2.315000E+01!!").values == {"temperature": 23.15}
+    assert layout.decode(b"+2.315000E+01!!").values == {"temperature": 23.15}
 
 
 def test_a_codec_that_nobody_has(tmp_path: Path) -> None:
