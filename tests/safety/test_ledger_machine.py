@@ -79,6 +79,7 @@ COURSES: tuple[Course, ...] = (
         (_S.REACHED, _P.REACHED),
     ),
     (*DEAD, (None, _P.LEASE), (None, _P.RELEASE)),
+    (*DEAD, (None, _P.LEASE), (_S.JOIN, None), (_S.TEST, None)),  # must be refused
     (
         *DEAD[:4],
         (None, _P.NOT_WITNESSED),
@@ -630,3 +631,22 @@ def test_an_honest_bench_stays_safe():
     HonestBench.reached = set()
     run(HonestBench)
     assert_explored(HonestBench.reached)
+
+
+def test_a_lease_keeps_the_source_from_the_rail():
+    """In order up to the lease; then nothing that energises, not even at 1 V."""
+    ledger = Ledger(PERMIT, POSITIONS)
+    ledger.on_rail = set()
+    for source, part in (*DEAD, (None, _P.LEASE)):
+        if source is not None:
+            ledger.source_event(source)
+        if part is not None:
+            ledger.position_event("1", part, now_s=0.0)
+    assert ledger.leased == "1"
+    for event in (_S.JOIN, _S.TEST, _S.RAMP, _S.CHANGE):
+        with pytest.raises(LawBroken, match="open lease"):
+            ledger.source_event(event)
+    with pytest.raises(LawBroken):
+        ledger.position_event("2", _P.LEASE, now_s=0.0)
+    assert ledger.source is SourceState.OFF
+    assert ledger.commanded_v == 0.0

@@ -30,7 +30,7 @@ from ohmward.safety.rules import (
     SourceState,
 )
 
-_ENERGISING = frozenset({SourceEvent.TEST, SourceEvent.RAMP, SourceEvent.CHANGE})
+_ENERGISING = frozenset({SourceEvent.JOIN, SourceEvent.TEST, SourceEvent.RAMP, SourceEvent.CHANGE})
 
 
 class Ledger:
@@ -169,7 +169,7 @@ class Ledger:
             raise LawBroken("lease", f"{self.leased} has an open lease")
         if not self.scanner_is_clean:
             raise LawBroken("lease", "the scanner's link is dirty: nobody knows what is connected")
-        if event is SourceEvent.TEST:
+        if event in {SourceEvent.JOIN, SourceEvent.TEST}:
             return
         charging = [p for p, s in self.positions.items() if s is PositionState.CHARGING]
         if len(charging) != 1:
