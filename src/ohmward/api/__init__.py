@@ -1,6 +1,7 @@
 """The public Python of ohmward: what the commands call, and any program may."""
 
 from ohmward.api.checking import check_bench, exercise_driver, read_driver, try_address
+from ohmward.api.compensating import compensate
 from ohmward.api.converting import Converted, convert
 from ohmward.api.preparing import Prepared, prepare
 from ohmward.api.running import Outcome, dry_run, resume, run
@@ -11,6 +12,7 @@ from ohmward.api.showing import (
     show_bench,
     show_brief,
     show_commands,
+    show_compensation,
     show_exercise,
     show_run,
 )
@@ -21,6 +23,7 @@ __all__ = [
     "Prepared",
     "as_json",
     "check_bench",
+    "compensate",
     "convert",
     "dry_run",
     "exercise_driver",
@@ -33,6 +36,7 @@ __all__ = [
     "show_bench",
     "show_brief",
     "show_commands",
+    "show_compensation",
     "show_exercise",
     "show_run",
     "try_address",

@@ -8,7 +8,7 @@ import sys
 import typer
 
 from ohmward import __version__
-from ohmward.cli import calculating, checking, reference, running, serving
+from ohmward.cli import calculating, checking, metrology, reference, running, serving
 from ohmward.errors import BadInput, NotProvenSafe, OhmwardError
 
 app = typer.Typer(
@@ -22,6 +22,7 @@ app = typer.Typer(
     pretty_exceptions_enable=False,
 )
 running.add_to(app)
+metrology.add_to(app)
 checking.add_to(app)
 calculating.add_to(app)
 reference.add_to(app)

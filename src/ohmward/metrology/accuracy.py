@@ -24,6 +24,7 @@ def half_widths(
     cable_m: float = 0.0,
     temperature_c: ArrayLike = np.nan,
     holes: str = "raise",
+    nearest_band: bool = False,
 ) -> tuple[FloatArray, FloatArray]:
     """δ|Z|/|Z| (a fraction) and δθ (rad) as half-widths, by the formula of ImpedanceAccuracy.
 
@@ -34,7 +35,8 @@ def half_widths(
     is the one that the bench was calibrated in unless a thermometer says otherwise.
     """
     f, z, level, temperature = together(frequency_hz, magnitude_ohm, level_v, temperature_c)
-    basic_magnitude, basic_phase = _bands(accuracy, f, z)
+    in_band = np.clip(z, *_span(accuracy)) if nearest_band and accuracy.bands else z
+    basic_magnitude, basic_phase = _bands(accuracy, f, in_band)
     factor = (
         _level_factor(accuracy, level)
         * _integration_factor(accuracy, np.broadcast_to(np.asarray(integration), f.shape))
@@ -59,6 +61,14 @@ def _refuse_holes(found: FloatArray, f: FloatArray, z: FloatArray, level: FloatA
             f"the accuracy table says nothing at {f[where]:g} Hz, {z[where]:g} ohm, "
             f"{level[where]:g} V with this integration setting"
         )
+
+
+def _span(accuracy: ImpedanceAccuracy) -> tuple[float, float]:
+    """The least and the greatest |Z| that any band covers."""
+    return (
+        min(band.impedance_min_ohm for band in accuracy.bands),
+        max(band.impedance_max_ohm for band in accuracy.bands),
+    )
 
 
 def _bands(
@@ -130,6 +140,7 @@ def impedance_uncertainty(
     cable_m: float = 0.0,
     temperature_c: ArrayLike = np.nan,
     holes: str = "raise",
+    nearest_band: bool = False,
 ) -> tuple[FloatArray, FloatArray, FloatArray]:
     """u(R), u(X) in ohm and r(R,X) of single readings, from the stated accuracy.
 
@@ -150,6 +161,7 @@ def impedance_uncertainty(
         cable_m=cable_m,
         temperature_c=temperature_c,
         holes=holes,
+        nearest_band=nearest_band,
     )
     scale = 1 / divisor(accuracy.distribution)
     with np.errstate(invalid="ignore"):

@@ -31,6 +31,9 @@ from ohmward.metrology.arrays import (
 )
 from ohmward.metrology.errors import CompensationMismatch, ShapeMismatch
 
+# Between two frequencies that are further apart nothing is interpolated.
+MOST_APART = 10.0
+
 
 @dataclass(frozen=True, kw_only=True, slots=True)
 class Known:
@@ -146,11 +149,30 @@ class Compensation:
         """Whether the exact open/short/load form is used."""
         return self.load_ohm is not None
 
+    def is_exact(self, frequency_hz: FloatArray) -> NDArray[np.bool_]:
+        """Which frequencies were measured themselves."""
+        f = np.asarray(frequency_hz, dtype=np.float64)
+        apart = np.abs(self.frequency_hz - f[..., None])
+        return np.asarray(np.any(apart <= 1e-9 * f[..., None], axis=-1), dtype=np.bool_)
+
+    def _refuse_gaps(self, f: FloatArray) -> None:
+        wide = self.frequency_hz[1:] > MOST_APART * self.frequency_hz[:-1] * (1 + 1e-9)
+        for low, high in zip(
+            self.frequency_hz[:-1][wide], self.frequency_hz[1:][wide], strict=True
+        ):
+            inside = f[(f > low * (1 + 1e-9)) & (f < high * (1 - 1e-9))]
+            if inside.size:
+                raise CompensationMismatch(
+                    f"compensated at {low:g} Hz and {high:g} Hz, too far apart to say what is "
+                    f"between, but wanted at {inside.flat[0]:g} Hz"
+                )
+
     def at(self, frequency_hz: FloatArray) -> dict[str, Known]:
         """Everything known at these frequencies; raises CompensationMismatch beyond the ends.
 
         An open is interpolated as an admittance, which changes smoothly where its impedance
-        does not. Frequencies that were measured are met exactly.
+        does not. Frequencies that were measured are met exactly; between neighbours that are
+        more than a decade apart nothing is interpolated.
         """
         f = np.asarray(frequency_hz, dtype=np.float64)
         low, high = self.frequency_hz[0] * (1 - 1e-9), self.frequency_hz[-1] * (1 + 1e-9)
@@ -159,6 +181,7 @@ class Compensation:
             raise CompensationMismatch(
                 f"compensated from {low:g} Hz to {high:g} Hz, but wanted at {outside:g} Hz"
             )
+        self._refuse_gaps(f)
         last = self.frequency_hz.size - 1
         index = np.minimum(np.searchsorted(self.frequency_hz, f * (1 - 1e-9)), last)
         exact = np.isclose(self.frequency_hz[index], f, rtol=1e-9)

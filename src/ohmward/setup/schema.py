@@ -50,5 +50,12 @@ def _driver() -> type[BaseModel]:
     return Driver
 
 
+def _standards() -> type[BaseModel]:
+    from ohmward.setup.standards_file import Standards
+
+    return Standards
+
+
 register("bench", _bench)
 register("driver", _driver)
+register("standards", _standards)
