@@ -1,15 +1,24 @@
 """The program: its commands, and what an error becomes on the way out."""
 
 import json
-import os
 import signal
 import sys
+import traceback
+from contextlib import suppress
+from typing import Any
 
 import typer
 
 from ohmward import __version__
-from ohmward.cli import calculating, checking, metrology, reference, running, serving
-from ohmward.errors import BadInput, NotProvenSafe, OhmwardError
+from ohmward.cli import (
+    calculating,
+    checking,
+    reference,
+    running,
+    serving,
+    streams,
+)
+from ohmward.errors import BadInput, NotProvenSafe, OhmwardError, Problem, Stopped
 
 app = typer.Typer(
     name="ohmward",
@@ -17,12 +26,16 @@ app = typer.Typer(
         "Tests trays of capacitors, inductors and resistors from one written sequence "
         "and says, part by part, which may be used."
     ),
+    epilog=(
+        "Exit codes: 0 finished, whatever was decided; 1 our own fault; 2 bad input or nobody's "
+        "authorisation; 3 a safety trip; 4 links lost; 5 the safe state is NOT proven; 6 the "
+        "bench is held; 130 stopped by a signal."
+    ),
     rich_markup_mode=None,
     no_args_is_help=True,
     pretty_exceptions_enable=False,
 )
 running.add_to(app)
-metrology.add_to(app)
 checking.add_to(app)
 calculating.add_to(app)
 reference.add_to(app)
@@ -37,11 +50,11 @@ def _version(asked: bool) -> None:
 
 @app.callback()
 def _program(
-    version: bool = typer.Option(False, "--version", callback=_version, is_eager=True),
+    version: bool = typer.Option(
+        False, "--version", callback=_version, is_eager=True, help="Show the version and exit."
+    ),
 ) -> None:
-    """Exit codes: 0 finished, whatever was decided; 1 our own fault; 2 bad input; 3 a safety trip;
-    4 links lost; 5 the safe state is NOT proven; 6 the bench is held; 130 stopped by a signal.
-    """
+    """What comes before every command."""
 
 
 def main() -> None:
@@ -49,7 +62,10 @@ def main() -> None:
     for number in (signal.SIGTERM, signal.SIGHUP):
         if signal.getsignal(number) == signal.SIG_DFL:  # else it is to be ignored, as by nohup
             signal.signal(number, _as_interrupt)
-    sys.exit(_outcome())
+    streams.prepare()
+    code = _outcome()
+    reason = streams.flush()
+    sys.exit(code or (1 if reason else 0))
 
 
 def _as_interrupt(number: int, frame: object) -> None:
@@ -61,27 +77,46 @@ def _outcome() -> int:
     try:
         code = app(standalone_mode=False)
     except OhmwardError as error:
-        _tell(error)
-        return error.exit_code
-    except typer.Abort:
-        return _stopped()
-    except KeyboardInterrupt:
-        return _stopped()
+        return _told(error)
+    except (typer.Abort, KeyboardInterrupt):
+        return _told(Stopped("stopped"))
     except BrokenPipeError:
-        # whoever read our output has left; keep the interpreter from telling them again
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-        return 0
+        return 0  # whoever read our output has left, and had what was wanted
+    except OSError as error:
+        parts = (error.filename, error.strerror or type(error).__name__)
+        return _told(OhmwardError(": ".join(str(part) for part in parts if part)))
     except Exception as error:
         if hasattr(error, "show") and hasattr(error, "exit_code"):  # a usage error of click's
-            error.show()
-            return int(error.exit_code)
-        raise
+            return _told_usage(error)
+        traceback.print_exc()
+        return _told(OhmwardError("this is a fault of ohmward's own, not of what you wrote"))
     return code if isinstance(code, int) else 0
 
 
-def _stopped() -> int:
-    typer.echo("stopped", err=True)
-    return 130
+def _told(error: OhmwardError) -> int:
+    """Tell the error if anybody can still hear it; returns its exit code."""
+    with suppress(OSError, ValueError):
+        _tell(error)
+    return error.exit_code
+
+
+def _told_usage(error: Any) -> int:
+    with suppress(OSError, ValueError):
+        if _wants_json():
+            text = " ".join(error.format_message().split())
+            _tell_problems(BadInput((_usage_problem(text),)))
+        else:
+            error.show()
+    return int(error.exit_code)
+
+
+def _usage_problem(text: str) -> Problem:
+    expected = "a command as --help shows it"
+    return Problem(id="usage", file="command line", key="-", expected=expected, found=text)
+
+
+def _wants_json() -> bool:
+    return "--json" in sys.argv
 
 
 def _tell(error: OhmwardError) -> None:
@@ -98,7 +133,7 @@ def _tell(error: OhmwardError) -> None:
 
 
 def _tell_problems(error: BadInput) -> None:
-    if "--json" in sys.argv:
+    if _wants_json():
         typer.echo(json.dumps(error.as_dict(), indent=1, ensure_ascii=False))
         return
     for problem in error.problems:
