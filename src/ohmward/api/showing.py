@@ -1,6 +1,7 @@
 """Prints what the other functions return, for people and for programs."""
 
 import json
+from pathlib import Path
 from typing import Any
 
 from rich.console import Console
@@ -12,7 +13,9 @@ from ohmward.instruments.exercise import Exercised
 from ohmward.instruments.transcript import escaped
 from ohmward.output import screen
 from ohmward.sequence.brief import Brief
+from ohmward.setup.compensation_file import CompensationFile
 from ohmward.setup.driver import Driver
+from ohmward.units.values import format_quantity
 
 PIPE_COLUMNS = 120
 
@@ -80,6 +83,36 @@ def show_bench(file: str) -> bool:
         soft_wrap=True,
     )
     return not failed
+
+
+def show_compensation(file: CompensationFile, out: Path) -> None:
+    """Print what a compensation found of the fixture, and what it is worth."""
+    console = _console()
+    table = _table("position", "short at highest frequency", "open, least", "symmetric")
+    for place in file.positions:
+        short = abs(complex(place.short.resistance_ohm[-1], place.short.reactance_ohm[-1]))
+        pairs = zip(place.open.resistance_ohm, place.open.reactance_ohm, strict=True)
+        unlike = place.symmetric.count(False)
+        found = f"not at {unlike} of {len(place.symmetric)} frequencies" if unlike else "yes"
+        table.add_row(
+            place.name,
+            format_quantity(short, "ohm", 3),
+            format_quantity(min(abs(complex(*pair)) for pair in pairs), "ohm", 3),
+            found if place.symmetric else "not known without a load",
+        )
+    console.print(table)
+    contacts = (
+        f"u(R) {format_quantity(file.contact_resistance_ohm, 'ohm', 2)}, "
+        f"u(X) {format_quantity(file.contact_reactance_ohm, 'ohm', 2)}"
+        if file.insertions > 1
+        else "not known: put the standards in twice or more (--insertions)"
+    )
+    for line in (
+        f"Contacts: {contacts}",
+        f"{len(file.frequency_hz)} frequencies, {file.identity}, {file.cable_m:g} m of cable",
+        f"Compensation: {out}" + (" (of the simulated bench)" if file.simulated else ""),
+    ):
+        console.print(line, markup=False, soft_wrap=True)
 
 
 def _table(*headings: str) -> Table:

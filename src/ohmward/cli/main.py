@@ -13,6 +13,7 @@ from ohmward import __version__
 from ohmward.cli import (
     calculating,
     checking,
+    metrology,
     reference,
     running,
     serving,
@@ -36,6 +37,7 @@ app = typer.Typer(
     pretty_exceptions_enable=False,
 )
 running.add_to(app)
+metrology.add_to(app)
 checking.add_to(app)
 calculating.add_to(app)
 reference.add_to(app)
@@ -80,11 +82,13 @@ def _outcome() -> int:
         return _told(error)
     except (typer.Abort, KeyboardInterrupt):
         return _told(Stopped("stopped"))
-    except BrokenPipeError:
-        return 0  # whoever read our output has left, and had what was wanted
+    except SystemExit as left:
+        if isinstance(left.__context__, BrokenPipeError):
+            return 0  # whoever read our output has left, and had what was wanted
+        raise
     except OSError as error:
-        parts = (error.filename, error.strerror or type(error).__name__)
-        return _told(OhmwardError(": ".join(str(part) for part in parts if part)))
+        where = error.filename or "what was to be said could not be written"
+        return _told(OhmwardError(f"{where}: {error.strerror or type(error).__name__}"))
     except Exception as error:
         if hasattr(error, "show") and hasattr(error, "exit_code"):  # a usage error of click's
             return _told_usage(error)

@@ -39,7 +39,7 @@ def flush() -> str:
     longer matters: a reader that left has read enough.
     """
     reason = ""
-    for stream in (sys.stdout, sys.stderr):
+    for stream in (sys.stdout, sys.stderr, sys.__stdout__):
         try:
             if stream is not None:
                 stream.flush()
