@@ -5,7 +5,9 @@ Plain words and plain tables; nothing is told by colour alone, and a pipe gets t
 
 from collections import Counter
 from collections.abc import Iterable, Sequence
+from contextlib import suppress
 from itertools import groupby
+from typing import IO, Any, cast
 
 from rich.console import Console
 from rich.progress import BarColumn, Progress, TextColumn
@@ -52,6 +54,8 @@ def show_brief(console: Console, brief: Brief) -> None:
         f"{len(brief.parts)} parts on {brief.bench}, {brief.readings} readings, "
         f"about {duration(brief.duration_s)}",
     )
+    if brief.compensation:
+        _line(console, f"Compensation: {brief.compensation}")
     _list(console, "Before anyone touches the bench", brief.cautions)
     console.print()
     console.print(_stage_table(brief.stages))
@@ -126,13 +130,37 @@ def _list(console: Console, heading: str, items: Sequence[str]) -> None:
             _line(console, f"  - {item}")
 
 
+class _Heedless:
+    """A text stream whose reader may leave: what cannot be written is dropped."""
+
+    def __init__(self, file: IO[str]) -> None:
+        self._file = file
+
+    def __getattr__(self, name: str) -> Any:
+        return getattr(self._file, name)
+
+    def write(self, text: str) -> int:
+        """Write the text, or drop it."""
+        with suppress(OSError, ValueError):
+            self._file.write(text)
+        return len(text)
+
+    def flush(self) -> None:
+        """Write out what is held, or drop it."""
+        with suppress(OSError, ValueError):
+            self._file.flush()
+
+
 class ProgressBar:
     """Watches a run on a terminal: one bar for the lot, with the time that is left.
 
-    On a pipe it writes one line per part instead. Use as a context manager.
+    On a pipe it writes one line per part instead. A run goes on when nobody reads it. Use as
+    a context manager.
     """
 
     def __init__(self, console: Console) -> None:
+        if console.file is not None:
+            console.file = cast("IO[str]", _Heedless(console.file))
         self._console = console
         self._progress = Progress(
             TextColumn("{task.description}"),
