@@ -21,6 +21,7 @@ from ohmward.metrology.immittance import impedance_of_pair
 from ohmward.protocol.check import check_driver
 from ohmward.results import compensations
 from ohmward.run.bench import Connections, OpenBench, open_bench
+from ohmward.run.compensated import refuse_twice
 from ohmward.sequence.load import load_sequence
 from ohmward.sequence.model import SweepStage
 from ohmward.sequence.reach import Reach, reachable_frequencies
@@ -307,16 +308,6 @@ async def _refuse_own_correction(meter: ImpedanceMeter, task: Task) -> str:
     found = await meter.prepare(pair=None, integration=task.integration, range_ohm=None)
     refuse_twice(task.meter_name, found)
     return "off" if all(name in found for name in CORRECTIONS) else "unknown"
-
-
-def refuse_twice(name: str, settings: Mapping[str, str]) -> None:
-    """Raise CompensationMismatch where the meter says that it corrects for a fixture itself."""
-    on = [one.removeprefix("correction_") for one in CORRECTIONS if settings.get(one) == "on"]
-    if on:
-        raise CompensationMismatch(
-            f"{name}'s own {' and '.join(on)} correction is on: the fixture would be corrected "
-            "for twice; switch it off, or do without a compensation file"
-        )
 
 
 async def _all_standards(

@@ -15,7 +15,7 @@ from rich.console import Console
 from ohmward import __version__
 from ohmward.api import simulation
 from ohmward.api.operator import TerminalOperator
-from ohmward.api.preparing import Prepared, prepare
+from ohmward.api.preparing import Prepared, prepare, refuse_other_world
 from ohmward.api.tabulating import Truth, tabulate
 from ohmward.clock import (
     DRY_RUN_START_UTC,
@@ -57,6 +57,7 @@ def dry_run(prepared: Prepared, *, out: Path, seed: int = 0, watch: bool = False
 
     Opens none of the bench's addresses. Raises BadInput when ``out`` exists.
     """
+    refuse_other_world(prepared, simulated=True)
     run_id = f"dry-{prepared.brief.hash[:12]}-{seed}"
     journal = run_folder.make(out, prepared.sources, prepared.brief)
     facts = _facts(prepared, run_id=run_id, simulated=True, seed=seed)
@@ -72,6 +73,7 @@ def run(prepared: Prepared, *, out: Path, watch: bool = False) -> Outcome:
     """
     refuse_energising(prepared)
     refuse_unattended(prepared)
+    refuse_other_world(prepared, simulated=False)
     now = today_utc()
     run_id = f"{now:%Y%m%dT%H%M%SZ}-{secrets.token_hex(2)}"
     journal = run_folder.make(out, prepared.sources, prepared.brief)
@@ -94,7 +96,12 @@ def _resume(folder: Path, *, watch: bool) -> Outcome:
     progress = progress_of(folder)
     facts = dict(progress.facts)
     paths = json.loads(facts["paths"])
-    prepared = prepare(paths["sequence"], bench=paths["bench"], parts=paths["parts"])
+    prepared = prepare(
+        paths["sequence"],
+        bench=paths["bench"],
+        parts=paths["parts"],
+        compensation=paths.get("compensation"),
+    )
     problems = Problems()
     note_differences(
         progress, prepared.brief, prepared.drivers, json.loads(facts["hashes"]), problems
@@ -252,6 +259,7 @@ async def _carry_out(
             if progress
             else {}
         ),
+        compensated_by=(task.prepared.compensation.identity if task.prepared.compensation else ""),
     )
     watcher.begun(brief, behind_s=behind_s)
     await carry_out(order, connections, recorder, watcher, stop)
@@ -264,6 +272,8 @@ def _facts(prepared: Prepared, *, run_id: str, simulated: bool, seed: int | None
         "bench": str(prepared.bench.path.absolute()),
         "parts": str(prepared.parts_path.absolute()),
     }
+    if prepared.compensated is not None:
+        paths["compensation"] = str(prepared.compensated.path.absolute())
     return {
         "run_id": run_id,
         "simulated": "yes" if simulated else "no",
@@ -288,7 +298,14 @@ def _finish(task: _Task, truth: Truth | None) -> Outcome:
     about = {key: task.facts[key] for key in ("run_id", "ohmward", "brief_sha256")}
     try:
         run_folder.forget_derived(task.folder)
-        results = tabulate(task.folder, prepared.brief, prepared.drivers, prepared.cable_m, truth)
+        results = tabulate(
+            task.folder,
+            prepared.brief,
+            prepared.drivers,
+            prepared.cable_m,
+            truth,
+            prepared.compensations,
+        )
         manifest.write(task.folder, about)
     except OSError as error:
         reason = error.strerror or str(error)

@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 
 from ohmward.journal import schema
 from ohmward.journal.store import Row, Store
+from ohmward.metrology.compensation import Compensation
 from ohmward.output import columns
 from ohmward.output.tables import TableWriter
 from ohmward.results.derive import derive_impedance
@@ -55,6 +56,7 @@ def tabulate(
     drivers: Mapping[str, Driver],
     cable_m: Mapping[str, float],
     truth: Truth | None = None,
+    compensations: Mapping[str, Compensation] | None = None,
 ) -> list[ResultRow]:
     """Write impedance.csv, results.csv, events.csv (and truth.csv) of a run; returns the results.
 
@@ -75,6 +77,7 @@ def tabulate(
                     run_id=run_id,
                     simulated=simulated,
                     cable_m=cable_m,
+                    compensations=compensations,
                 )
                 table.arrays(derived)
                 kept[0].add(readings)

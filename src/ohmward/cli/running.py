@@ -18,6 +18,14 @@ OutOption = Annotated[
     Path, typer.Option("--out", metavar="DIR", help="New folder for the run; must not exist yet.")
 ]
 JsonOption = Annotated[bool, typer.Option("--json", help="Print JSON.")]
+CompensationOption = Annotated[
+    Path | None,
+    typer.Option(
+        "--compensation",
+        metavar="FILE",
+        help="What 'ohmward compensate' found of the bench's fixture.",
+    ),
+]
 SeedOption = Annotated[
     int, typer.Option("--seed", min=0, help="Draws parts and noise; same seed, same bytes.")
 ]
@@ -30,12 +38,16 @@ def add_to(app: typer.Typer) -> None:
 
 
 def brief(
-    sequence: SequenceArgument, bench: BenchOption, parts: PartsOption, json: JsonOption = False
+    sequence: SequenceArgument,
+    bench: BenchOption,
+    parts: PartsOption,
+    compensation: CompensationOption = None,
+    json: JsonOption = False,
 ) -> None:
     """Show what a run would do, how long it takes, and what this bench cannot tell."""
     from ohmward import api
 
-    prepared = api.prepare(sequence, bench=bench, parts=parts)
+    prepared = api.prepare(sequence, bench=bench, parts=parts, compensation=compensation)
     if json:
         typer.echo(api.as_json(prepared.brief.as_dict()))
     else:
@@ -47,16 +59,23 @@ def dryrun(
     bench: BenchOption,
     parts: PartsOption,
     out: OutOption,
+    compensation: CompensationOption = None,
     seed: SeedOption = 0,
 ) -> None:
     """Carry the sequence out on a simulated bench, in virtual time; opens no real address."""
     from ohmward import api
 
-    prepared = api.prepare(sequence, bench=bench, parts=parts)
+    prepared = api.prepare(sequence, bench=bench, parts=parts, compensation=compensation)
     api.show_run(api.dry_run(prepared, out=out, seed=seed, watch=True))
 
 
-def run(sequence: SequenceArgument, bench: BenchOption, parts: PartsOption, out: OutOption) -> None:
+def run(
+    sequence: SequenceArgument,
+    bench: BenchOption,
+    parts: PartsOption,
+    out: OutOption,
+    compensation: CompensationOption = None,
+) -> None:
     """Carry the sequence out on the real bench.
 
     Discharge every part before it goes into the fixture. This program is no interlock and
@@ -64,7 +83,7 @@ def run(sequence: SequenceArgument, bench: BenchOption, parts: PartsOption, out:
     """
     from ohmward import api
 
-    prepared = api.prepare(sequence, bench=bench, parts=parts)
+    prepared = api.prepare(sequence, bench=bench, parts=parts, compensation=compensation)
     api.show_run(api.run(prepared, out=out, watch=True))
 
 

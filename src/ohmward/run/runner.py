@@ -38,7 +38,8 @@ class Order:
 
     ``ended`` are the numbers of stages that are complete; ``taken`` the readings of the one
     that was interrupted, by stage number. ``identities`` are those that the bench must have
-    (empty for a first run).
+    (empty for a first run). ``compensated_by`` is the identity of the meter that took the
+    fixture's compensation ("" where nothing is corrected).
     """
 
     brief: Brief
@@ -47,6 +48,7 @@ class Order:
     ended: frozenset[int] = frozenset()
     taken: Mapping[int, set[tuple[int, int]]]
     identities: Mapping[str, str]
+    compensated_by: str = ""
 
 
 async def carry_out(
@@ -145,6 +147,7 @@ async def _work(order: Order, bench: OpenBench, recorder: Recorder, watcher: Wat
             room=room,
             recorder=recorder,
             watcher=watcher,
+            compensated=bool(order.compensated_by),
         )
         await recorder.stage_begun(stage)
         state = "stopped"
@@ -200,6 +203,14 @@ async def _note_identities(order: Order, bench: OpenBench, recorder: Recorder) -
     for name, identity in bench.identities.items():
         if identity != order.identities.get(name, identity):
             _identity_changed(problems, order, name, repr(identity))
+    if order.compensated_by not in ("", bench.identities[bench.meter_name]):
+        problems.add(
+            id="compensation-other-instrument",
+            file=order.bench.path,
+            key=f"instrument.{bench.meter_name}",
+            expected=f"{order.compensated_by!r}, which took the compensation",
+            found=repr(bench.identities[bench.meter_name]),
+        )
     problems.raise_if_any()
     for name, identity in bench.identities.items():
         instrument, driver = order.bench.instruments[name], order.drivers[name]

@@ -8,6 +8,7 @@ import trio
 from ohmward.errors import InstrumentRefused
 from ohmward.instruments.impedance_meter import ImpedanceMeter
 from ohmward.instruments.thermometer import Thermometer
+from ohmward.run.compensated import refuse_twice
 from ohmward.run.recorder import Recorder
 from ohmward.run.watcher import Watcher
 from ohmward.safety.handle import Warden
@@ -55,8 +56,10 @@ class Sweep:
         room: Room,
         recorder: Recorder,
         watcher: Watcher,
+        compensated: bool = False,
     ) -> None:
         self._stage = stage
+        self._compensated = compensated
         self._meter = meter
         self._meter_name = meter_name
         self._warden = warden
@@ -92,6 +95,8 @@ class Sweep:
                 await self._keep_not_set(index, point, repeats)
             return
         await self._recorder.settings(stage, self._meter_name, found)
+        if self._compensated:
+            refuse_twice(self._meter_name, found)
         for index, point, repeats in left:
             await self._take(index, point, repeats)
         await self._see_contacts()

@@ -99,6 +99,7 @@ class Brief:
 
     ``parts`` are those that are measured; ``warnings`` name the others. ``stages`` are in order
     of execution: part by part, each part's stages in their order.
+    ``compensation`` says what corrects the fixture, "" where nothing does.
     ``energising`` names the stages that put a hazardous voltage on a part. ``hash`` is the
     SHA-256 of everything that changes what is done; ``hashes`` are those of each input, so
     that a later difference can be named.
@@ -121,6 +122,7 @@ class Brief:
     warnings: tuple[str, ...]
     hash: str
     hashes: Mapping[str, str]
+    compensation: str = ""
 
     @property
     def readings(self) -> int:

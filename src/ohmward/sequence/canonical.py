@@ -10,6 +10,7 @@ from pydantic import BaseModel
 from ohmward.sequence.brief import as_plain
 from ohmward.sequence.model import Sequence
 from ohmward.setup.bench import Bench
+from ohmward.setup.compensation_file import CompensationFile
 from ohmward.setup.driver import Driver
 from ohmward.terms.limit import Limit
 from ohmward.terms.part import Part
@@ -29,13 +30,16 @@ def input_hashes(
     drivers: Mapping[str, Driver],
     parts: tuple[Part, ...],
     limits: tuple[Limit, ...],
+    compensation: CompensationFile | None = None,
 ) -> dict[str, str]:
     """A hash for each input, from what was read of it: units, comments and spaces make none.
 
     ``limits`` stands for the rules that are built in: a sequence whose rule has changed since
     decides otherwise, and so is another one.
     """
+    corrected = {} if compensation is None else {"compensation": _model(compensation, set())}
     return {
+        **{name: hash_of(content) for name, content in corrected.items()},
         "sequence": hash_of(_model(sequence, NOT_DONE)),
         "bench": hash_of(_model(bench, set())),
         "drivers": hash_of({name: driver.digest for name, driver in drivers.items()}),

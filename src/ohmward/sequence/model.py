@@ -22,6 +22,7 @@ from ohmward.setup.quantities import (
     OneOrMany,
     PositiveHertz,
     PositiveOhms,
+    PositiveSeconds,
     PositiveVolts,
     Seconds,
     quantity,
@@ -262,6 +263,25 @@ class DecisionTable(Model):
     guard: Guard = Field(1.0, description="guard band as a multiple of U; 1 as in ILAC-G8")
 
 
+class CompensationTable(Model):
+    """What must be known of the fixture before this sequence may be run."""
+
+    standards: OneOrMany[Literal["open", "short", "load"]] = Field(
+        description="open and short, which suffice for a symmetric fixture, or load as well",
+        examples=[["open", "short", "load"]],
+    )
+    at_most: PositiveSeconds | None = Field(
+        None, description="how old it may be; any age if left out", examples=["24 h"]
+    )
+
+    @field_validator("standards")
+    @classmethod
+    def _both(cls, value: tuple[str, ...]) -> tuple[str, ...]:
+        if not {"open", "short"} <= set(value):
+            raise wrong("open and short at least", ", ".join(value))
+        return value
+
+
 class SequenceHead(Model):
     """A sequence file without its stages and limits."""
 
@@ -276,6 +296,9 @@ class SequenceHead(Model):
         1.0, description="share of its rating to which a part may be stressed", examples=["80 %"]
     )
     decision: DecisionTable = Field(default_factory=DecisionTable)
+    compensation: CompensationTable | None = Field(
+        None, description="compensation of the fixture that a run must have"
+    )
 
 
 class Sequence(SequenceHead):

@@ -9,6 +9,7 @@ from ohmward.safety.hazard import LIVE_DC_V, peak_voltage_v
 from ohmward.sequence.brief import Brief, CannotReach, PlannedSweep
 from ohmward.sequence.canonical import brief_hash, input_hashes
 from ohmward.sequence.cautions import cautions
+from ohmward.sequence.compensated import Compensated, check_compensation
 from ohmward.sequence.fits import fits
 from ohmward.sequence.limits import resolve_limits
 from ohmward.sequence.model import STAGE_TABLES, Sequence
@@ -34,6 +35,7 @@ def unroll(
     sequence_file: Path,
     parts_file: Path,
     problems: Problems,
+    compensation: Compensated | None = None,
 ) -> Brief | None:
     """The brief, or None with everything noted that is wrong between the inputs.
 
@@ -52,9 +54,13 @@ def unroll(
     given = _given(sequence, bench, drivers)
     planned, left_out = _plan(sequence, parts, given, notes)
     resolved = resolve_limits(sequence, planned, notes)
+    corrected = ""
+    if bench is not None:
+        corrected = check_compensation(sequence, bench, planned, compensation, notes)
     if len(problems) or bench is None or given.reach.driver is None:
         return None
-    hashes = input_hashes(sequence, bench, drivers, tuple(parts), resolved.limits)
+    file = compensation.file if compensation else None
+    hashes = input_hashes(sequence, bench, drivers, tuple(parts), resolved.limits, file)
     meter = MeterAccuracy(
         accuracy=given.reach.driver.impedance_accuracy,
         cable_m=bench.instruments[given.reach.name].cable_m,
@@ -77,6 +83,7 @@ def unroll(
         warnings=tuple(notes.warnings),
         hash=brief_hash(hashes),
         hashes=hashes,
+        compensation=corrected,
     )
 
 
