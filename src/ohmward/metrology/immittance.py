@@ -209,7 +209,8 @@ def gradients(
 ) -> dict[str, View]:
     """The named views of Z = r + jx (ohm) at ``frequency_hz``, each with its derivatives.
 
-    ``resistance_ohm`` and ``reactance_ohm`` may be named too. Where a view does not exist
+    ``resistance_ohm``, ``reactance_ohm``, ``conductance_s``, ``susceptance_s`` and
+    ``power_factor`` (R/|Z|) may be named too. Where a view does not exist
     (Cs at X = 0) it and its derivatives are not finite. Raises ShapeMismatch, BadFrequency.
     """
     f, r_, x_ = together(frequency_hz, r, x)
@@ -249,6 +250,15 @@ def _view(name: str, w: FloatArray, r: FloatArray, x: FloatArray) -> View:
         case "q":
             size = np.abs(x)
             return View(value=size / r, by_r=-size / (r * r), by_x=np.sign(x) / r)
+        case "conductance_s":
+            square = m * m
+            return View(value=r / m, by_r=(x * x - r * r) / square, by_x=-2 * r * x / square)
+        case "susceptance_s":
+            square = m * m
+            return View(value=-x / m, by_r=2 * r * x / square, by_x=(x * x - r * r) / square)
+        case "power_factor":
+            z = np.sqrt(m)
+            return View(value=r / z, by_r=x * x / (z * m), by_x=-r * x / (z * m))
     raise UnknownPair(f"no view of an impedance is called {name!r}")
 
 

@@ -236,6 +236,25 @@ def format_quantity(value: float | None, unit: str, digits: int = 4) -> str:
     return f"{shown} {unit_shown}".strip()
 
 
+def format_uncertain(value: float, u: float, unit: str) -> str:
+    """A value with its uncertainty in one unit: ``15.94 Ω ± 0.28 Ω``, u with two digits.
+
+    The value is rounded where its uncertainty is (JCGM 100:2008, 7.2.6). Raises KeyError for
+    a unit that is not in ``UNITS``; both must be finite, and u above zero.
+    """
+    kind = UNITS[unit]
+    spread = Decimal(f"{u:.1e}")
+    power, prefix = 0, ""
+    if kind.shown_prefixes:
+        largest = max(Decimal(f"{abs(value):.15e}"), spread)
+        power, prefix = _best_prefix(largest.adjusted(), kind)
+    spread = spread.scaleb(-power)
+    places = max(1 - spread.adjusted(), 0)
+    rounded = Decimal(repr(float(value))).scaleb(-power)
+    unit_shown = f" {prefix.replace('u', 'µ')}{kind.shown}".rstrip()
+    return f"{rounded:.{places}f}{unit_shown} ± {spread:.{places}f}{unit_shown}"
+
+
 def _best_prefix(exponent: int, kind: Unit) -> tuple[int, str]:
     wanted = exponent // 3 * 3
     choices = [(0, "")] + [(PREFIXES[prefix], prefix) for prefix in kind.shown_prefixes]
