@@ -19,8 +19,10 @@ from ohmward.sim.scpi_device import ScpiDevice
 from ohmward.sim.shared_link import SharedLink
 from ohmward.sim.standards import IDEAL, Standard
 from ohmward.sim.terminals import Relays
+from ohmward.sim.terminals_dc import Circuit
 from ohmward.sim.tray import Models, fill
 from ohmward.sim.wired_circuit import CircuitRelays, WiredCircuit
+from ohmward.sim.wiring import wire
 
 __all__ = ["SIMULATORS", "InstrumentAt", "SimulatedBench"]
 
@@ -33,8 +35,8 @@ class SimulatedBench:
     the parts list as plain data: part_id, position, kind, nominal, tolerance_low and _high,
     rated_v, rated_a, dielectric, polarity. ``models`` is the folder of part models; one
     named ``parts`` beside the physical file comes first. ``faulty`` names the instruments that
-    get a fault layer and a record, ``circuit`` is the high-voltage side (open where there is
-    none). Raises PhysicalFileError or ValueError for what cannot be simulated.
+    get a fault layer and a record, ``circuit`` is the high-voltage side; without one it is wired
+    as the physical file says. Raises PhysicalFileError or ValueError for what cannot be simulated.
     """
 
     def __init__(
@@ -47,7 +49,7 @@ class SimulatedBench:
         *,
         models: Path | None = None,
         faulty: Collection[str] = (),
-        circuit: WiredCircuit | None = None,
+        circuit: Circuit | None = None,
     ) -> None:
         self._physical = read_physical(physical) if physical else Physical()
         self._seed = seed
@@ -62,8 +64,11 @@ class SimulatedBench:
         room = self._physical.room
         self.room = SimulatedRoom(room.temperature_c, room.swing_k, room.humidity_pct)
         self.contacts: Relays = self._contacts(instruments, positions)
-        if circuit is not None:
-            self.contacts = CircuitRelays(circuit, self.contacts)
+        self.circuit: Circuit = (
+            circuit or wire(self._physical, self.parts, self._lying(), seed) or OpenCircuit()
+        )
+        if isinstance(self.circuit, WiredCircuit):
+            self.contacts = CircuitRelays(self.circuit, self.contacts)
         self.terminals = FixtureTerminals(
             self.contacts, positions, self._physical.fixture, self.room
         )
@@ -79,7 +84,7 @@ class SimulatedBench:
                 contacts=self.contacts,
                 terminals=self.terminals,
                 room=self.room,
-                circuit=circuit or OpenCircuit(),
+                circuit=self.circuit,
             ),
             faulty,
         )
@@ -125,6 +130,10 @@ class SimulatedBench:
             for key, closed in (("stuck_open", False), ("stuck_closed", True)):
                 stuck.update({str(channel): closed for channel in figures.get(key, ())})
         return Contacts(channels, stuck)
+
+    def _lying(self) -> dict[str, str]:
+        """Where each part lies from the beginning; what is loaded by hand lies nowhere yet."""
+        return {name: place for name, place in self._places.items() if place not in self._by_hand}
 
     def _load_positions(self, positions: Mapping[str, Sequence[str]]) -> None:
         lying: dict[str, dict[str, PhysicalPart]] = {name: {} for name in positions}

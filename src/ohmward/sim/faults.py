@@ -108,6 +108,7 @@ class FaultLayer:
         self._outgoing: deque[tuple[float, bytes]] = deque()
         self._replies: dict[bytes, bytes] = {}
         self._previous = b""
+        self._echo = (b"", b"")
         self._false_identity = False
         self._babbles_s: float | None = None
         self._dead = False
@@ -205,7 +206,9 @@ class FaultLayer:
     def _before(self, fault: Fault, message: bytes, now_s: float) -> tuple[bytes, bool]:
         """What a fault does before the message is obeyed: the message, and whether it is."""
         if fault.kind == "clamped":
-            return clamp(message), True
+            clamped = clamp(message)
+            self._echo = (clamped.strip(), message.strip())
+            return clamped, True
         if fault.kind == "queue-overflow":
             self.device.receive(b"NO:SUCH:COMMAND\n" * 40, now_s)
         elif fault.kind == "dead":
@@ -261,6 +264,10 @@ class FaultLayer:
 
     def _shape(self, reply: bytes, at_s: float) -> None:
         """Turn one reply into what leaves the instrument, and when."""
+        clamped, said = self._echo
+        if clamped and reply.startswith(clamped):  # it echoes what it was sent, not what it does
+            reply = said + reply[len(clamped) :]
+        self._echo = (b"", b"")
         if self._pending:
             message, fault = self._pending.popleft()
         else:  # it speaks unasked, or acknowledges
