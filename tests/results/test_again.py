@@ -18,8 +18,9 @@ ROW = {"pair": "Cs-D", "first": 1e-7, "second": 1e-3, "first_resolution": 1e-10}
 def test_the_budget_is_that_of_the_judged_value() -> None:
     readings = readings_of([ROW])
     table = derive_impedance(readings, [part_of()], ACCURACY)
-    ((stage, point, budget),) = budgets(readings, table, "P1", "cs_f", ACCURACY)
-    assert (stage, point.frequency_hz) == ("sweep", 1000.0)
+    (found,) = budgets(readings, table, "P1", "cs_f", ACCURACY)
+    budget = found.budget
+    assert (found.stage, found.point.frequency_hz) == ("sweep", 1000.0)
     assert budget.u == pytest.approx(float(table["u_cs_f"][0]), rel=1e-6)
     by_name = {part.source.name: part.source.contribution for part in budget.contributions}
     # by hand: 0.1 % rectangular of C, and a last digit of 0.1 nF

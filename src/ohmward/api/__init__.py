@@ -1,8 +1,10 @@
 """The public Python of ohmward: what the commands call, and any program may."""
 
+from ohmward.api.budgeting import budget
 from ohmward.api.checking import check_bench, exercise_driver, read_driver, try_address
 from ohmward.api.compensating import compensate
 from ohmward.api.converting import Converted, convert
+from ohmward.api.judging import judge_again
 from ohmward.api.preparing import Prepared, prepare
 from ohmward.api.running import Outcome, dry_run, resume, run
 from ohmward.api.schemas import schema
@@ -11,9 +13,11 @@ from ohmward.api.showing import (
     as_json,
     show_bench,
     show_brief,
+    show_budget,
     show_commands,
     show_compensation,
     show_exercise,
+    show_judged_again,
     show_run,
 )
 
@@ -22,11 +26,13 @@ __all__ = [
     "Outcome",
     "Prepared",
     "as_json",
+    "budget",
     "check_bench",
     "compensate",
     "convert",
     "dry_run",
     "exercise_driver",
+    "judge_again",
     "prepare",
     "read_driver",
     "resume",
@@ -35,9 +41,11 @@ __all__ = [
     "serve",
     "show_bench",
     "show_brief",
+    "show_budget",
     "show_commands",
     "show_compensation",
     "show_exercise",
+    "show_judged_again",
     "show_run",
     "try_address",
 ]

@@ -1,6 +1,7 @@
 """Prints what the other functions return, for people and for programs."""
 
 import json
+from math import isfinite, isinf, isnan
 from pathlib import Path
 from typing import Any
 
@@ -8,10 +9,14 @@ from rich.console import Console
 from rich.table import Table
 
 from ohmward.api import checking
+from ohmward.api.budgeting import BudgetOf
+from ohmward.api.judging import JudgedAgain
 from ohmward.api.running import Outcome
 from ohmward.instruments.exercise import Exercised
 from ohmward.instruments.transcript import escaped
 from ohmward.output import screen
+from ohmward.results.budgets import PointBudget
+from ohmward.results.reasons import condition
 from ohmward.sequence.brief import Brief
 from ohmward.setup.compensation_file import CompensationFile
 from ohmward.setup.driver import Driver
@@ -113,6 +118,78 @@ def show_compensation(file: CompensationFile, out: Path) -> None:
         f"Compensation: {out}" + (" (of the simulated bench)" if file.simulated else ""),
     ):
         console.print(line, markup=False, soft_wrap=True)
+
+
+def show_budget(found: BudgetOf) -> None:
+    """Print the budget of each point: causes with shares, then what they come to."""
+    console = _console()
+    for one in found.points:
+        whole, unit = one.budget, found.unit
+        what = one.view if one.view == found.quantity else f"{found.quantity} ({one.view})"
+        console.print(
+            f"{found.part_id}, {one.stage}: {what} at {condition(one.point)}",
+            markup=False,
+            style="bold",
+        )
+        table = _table("cause", "distribution", "u", "sensitivity", "contribution", "share")
+        for part in whole.contributions:
+            source = part.source
+            table.add_row(
+                source.name,
+                source.distribution,
+                format_quantity(source.u, source.unit, 3),
+                f"{source.sensitivity:.4g}",
+                format_quantity(source.contribution, unit, 3),
+                f"{100 * part.share:.1f} %",
+            )
+        console.print(table)
+        for line in _sums(one, unit):
+            console.print(line, markup=False, soft_wrap=True)
+
+
+def _sums(one: PointBudget, unit: str) -> list[str]:
+    whole = one.budget
+    degrees = "infinite" if isinf(whole.degrees) else f"{whole.degrees:.1f}"
+    lines = [
+        f"value {format_quantity(whole.value, unit, 6)}, u {format_quantity(whole.u, unit, 3)}, "
+        f"effective degrees of freedom {degrees}, k = {whole.k:.3g}, "
+        f"U {format_quantity(whole.u_expanded, unit, 2)}"
+    ]
+    if one.monte_carlo:
+        at = one.interval
+        factor = "no factor" if isnan(at.k) else f"k = {at.k:.3g}"
+        half = format_quantity(at.u_expanded, unit, 2) if isfinite(at.u_expanded) else "unbounded"
+        lines.append(f"Decided by Monte Carlo, first order would not do: U {half}, {factor}")
+    return [*lines, ""]
+
+
+def show_judged_again(found: JudgedAgain) -> None:
+    """Print what other limits change, quantity by quantity and part by part."""
+    console = _console()
+    for warning in found.warnings:
+        console.print(f"Worth knowing: {warning}", markup=False, soft_wrap=True)
+    if found.changes:
+        table = _table("part", "stage", "quantity", "at", "before", "now", "why")
+        for change in found.changes:
+            decided = (str(one or "not judged") for one in (change.before, change.after))
+            table.add_row(
+                change.part_id,
+                change.stage,
+                change.quantity,
+                change.condition,
+                *decided,
+                change.reason,
+            )
+        console.print(table)
+    moved = [(part, before, after) for part, before, after in found.parts if before is not after]
+    for part_id, before, after in moved:
+        console.print(f"{part_id}: {before} then, {after} now", markup=False)
+    console.print(
+        f"{found.run_id} by {found.limits}: {len(found.changes)} decisions differ, "
+        f"{len(moved)} of {len(found.parts)} parts",
+        markup=False,
+        soft_wrap=True,
+    )
 
 
 def _table(*headings: str) -> Table:

@@ -11,7 +11,7 @@ JsonOption = Annotated[bool, typer.Option("--json", help="Print JSON.")]
 
 def add_to(app: typer.Typer) -> None:
     """Add these commands to the program."""
-    for command in (compensate,):
+    for command in (compensate, budget, judge):
         app.command()(command)
 
 
@@ -70,3 +70,51 @@ def compensate(
         ),
         out,
     )
+
+
+def budget(
+    run: RunArgument,
+    part: Annotated[str, typer.Argument(metavar="PART", help="The part, as in its list.")],
+    quantity: Annotated[
+        str, typer.Argument(metavar="QUANTITY", help="Such as capacitance_f, d or rs_ohm.")
+    ],
+    at: Annotated[
+        str | None, typer.Option("--at", metavar="FREQUENCY", help='Only here, such as "1 kHz".')
+    ] = None,
+    json: JsonOption = False,
+) -> None:
+    """Show what a value's uncertainty is made of: causes, sensitivities and shares."""
+    from ohmward import api
+
+    found = api.budget(run, part, quantity, at=at)
+    if json:
+        typer.echo(api.as_json(found.as_dict()))
+    else:
+        api.show_budget(found)
+
+
+def judge(
+    run: RunArgument,
+    limits: Annotated[
+        str,
+        typer.Option(
+            "--limits", metavar="FILE", help="Sequence file whose limits and rule decide."
+        ),
+    ],
+    out: Annotated[
+        Path | None,
+        typer.Option("--out", metavar="FILE", help="New CSV file for every row decided again."),
+    ] = None,
+    json: JsonOption = False,
+) -> None:
+    """Decide a run again by other limits, from its journal, and show what changes.
+
+    Nothing is measured, and the run's folder stays as it is.
+    """
+    from ohmward import api
+
+    found = api.judge_again(run, limits=limits, out=out)
+    if json:
+        typer.echo(api.as_json(found.as_dict()))
+    else:
+        api.show_judged_again(found)

@@ -64,9 +64,7 @@ class Cell:
             r=self.r,
             x=self.x,
             stated=self.stated,
-            normal={
-                "resolution and compensation": _without(self.type_b, plain.stated_covariance())
-            },
+            normal={"resolution and compensation": without(self.type_b, plain.stated_covariance())},
             repeat=self.type_a,
             degrees=self.good - 1 if self.good > 1 else float("inf"),
         )
@@ -79,7 +77,7 @@ class Cell:
         return u_r, u_x, float(correlation_of(shared, np.asarray(u_r), np.asarray(u_x)))
 
 
-def _without(whole: Covariance, part: Covariance) -> Covariance:
+def without(whole: Covariance, part: Covariance) -> Covariance:
     """What is left of a covariance when an independent part is taken off; never below zero.
 
     Below a millionth of the whole it is rounding, and nothing is left.

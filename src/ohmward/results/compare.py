@@ -2,10 +2,22 @@
 
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
+from math import isnan
 
 from ohmward.terms.decision import Decision
+from ohmward.units.values import format_quantity
 
-_KEY = ("part_id", "stage", "quantity", "frequency_hz", "level_v", "bias_v", "bias_a")
+# a bias of zero is not worth a word
+_ALWAYS = frozenset({"frequency_hz", "level_v"})
+_CONDITIONS = {
+    "frequency_hz": "Hz",
+    "level_v": "V",
+    "bias_v": "V",
+    "bias_a": "A",
+    "voltage_v": "V",
+    "since_voltage_s": "s",
+}
+_KEY = ("part_id", "stage", "quantity", *_CONDITIONS)
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -18,6 +30,7 @@ class Change:
     before: Decision | None
     after: Decision | None
     reason: str
+    condition: str = ""
 
 
 def changes(
@@ -43,9 +56,20 @@ def changes(
                     before=decided[0],
                     after=decided[1],
                     reason=str(row["reason"]),
+                    condition=_condition(row),
                 )
             )
     return found
+
+
+def _condition(row: Mapping[str, object]) -> str:
+    """Where a row's value is, for a table: ``1 kHz, 10 V``."""
+    said = []
+    for name, unit in _CONDITIONS.items():
+        value = row.get(name)
+        if isinstance(value, float) and not isnan(value) and (value or name in _ALWAYS):
+            said.append(format_quantity(value, unit, 4))
+    return ", ".join(said)
 
 
 def _by_key(rows: Iterable[Mapping[str, object]]) -> dict[tuple[str, ...], Mapping[str, object]]:
