@@ -57,11 +57,17 @@ def test_other_limits_show_what_changes_and_nothing_else() -> None:
     assert (gone.quantity, gone.before, gone.after) == ("d", Decision.ACCEPT, None)
 
 
-def test_two_limits_at_one_condition_are_kept_apart() -> None:
+def test_two_limits_at_one_condition_share_a_row_and_both_must_hold() -> None:
     readings = readings_of([ROW])
     table = derive_impedance(readings, [part_of()], ACCURACY)
-    both = [limit_on("cs_f", 95e-9, 105e-9), limit_on("cs_f", 99e-9, 101e-9)]
-    other = [both[0], limit_on("cs_f", 101e-9, 102e-9)]
+    first = limit_on("cs_f", 95e-9, 105e-9, source="one")
+    both = [first, limit_on("cs_f", None, 101e-9, frequency_hz=1e3, source="other")]
+    other = [first, limit_on("cs_f", 101e-9, 102e-9, source="other")]
     before = judge(readings, table, [part_of()], both)
+    (row,) = [row for row in before if row["quantity"] == "cs_f"]
+    assert (row["limit_min"], row["limit_max"]) == (95e-9, 101e-9)
+    assert (row["limit_source"], row["decision"]) == ("one and other", Decision.ACCEPT)
     (change,) = changes(before, judge(readings, table, [part_of()], other))
     assert (change.before, change.after) == (Decision.ACCEPT, Decision.REJECT)
+    assert "101 nF" in change.reason
+    assert "95 nF" in change.reason

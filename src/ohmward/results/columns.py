@@ -33,6 +33,19 @@ IMPEDANCE_COLUMNS: tuple[str, ...] = (
     "simulated",
 )
 
+RESULT_KEY: tuple[str, ...] = (
+    "run_id",
+    "part_id",
+    "stage",
+    "quantity",
+    "frequency_hz",
+    "level_v",
+    "bias_v",
+    "bias_a",
+    "voltage_v",
+    "since_voltage_s",
+)
+
 RESULT_COLUMNS: tuple[str, ...] = (
     "run_id",
     "part_id",

@@ -2,7 +2,7 @@
 
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
-from math import isnan
+from math import isnan, nan
 
 from ohmward.terms.decision import Decision
 from ohmward.units.values import format_quantity
@@ -38,8 +38,8 @@ def changes(
 ) -> list[Change]:
     """What differs between two lists of rows of results.csv, in the order of the first.
 
-    Rows belong together by part, stage, quantity and condition; where one condition has several
-    limits, in their order. What is only reported is no judgement.
+    Rows belong together by part, stage, quantity and condition: each of these has one row. What
+    is only reported is no judgement.
     """
     old, new = _by_key(before), _by_key(after)
     found = []
@@ -72,15 +72,12 @@ def _condition(row: Mapping[str, object]) -> str:
     return ", ".join(said)
 
 
-def _by_key(rows: Iterable[Mapping[str, object]]) -> dict[tuple[str, ...], Mapping[str, object]]:
-    found: dict[tuple[str, ...], Mapping[str, object]] = {}
-    for row in rows:
-        if row["decision"] == Decision.REPORTED:
-            continue
+def _by_key(
+    rows: Iterable[Mapping[str, object]],
+) -> dict[tuple[str, ...], Mapping[str, object]]:
+    return {
         # NaN is not equal to itself, its text is
-        key = tuple(str(row[name]) for name in _KEY)
-        number = 0
-        while (*key, str(number)) in found:
-            number += 1
-        found[(*key, str(number))] = row
-    return found
+        tuple(str(row.get(name, nan)) for name in _KEY): row
+        for row in rows
+        if row["decision"] != Decision.REPORTED
+    }

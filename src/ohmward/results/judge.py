@@ -1,8 +1,9 @@
 """Rows of results.csv: every limit held against what was measured, and what is worth reporting.
 
-One row for each limit of each part (at its worst point where it names no condition), then the
-main quantities of the part's kind where no limit judges them. Decisions are those of JCGM 106
-with guard band w = r·U; what cannot be trusted is invalid and never a rejection.
+One row for each limit of each part (at its worst point where it names no condition; limits that
+meet at one value share its row), then the main quantities of the part's kind where no limit
+judges them. Decisions are those of JCGM 106 with guard band w = r·U; what cannot be trusted is
+invalid and never a rejection.
 """
 
 from collections.abc import Collection, Iterable, Mapping, Sequence
@@ -17,6 +18,7 @@ from ohmward.results.closure import drift_of, split_closure
 from ohmward.results.columns import RESULT_COLUMNS
 from ohmward.results.derive import Columns
 from ohmward.results.judged import Judged, Rule, Stage, expand, matches, why_not
+from ohmward.results.merging import SEVERITY, Row, merged
 from ohmward.results.quantities import CHANGES, evaluate, reference_cell
 from ohmward.results.report import report_stage
 from ohmward.results.self_check import step_in
@@ -26,10 +28,6 @@ from ohmward.terms.decision import Decision
 from ohmward.terms.limit import Limit
 from ohmward.terms.part import Part
 from ohmward.terms.quantity import QUANTITIES
-
-Row = dict[str, object]
-
-_SEVERITY = (Decision.REJECT, Decision.INVALID, Decision.UNDECIDED, Decision.ACCEPT)
 
 
 def judge(
@@ -63,13 +61,15 @@ def judge(
     rows = []
     for part in parts:
         found, own = stages[part.part_id], by_part.get(part.part_id, [])
+        mine = []
         for limit in own:
             stage = found.get(limit.stage, Stage(cells=[]))
-            rows.append(_row(run_id, limit, judge_limit(part, limit, stage, rule)))
+            mine.append(_row(run_id, limit, judge_limit(part, limit, stage, rule)))
         for name, stage in found.items():
             here = [limit for limit in own if limit.stage == name]
             for limit, judged in report_stage(part, name, stage, here, rule):
-                rows.append(_row(run_id, limit, judged))
+                mine.append(_row(run_id, limit, judged))
+        rows += merged(mine)
     return rows
 
 
@@ -104,7 +104,7 @@ def judge_limit(part: Part, limit: Limit, stage: Stage, rule: Rule) -> Judged:
 
 def _badness(judged: Judged) -> tuple[int, float]:
     probability = 2.0 if isnan(judged.probability) else judged.probability
-    return _SEVERITY.index(judged.decision), probability
+    return SEVERITY.index(judged.decision), probability
 
 
 def _judge_cell(rule: Rule, limit: Limit, cell: Cell, stage: Stage) -> Judged:
