@@ -90,6 +90,15 @@ class Running:
         """Send it a signal."""
         os.kill(self.pid, number)
 
+    def until(self, true: Callable[[], bool], seconds: float = PATIENCE_S) -> None:
+        """Return as soon as it is true, which it becomes before the process ends."""
+        end_s = time.monotonic() + seconds
+        while not true():
+            state = Path(f"/proc/{self.pid}/stat").read_text().rpartition(")")[2].split()[0]
+            assert state != "Z", self.wait()
+            assert time.monotonic() < end_s, "it never came true"
+            time.sleep(0.005)
+
     def wait(self, seconds: float = PATIENCE_S) -> Ended:
         """Wait for its end, which comes."""
         code = self._program.answer({"wait": self.pid, "seconds": seconds})
@@ -161,14 +170,6 @@ class Program:
         pid = self.answer(request)
         assert isinstance(pid, int)
         return Running(self, pid, folder)
-
-
-def eventually(true: Callable[[], bool], seconds: float = PATIENCE_S) -> None:
-    """Return as soon as it is true, which it becomes."""
-    end_s = time.monotonic() + seconds
-    while not true():
-        assert time.monotonic() < end_s, "it never came true"
-        time.sleep(0.005)
 
 
 def pause(seconds: float) -> None:
