@@ -6,6 +6,7 @@ from ohmward.api.compensating import compensate
 from ohmward.api.converting import Converted, convert
 from ohmward.api.judging import judge_again
 from ohmward.api.preparing import Prepared, prepare
+from ohmward.api.reporting import write_report
 from ohmward.api.running import Outcome, dry_run, resume, run
 from ohmward.api.schemas import schema
 from ohmward.api.serving import serve
@@ -48,4 +49,5 @@ __all__ = [
     "show_judged_again",
     "show_run",
     "try_address",
+    "write_report",
 ]

@@ -41,7 +41,7 @@ def show_run(outcome: Outcome) -> None:
     screen.show_decisions(console, outcome.verdicts)
     for note in outcome.notes:
         console.print(note, markup=False, soft_wrap=True)
-    console.print(f"Tables: {outcome.folder}", markup=False, soft_wrap=True)
+    console.print(f"Tables and report: {outcome.folder}", markup=False, soft_wrap=True)
 
 
 def show_commands(driver: Driver) -> None:

@@ -14,6 +14,7 @@ from ohmward.cli import (
     calculating,
     checking,
     metrology,
+    recording,
     reference,
     running,
     serving,
@@ -40,6 +41,7 @@ running.add_to(app)
 metrology.add_to(app)
 checking.add_to(app)
 calculating.add_to(app)
+recording.add_to(app)
 reference.add_to(app)
 serving.add_to(app)
 

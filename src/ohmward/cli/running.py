@@ -1,9 +1,12 @@
 """``brief``, ``dryrun``, ``run``, ``resume`` and ``demo``: a sequence, a bench and a parts list."""
 
 from pathlib import Path
-from typing import Annotated
+from typing import TYPE_CHECKING, Annotated
 
 import typer
+
+if TYPE_CHECKING:
+    from ohmward.api import Outcome
 
 SequenceArgument = Annotated[
     str, typer.Argument(metavar="SEQUENCE", help="Sequence file, or the name of a shipped one.")
@@ -37,6 +40,14 @@ def add_to(app: typer.Typer) -> None:
         app.command()(command)
 
 
+def _show(outcome: "Outcome") -> None:
+    """Write the report of a finished run beside its tables, then print the decisions."""
+    from ohmward import api
+
+    api.write_report(outcome.folder)
+    api.show_run(outcome)
+
+
 def brief(
     sequence: SequenceArgument,
     bench: BenchOption,
@@ -66,7 +77,7 @@ def dryrun(
     from ohmward import api
 
     prepared = api.prepare(sequence, bench=bench, parts=parts, compensation=compensation)
-    api.show_run(api.dry_run(prepared, out=out, seed=seed, watch=True))
+    _show(api.dry_run(prepared, out=out, seed=seed, watch=True))
 
 
 def run(
@@ -84,7 +95,7 @@ def run(
     from ohmward import api
 
     prepared = api.prepare(sequence, bench=bench, parts=parts, compensation=compensation)
-    api.show_run(api.run(prepared, out=out, watch=True))
+    _show(api.run(prepared, out=out, watch=True))
 
 
 def resume(
@@ -93,7 +104,7 @@ def resume(
     """Go on with a run that was stopped or killed; readings already taken are kept."""
     from ohmward import api
 
-    api.show_run(api.resume(folder, watch=True))
+    _show(api.resume(folder, watch=True))
 
 
 def demo(
@@ -106,4 +117,4 @@ def demo(
     from ohmward import api
 
     prepared = api.prepare("depot-survey", bench="depot-bench", parts="depot-lot")
-    api.show_run(api.dry_run(prepared, out=out, seed=seed, watch=True))
+    _show(api.dry_run(prepared, out=out, seed=seed, watch=True))

@@ -219,7 +219,7 @@ async def _note_identities(order: Order, bench: OpenBench, recorder: Recorder) -
             role=instrument.role.value,
             address=instrument.address,
             identity=identity,
-            driver=driver.name,
+            driver=driver.name or driver.path.stem,
             sha256=driver.digest,
         )
 

@@ -1,0 +1,22 @@
+"""Makes the report of a run's folder, and keeps the manifest true to it."""
+
+from pathlib import Path
+
+from ohmward.journal.store import Store
+from ohmward.output import manifest, report
+from ohmward.run.folder import JOURNAL
+
+
+def write_report(folder: Path) -> Path:
+    """Write report.html into a run's folder from its tables, and renew the manifest.
+
+    Raises JournalUnusable or RunUnreadable, naming what is wrong; then nothing is written.
+    """
+    store = Store.read(folder / JOURNAL)
+    try:
+        facts, instruments = store.facts(), store.instruments()
+    finally:
+        store.abandon()
+    path = report.write(folder, facts, instruments)
+    manifest.write(folder, {key: facts[key] for key in ("run_id", "ohmward", "brief_sha256")})
+    return path
