@@ -9,6 +9,7 @@ from ohmward.sequence.fits import fits
 from ohmward.sequence.model import LimitTable, Sequence
 from ohmward.sequence.notes import Notes
 from ohmward.sequence.rating import resolve_bias
+from ohmward.sequence.references import can_refer
 from ohmward.sequence.rules import (
     RULES,
     Bounds,
@@ -119,8 +120,11 @@ def _resolve(table: LimitTable, stage: PlannedSweep, notes: Notes) -> Limit | Ca
     bounds = _bounds(table, rule, where, stage.part, key, notes)
     if bounds is None:
         return None
+    if not can_refer(table, stage.part, key, notes):
+        return None
     per_part = QUANTITIES[table.quantity].per == "part"
-    if not per_part and not any(where.holds_at(point) for point in stage.points):
+    held = any(where.holds_at(point) for point in stage.points) or _between(table, where, stage)
+    if not per_part and not held:
         return CannotReach(
             part_ids=(stage.part.part_id,),
             stage=stage.stage,
@@ -138,7 +142,19 @@ def _resolve(table: LimitTable, stage: PlannedSweep, notes: Notes) -> Limit | Ca
         level_v=where.level_v,
         bias_v=where.bias_v,
         bias_a=where.bias_a,
+        reference_temperature_c=table.at.reference_temperature,
+        reference_age_s=table.at.reference_age,
     )
+
+
+def _between(table: LimitTable, where: Where, stage: PlannedSweep) -> bool:
+    """Whether a change is asked for at a bias between two that the stage measures."""
+    if table.quantity != "capacitance_change" or where.bias_v is None:
+        return False
+    biases = [
+        point.bias_v for point in stage.points if replace(where, bias_v=None).holds_at(point)
+    ]
+    return bool(biases) and min(biases) < where.bias_v < max(biases)
 
 
 def _where(

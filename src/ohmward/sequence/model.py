@@ -18,6 +18,7 @@ from pydantic import (
 from ohmward.sequence.rules import RULES, same_frequency
 from ohmward.sequence.values import Bias, BiasSetting, Bound, NominalValue, read_bound
 from ohmward.setup.quantities import (
+    Celsius,
     Model,
     OneOrMany,
     PositiveHertz,
@@ -211,6 +212,16 @@ class Condition(Model):
     frequency: PositiveHertz | None = Field(None, examples=["1 kHz"])
     level: PositiveVolts | None = Field(None, examples=["1 V"])
     bias: BiasSetting | None = Field(None, examples=["0 V"])
+    reference_temperature: Celsius | None = Field(
+        None,
+        description="temperature that the value is carried to by its dielectric's coefficient",
+        examples=["20 degC"],
+    )
+    reference_age: PositiveSeconds | None = Field(
+        None,
+        description="time since the last heating that a class 2 value is carried to",
+        examples=["1000 h"],
+    )
 
 
 class LimitTable(Table):

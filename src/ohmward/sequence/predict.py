@@ -4,7 +4,7 @@ The part is taken at its nominal value; where the limit is on a loss (D, Q, ESR,
 loss that the limit allows, because that is where a decision is hard.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from math import inf, isfinite, sqrt
 
 import numpy as np
@@ -86,7 +86,11 @@ def _point_doubt(
     limit: Limit, stage: PlannedSweep, meter: MeterAccuracy, decision: DecisionTable
 ) -> CannotDecide | None:
     where = where_of(limit)
-    settings = sorted({(p.frequency_hz, p.level_v) for p in stage.points if where.holds_at(p)})
+    held = [point for point in stage.points if where.holds_at(point)]
+    if not held:  # a bias between two that are measured
+        anywhere = replace(where, bias_v=None, bias_a=None)
+        held = [point for point in stage.points if anywhere.holds_at(point)]
+    settings = sorted({(point.frequency_hz, point.level_v) for point in held})
     frequency, level = (np.array(column) for column in zip(*settings, strict=True))
     if meter.accuracy is None:
         return _no_accuracy(limit, frequency, level, "the driver states no accuracy")

@@ -39,7 +39,8 @@ class Allowance:
 def resolve_bias(bias: Bias, part: Part, key: str, notes: Notes) -> tuple[float, float] | None:
     """(volts, amperes) of a bias as written for this part; None with a problem noted.
 
-    A share is of the rated current for an inductor, of the DC rating for anything else.
+    A share is of the rated current for an inductor, of the DC rating for anything else. The
+    working voltage is the part's own, as the parts list says.
     """
     if bias.unit == "1" and part.kind is Kind.INDUCTOR:
         if part.rated_a is None:
@@ -51,6 +52,11 @@ def resolve_bias(bias: Bias, part: Part, key: str, notes: Notes) -> tuple[float,
             _rating_missing(part, notes, "rated_voltage")
             return None
         return bias.value * part.rated_v, 0.0
+    if bias.unit == "working":
+        if part.working_v is None:
+            _rating_missing(part, notes, "working_voltage")
+            return None
+        return part.working_v, 0.0
     if bias.value == 0:
         return 0.0, 0.0
     wrong = {("V", Kind.INDUCTOR): "a current", ("A", Kind.CAPACITOR): "a voltage"}
@@ -178,11 +184,12 @@ def _rating_missing(part: Part, notes: Notes, column: str) -> None:
         )
         return
     example = {"rated_current": "0.5 A", "rated_power": "0.25 W"}.get(column, "63 V")
+    what = "working voltage" if column == "working_voltage" else "rating"
     notes.cell(
         "rating-missing",
         part,
         column,
-        expected=f"a rating such as '{example}', because the sequence asks for a bias",
+        expected=f"a {what} such as '{example}', because the sequence asks for a bias",
         found="nothing",
     )
 

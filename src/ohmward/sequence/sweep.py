@@ -92,7 +92,7 @@ def _biases(
         one = BiasOf(written=bias, volts=volts, amperes=amperes)
         stress = Stress(bias_v=volts, bias_a=amperes, level_v=max(stage.level))
         check_stress(stress, part, key, notes, given.allowance)
-        if bias.unit == "1" and not _meter_can(one, given.reach):
+        if bias.unit in ("1", "working") and not _meter_can(one, given.reach):
             left_out.append(one)
         else:
             reached.append(one)

@@ -12,15 +12,22 @@ from ohmward.setup.quantities import wrong
 from ohmward.terms.kind import Kind
 from ohmward.units.values import UnitError, clean, format_quantity, parse_quantity
 
+WORKING = "working voltage"
+
 
 @dataclass(frozen=True, slots=True)
 class Bias:
-    """A DC bias as written; ``unit`` is ``V``, ``A``, or ``1`` for a share of the rating."""
+    """A DC bias as written; ``unit`` is ``V``, ``A``, or ``1`` for a share of the rating.
+
+    ``working`` stands for the part's own working voltage.
+    """
 
     value: float
     unit: str
 
     def __str__(self) -> str:
+        if self.unit == "working":
+            return WORKING
         if self.unit == "1":
             return f"{self.value * 100:g} % of rating"
         return format_quantity(self.value, self.unit)
@@ -52,7 +59,7 @@ class Bound:
 
 def read_bias(value: object, *, written: bool) -> Bias:
     """``"5 V"``, ``"10 mA"``, ``"50 % of rating"``; raises PydanticCustomError."""
-    expected = "a bias such as '5 V', '10 mA' or '50 % of rating'"
+    expected = f"a bias such as '5 V', '10 mA', '50 % of rating' or '{WORKING}'"
     if isinstance(value, Bias):
         return value
     if isinstance(value, int | float) and not isinstance(value, bool):
@@ -62,6 +69,8 @@ def read_bias(value: object, *, written: bool) -> Bias:
     if not isinstance(value, str):
         raise wrong(expected, value)
     text = clean(value)
+    if text == WORKING:
+        return Bias(1.0, "working")
     share = text.removesuffix("of rating").strip()
     if share.endswith("%"):
         return Bias(_read_in(share, "1", expected), "1")
@@ -162,8 +171,8 @@ BiasSetting = Annotated[
     Bias,
     ReadBy(
         read_bias,
-        "a DC bias: a voltage, a current, or a share of the part's own rating",
-        ("0 V", "10 mA", "50 % of rating"),
+        "a DC bias: a voltage, a current, a share of the part's own rating, or its working voltage",
+        ("0 V", "10 mA", "50 % of rating", WORKING),
     ),
 ]
 NominalValue = Annotated[

@@ -22,6 +22,7 @@ NUMERIC = (
     "nominal",
     "tolerance",
     "rated_voltage",
+    "working_voltage",
     "rated_current",
     "rated_power",
     "reverse_voltage",
@@ -36,6 +37,7 @@ COLUMNS = (
     "polarity",
     "lot",
     "last_energised",
+    "last_heated",
     "safety_class",
 )
 SAME_VALUE_REL = 1e-3  # a marking has three digits: nearer than this and it says the same
@@ -115,7 +117,8 @@ class _RowReader:
         reverse_v = self._reverse_v(rating)
         rated_a = self._positive("rated_current", "A")
         rated_w = self._positive("rated_power", "W")
-        energised = self._last_energised()
+        working_v = self._working_v(rating)
+        energised, heated = self._date("last_energised"), self._date("last_heated")
         safety_class = self._safety_class(kind)
         if nominal is None or len(self._problems) > before:
             return None
@@ -136,6 +139,8 @@ class _RowReader:
             reverse_v=reverse_v,
             lot=self._cells["lot"],
             last_energised=energised,
+            last_heated=heated,
+            working_v=working_v,
             safety_class=safety_class,
             row=self.number,
         )
@@ -297,8 +302,19 @@ class _RowReader:
             )
         return abs(value)
 
-    def _last_energised(self) -> datetime | None:
-        text = self._cells["last_energised"]
+    def _working_v(self, rating: Rating) -> float | None:
+        value = self._positive("working_voltage", "V")
+        if value is not None and rating.dc_v is not None and value > rating.dc_v:
+            self.note(
+                "working_voltage",
+                "out-of-range",
+                f"{format_quantity(rating.dc_v, 'V')} at most, the rated voltage",
+                shown(self._cells["working_voltage"]),
+            )
+        return value
+
+    def _date(self, column: str) -> datetime | None:
+        text = self._cells[column]
         if not text:
             return None
         try:
@@ -306,7 +322,7 @@ class _RowReader:
                 return datetime.combine(date.fromisoformat(text), time(), UTC)
             moment = datetime.fromisoformat(text)
         except ValueError:
-            self.note("last_energised", "wrong-date", "a date written as 2026-01-31", shown(text))
+            self.note(column, "wrong-date", "a date written as 2026-01-31", shown(text))
             return None
         return moment.replace(tzinfo=UTC) if moment.tzinfo is None else moment.astimezone(UTC)
 

@@ -21,3 +21,5 @@ class Limit:
     level_v: float | None = None
     bias_v: float | None = None
     bias_a: float | None = None
+    reference_temperature_c: float | None = None
+    reference_age_s: float | None = None

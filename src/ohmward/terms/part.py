@@ -13,7 +13,9 @@ class Part:
     ``tolerance_low`` is negative or zero (−0.2 for −20 %), ``tolerance_high`` positive or
     zero; both ``None`` when the list does not say. ``rated_v`` is a DC rating; an AC rating
     is kept apart in ``rated_ac_v`` (rms) and never used as a DC one. ``reverse_v`` is how far
-    below 0 V a polar part may go (0 unless stated; a magnitude). Missing is None, never zero.
+    below 0 V a polar part may go (0 unless stated; a magnitude). ``working_v`` is the DC voltage
+    that its circuit puts on it; ``last_heated`` the last heating that undid a class 2 ceramic's
+    ageing. Missing is None, never zero.
     """
 
     part_id: str
@@ -32,6 +34,8 @@ class Part:
     reverse_v: float = 0.0
     lot: str = ""
     last_energised: datetime | None = None
+    last_heated: datetime | None = None
+    working_v: float | None = None
     safety_class: str = ""
     row: int = 0
 
