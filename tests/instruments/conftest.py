@@ -94,7 +94,7 @@ class MemoryLink:
         if self.dirty:
             raise AssertionError("sent over a dirty link")
 
-    def distrust(self, reason: str) -> None:
+    def distrust(self, reason: str, *, reopen: bool = False) -> None:
         self.dirty = True
 
     async def recover(self) -> None:

@@ -189,7 +189,7 @@ class Unasked:
     async def query(self, message: bytes, timeout_s: float | None = None) -> bytes:
         raise AssertionError("it takes no commands")
 
-    def distrust(self, reason: str) -> None:
+    def distrust(self, reason: str, *, reopen: bool = False) -> None:
         self.dirty = True
 
     async def recover(self) -> None:

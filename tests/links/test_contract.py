@@ -445,7 +445,20 @@ class TestIdentity:
                 await link.recover()
 
         world.run(talk)
-        assert world.script.heard == [b"*IDN?", b"Q1?", b"*IDN?"]
+        # a second look, in case the first was garbled on its way, and then no more
+        assert world.script.heard == [b"*IDN?", b"Q1?", b"*IDN?", b"*IDN?"]
+
+    def test_one_identity_that_is_garbled_on_its_way_does_not_end_the_link(self, world):
+        world.script.once(b"Q1?", [(0.0, HANG_UP)])
+
+        async def talk(link):
+            with pytest.raises(LinkLost):
+                await link.query(b"Q1?")
+            world.script.once(b"*IDN?", [(0.0, b"GENERIC,SCR#PTED,17,1.0\n")])
+            assert await link.query(b"Q2?") == b"2"
+
+        world.run(talk)
+        assert world.script.heard == [b"*IDN?", b"Q1?", b"*IDN?", b"*IDN?", b"Q2?"]
 
     def test_a_link_that_never_was_open_is_told(self, world):
         async def main(_clock):

@@ -33,8 +33,8 @@ class Wire(Protocol):
     async def receive(self, timeout_s: float | None = None) -> bytes:
         """Return the next message without asking for it."""
 
-    def distrust(self, reason: str) -> None:
-        """Say that the last reply cannot be right."""
+    def distrust(self, reason: str, *, reopen: bool = False) -> None:
+        """Say that the last reply cannot be right, or that the session itself cannot."""
 
     async def recover(self) -> None:
         """Recover a dirty link now."""

@@ -115,9 +115,9 @@ class TappedWire:
         """Return the next message without asking for it."""
         return await self._kept(b"", lambda: self._wire.receive(timeout_s))
 
-    def distrust(self, reason: str) -> None:
-        """Say that the last reply cannot be right."""
-        self._wire.distrust(reason)
+    def distrust(self, reason: str, *, reopen: bool = False) -> None:
+        """Say that the last reply, or the session, cannot be right."""
+        self._wire.distrust(reason, reopen=reopen)
 
     async def recover(self) -> None:
         """Recover a dirty link now."""

@@ -5,7 +5,8 @@ the link dirty. Before anything else is sent, a dirty link is drained and must a
 identity query exactly as when it was opened; else it is closed and opened again, with growing
 pauses, within a budget. A socket that still owes a reply is opened again at once: a new
 connection never delivers what the old one owed, while a drain only hopes that it has.
-An identity that is another one ends the link: nothing more is sent.
+An identity that is another one ends the link: nothing more is sent. On a link that was good
+before, it must be answered twice alike, because a bad line garbles identities as well.
 
 What is detected: a reply that comes late, in halves, twice, unasked, or from another
 instrument after a reconnection, because before each command nothing may wait unread, after
@@ -173,9 +174,13 @@ class Link:
         finally:
             self._release()
 
-    def distrust(self, reason: str) -> None:
-        """Say that the last reply cannot be right: nothing is sent before the link recovers."""
+    def distrust(self, reason: str, *, reopen: bool = False) -> None:
+        """Say that the last reply cannot be right: nothing is sent before the link recovers.
+
+        With ``reopen`` the session itself is not trusted: it is closed and opened again.
+        """
         self._dirt = reason
+        self._reopen = self._reopen or reopen
 
     async def recover(self) -> None:
         """Recover now, also a link that was given up; on a clean link do nothing.
@@ -272,6 +277,7 @@ class Link:
                 self._reopen = self._owed = False
             elif isinstance(error, LinkLost):
                 self._reopen = True
+                self._dirt = self._dirt or str(error)  # also where it talks unasked
 
     async def _recover(self) -> None:
         if self._ended is not None:
@@ -315,13 +321,17 @@ class Link:
     async def _reopened(self) -> None:
         give_up_s = trio.current_time() + self.settings.reopen_budget_s
         pause_s = FIRST_PAUSE_S
+        stranger = ""
         while True:
             await self._drop()
             try:
                 await self._connect()
-            except WrongIdentity:
-                raise
-            except LinkError:
+            except LinkError as error:
+                # a bad line garbles an identity too: another instrument says the same again
+                if isinstance(error, WrongIdentity):
+                    if str(error) == stranger:
+                        raise
+                    stranger = str(error)
                 if trio.current_time() + pause_s > give_up_s:
                     raise
             else:
