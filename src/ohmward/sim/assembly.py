@@ -18,9 +18,14 @@ _REMEMBERED = 1024
 
 @dataclass(frozen=True, slots=True)
 class Turn:
-    """When a circuit cannot go on as it does, why, and at which position or to which way."""
+    """When a circuit cannot go on as it does, why, and at which position or to which way.
+
+    ``after_s`` counts from the course's begin: supply and rail settle within less than what the
+    last digit of ``at_s`` is worth after an hour.
+    """
 
     at_s: float
+    after_s: float
     what: str
     whose: str = ""
 
@@ -78,16 +83,20 @@ class Assembly:
 
     # ---- putting together
 
-    def freeze(self, island: Island) -> None:
-        """Remember where a circuit stands, and let its parts have lived until now."""
-        since_s = island.course.began_s
-        if self.now_s == since_s:
+    def freeze(self, island: Island, elapsed_s: float | None = None) -> None:
+        """Remember where a circuit stands, and let its parts have lived until now.
+
+        ``elapsed_s`` since its begin, where that is known better than by the clock.
+        """
+        if elapsed_s is None:
+            elapsed_s = self.now_s - island.course.began_s
+        if elapsed_s == 0.0:
             return
-        before, state = island.course.at(since_s), island.course.at(self.now_s)
+        before, state = island.course.after(0.0), island.course.after(elapsed_s)
         for place, name in enumerate(island.modes.names):
             self.memory[name] = float(state[place])
         for position, part, place in self._capacitors(island.groups, island.modes):
-            part.live(0.5 * float(before[place] + state[place]), self.now_s - since_s)
+            part.live(0.5 * float(before[place] + state[place]), elapsed_s)
             if part.vent_if_hot():
                 self.on_vent(position)
 
@@ -195,8 +204,9 @@ class Assembly:
                 horizon_s, what = stands_s, "drift"
         reached = course.first(self._edges(groups, modes, state), horizon_s)
         if reached is None:
-            return Turn(self.now_s + horizon_s, what)
-        return Turn(self.now_s + reached[0], reached[1].what, reached[1].whose)
+            return Turn(self.now_s + horizon_s, horizon_s, what)
+        after_s, edge = reached
+        return Turn(self.now_s + after_s, after_s, edge.what, edge.whose)
 
     def _edges(self, groups: tuple[str, ...], modes: Modes, state: Array) -> list[Edge]:
         found: list[Edge] = []

@@ -242,7 +242,7 @@ class Circuit:
     def _turn(self, island: Island) -> None:
         """What this circuit waited for."""
         bench, what, whose = self._all, island.turn.what, island.turn.whose
-        bench.freeze(island)
+        bench.freeze(island, island.turn.after_s)
         if what == "way":
             self._output.way = whose
         elif what in ("up", "down"):

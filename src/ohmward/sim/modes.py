@@ -236,7 +236,11 @@ class Course:
 
     def at(self, now_s: float) -> Array:
         """The state x at an instant."""
-        found: Array = np.real(self.modes.out @ self._modal(now_s - self.began_s))
+        return self.after(now_s - self.began_s)
+
+    def after(self, elapsed_s: float) -> Array:
+        """The state x so long after ``began_s``, to where the clock itself is too coarse."""
+        found: Array = np.real(self.modes.out @ self._modal(elapsed_s))
         return found
 
     def _modal(self, t: float) -> Modal:
