@@ -4,7 +4,9 @@ from ohmward.api.budgeting import budget
 from ohmward.api.checking import check_bench, exercise_driver, read_driver, try_address
 from ohmward.api.compensating import compensate
 from ohmward.api.converting import Converted, convert
+from ohmward.api.exporting import export
 from ohmward.api.judging import judge_again
+from ohmward.api.opening import Run, open_run
 from ohmward.api.preparing import Prepared, prepare
 from ohmward.api.reporting import write_report
 from ohmward.api.running import Outcome, dry_run, resume, run
@@ -21,11 +23,14 @@ from ohmward.api.showing import (
     show_judged_again,
     show_run,
 )
+from ohmward.api.verifying import Verified, verify
 
 __all__ = [
     "Converted",
     "Outcome",
     "Prepared",
+    "Run",
+    "Verified",
     "as_json",
     "budget",
     "check_bench",
@@ -33,7 +38,9 @@ __all__ = [
     "convert",
     "dry_run",
     "exercise_driver",
+    "export",
     "judge_again",
+    "open_run",
     "prepare",
     "read_driver",
     "resume",
@@ -49,5 +56,6 @@ __all__ = [
     "show_judged_again",
     "show_run",
     "try_address",
+    "verify",
     "write_report",
 ]

@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from ohmward.api.tabulating import Arrays, accuracies_of, journal_columns
 from ohmward.errors import BadInput, Problem, Problems
-from ohmward.journal.store import Store
+from ohmward.journal.store import Row, Store
 from ohmward.metrology.compensation import Compensation
 from ohmward.results.compensations import compensations_of
 from ohmward.results.derive import derive_impedance
@@ -51,6 +51,7 @@ class PastRun:
     cable_m: Mapping[str, float]
     compensations: Mapping[str, Compensation]
     readings: Arrays
+    events: list[Row]
     impedance: Mapping[str, NDArray[Any]]
 
     @property
@@ -71,7 +72,7 @@ def past_run(folder: Path) -> PastRun:
     }
     accuracies, cable_m = accuracies_of(drivers), _cables(inputs)
     compensations = _compensations(inputs)
-    readings = _readings(folder)
+    readings, events = _readings(folder)
     by_id = {part.part_id: part for part in parts}
     return PastRun(
         folder=folder,
@@ -84,6 +85,7 @@ def past_run(folder: Path) -> PastRun:
         cable_m=cable_m,
         compensations=compensations,
         readings=readings,
+        events=events,
         impedance=derive_impedance(
             readings,
             parts,
@@ -96,16 +98,17 @@ def past_run(folder: Path) -> PastRun:
     )
 
 
-def _readings(folder: Path) -> Arrays:
-    """Every column of the journal's readings in one piece."""
+def _readings(folder: Path) -> tuple[Arrays, list[Row]]:
+    """Every column of the journal's readings in one piece, and the journal's events."""
     store = Store.read(folder / JOURNAL)
     try:
-        batches = list(journal_columns(store))
+        batches, events = list(journal_columns(store)), store.events()
     finally:
         store.abandon()
     if not batches:
         raise _unusable(folder, "a run with readings of an impedance meter", "none")
-    return {name: np.concatenate([one[name] for one in batches]) for name in batches[0]}
+    names = batches[0]
+    return {name: np.concatenate([one[name] for one in batches]) for name in names}, events
 
 
 def _cables(inputs: Path) -> dict[str, float]:

@@ -9,7 +9,7 @@ from ohmward.errors import BadInput, OhmwardError, Problem, Problems
 from ohmward.metrology.compensation import Compensation
 from ohmward.protocol.check import check_driver
 from ohmward.results.compensations import compensations_of
-from ohmward.run.folder import Sources
+from ohmward.run.folder import Sources, note_unusable
 from ohmward.sequence.brief import Brief
 from ohmward.sequence.compensated import Compensated
 from ohmward.sequence.load import load_sequence
@@ -71,14 +71,18 @@ def prepare(
     bench: str | Path,
     parts: str | Path,
     compensation: str | Path | None = None,
+    out: Path | None = None,
 ) -> Prepared:
     """Load a sequence, a bench and a parts list (paths, or names of shipped files).
 
     ``compensation`` is the file that `compensate` wrote of the bench's fixture, if there is one.
+    ``out`` is where the run's folder is to be made, if it is known already.
 
     Raises BadInput with every problem of all of them; nothing is opened or written.
     """
     problems = Problems()
+    if out is not None:
+        note_unusable(out, problems)
     sequence_path = find_file(str(sequence), "sequences")
     parts_path = find_file(str(parts), "simulators", ".csv")
     loaded_sequence = load_sequence(sequence_path, problems)

@@ -80,6 +80,9 @@ def truth_of(bench: SimulatedBench) -> Callable[[ResultRow], tuple[float, str]]:
 
     def truth(row: ResultRow) -> tuple[float, str]:
         part_id = str(row["part_id"])
+        if _number(row.get("reference_age_s"), 0.0):
+            return nan, bench.fault(part_id)  # simulated parts do not age
+        carried_to_c = _number(row.get("reference_temperature_c"), nan)
         value = bench.truth(
             part_id,
             str(row["quantity"]),
@@ -87,6 +90,7 @@ def truth_of(bench: SimulatedBench) -> Callable[[ResultRow], tuple[float, str]]:
             level_v=_number(row["level_v"], 0.0),
             bias_v=_number(row["bias_v"], 0.0),
             bias_a=_number(row["bias_a"], 0.0),
+            temperature_c=None if isnan(carried_to_c) else carried_to_c,
         )
         return value, bench.fault(part_id)
 

@@ -40,6 +40,7 @@ _KEPT_OF_JOURNAL = (
     "bias_set_v",
     "bias_set_a",
     "temperature_c",
+    "time_utc",
 )
 _KEPT_OF_DERIVED = (
     "resistance_ohm",
@@ -82,7 +83,7 @@ def tabulate(
                 table.arrays(derived)
                 kept[0].add(readings)
                 kept[1].add(derived)
-        _write_events(folder, run_id, store.events())
+        write_events(folder, run_id, store.events())
     finally:
         store.abandon()
     readings, derived = (one.whole() for one in kept)
@@ -159,7 +160,8 @@ class _Kept:
         return whole
 
 
-def _write_events(folder: Path, run_id: str, events: list[Row]) -> None:
+def write_events(folder: Path, run_id: str, events: list[Row]) -> None:
+    """Write events.csv of the journal's events into a folder."""
     names = ("event", *schema.EVENT_COLUMNS)
     with TableWriter(folder, columns.EVENTS) as table:
         table.rows(

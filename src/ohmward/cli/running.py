@@ -76,7 +76,7 @@ def dryrun(
     """Carry the sequence out on a simulated bench, in virtual time; opens no real address."""
     from ohmward import api
 
-    prepared = api.prepare(sequence, bench=bench, parts=parts, compensation=compensation)
+    prepared = api.prepare(sequence, bench=bench, parts=parts, compensation=compensation, out=out)
     _show(api.dry_run(prepared, out=out, seed=seed, watch=True))
 
 
@@ -94,7 +94,7 @@ def run(
     """
     from ohmward import api
 
-    prepared = api.prepare(sequence, bench=bench, parts=parts, compensation=compensation)
+    prepared = api.prepare(sequence, bench=bench, parts=parts, compensation=compensation, out=out)
     _show(api.run(prepared, out=out, watch=True))
 
 
@@ -115,6 +115,13 @@ def demo(
 ) -> None:
     """Test the demo lot on the simulated bench: a funicular depot's stores re-test their parts."""
     from ohmward import api
+    from ohmward.setup.resources import shipped
 
-    prepared = api.prepare("depot-survey", bench="depot-bench", parts="depot-lot")
+    # by path: a file of the same name in this folder is not the demo's
+    prepared = api.prepare(
+        shipped("sequences") / "depot-survey.toml",
+        bench=shipped("simulators") / "depot-bench.toml",
+        parts=shipped("simulators") / "depot-lot.csv",
+        out=out,
+    )
     _show(api.dry_run(prepared, out=out, seed=seed, watch=True))
