@@ -147,6 +147,10 @@ CONDITIONS = (
     _number("bias_a", "A", "DC bias current of the value"),
     _number("voltage_v", "V", "DC voltage under which a current was read"),
     _number("since_voltage_s", "s", "time since that voltage was reached"),
+    _number(
+        "reference_temperature_c", "degC", "temperature carried to; empty for as it was measured"
+    ),
+    _number("reference_age_s", "s", "time since the last heating carried to; empty likewise"),
 )
 QUANTITY = _text("quantity", "what is judged or reported", required=True)
 UNIT = _text("unit", "the value's unit; 1 for a plain number", required=True)

@@ -24,6 +24,7 @@ class Cell:
     """The mean of the good readings of one point, in ohm, with both covariances.
 
     ``type_b`` and ``type_a`` are (u_R, u_X, r_RX); ``type_a`` is zero for a single reading.
+    ``time_s`` is the mean instant in seconds since 1970, UTC.
     ``good`` of ``taken`` readings entered; ``left_out`` counts the others by status.
     """
 
@@ -43,6 +44,7 @@ class Cell:
     instrument: str = ""
     level_v: float = float("nan")
     temperature_c: float = float("nan")
+    time_s: float = float("nan")
     stated: Stated | None = None
 
     @property
@@ -208,6 +210,7 @@ class _Means:
         )
         self.level = self._mean(_level(readings))
         self.temperature = self._mean(np.asarray(readings["temperature_c"], dtype=np.float64))
+        self.time = self._mean(_seconds(readings["time_utc"]))
 
     def _mean(self, values: FloatArray) -> FloatArray:
         weights = np.where(self.ok, values, 0.0)
@@ -243,7 +246,14 @@ class _Means:
             instrument=str(self.readings["instrument"][first]),
             level_v=float(self.level[group]),
             temperature_c=float(self.temperature[group]),
+            time_s=float(self.time[group]),
         )
+
+
+def _seconds(instants: NDArray[np.generic]) -> FloatArray:
+    """Instants as seconds since 1970."""
+    whole: FloatArray = instants.astype("datetime64[us]").astype(np.int64) / 1e6
+    return whole
 
 
 def _level(readings: Columns) -> FloatArray:

@@ -44,6 +44,8 @@ RESULT_KEY: tuple[str, ...] = (
     "bias_a",
     "voltage_v",
     "since_voltage_s",
+    "reference_temperature_c",
+    "reference_age_s",
 )
 
 RESULT_COLUMNS: tuple[str, ...] = (
@@ -57,6 +59,8 @@ RESULT_COLUMNS: tuple[str, ...] = (
     "bias_a",
     "voltage_v",
     "since_voltage_s",
+    "reference_temperature_c",
+    "reference_age_s",
     "value",
     "u_expanded",
     "coverage_k",

@@ -8,7 +8,7 @@ from ohmward.terms.decision import Decision
 from ohmward.units.values import format_quantity
 
 # a bias of zero is not worth a word
-_ALWAYS = frozenset({"frequency_hz", "level_v"})
+_ALWAYS = frozenset({"frequency_hz", "level_v", "reference_temperature_c"})
 _CONDITIONS = {
     "frequency_hz": "Hz",
     "level_v": "V",
@@ -16,6 +16,8 @@ _CONDITIONS = {
     "bias_a": "A",
     "voltage_v": "V",
     "since_voltage_s": "s",
+    "reference_temperature_c": "degC",
+    "reference_age_s": "s",
 }
 _KEY = ("part_id", "stage", "quantity", *_CONDITIONS)
 

@@ -16,13 +16,14 @@ from ohmward.results import reasons
 from ohmward.results.cells import Cell, cells_of
 from ohmward.results.closure import drift_of, split_closure
 from ohmward.results.columns import RESULT_COLUMNS
+from ohmward.results.corrections import asks, correct, uncorrected
 from ohmward.results.derive import Columns
 from ohmward.results.judged import Judged, Rule, Stage, expand, matches, why_not
 from ohmward.results.merging import SEVERITY, Row, merged
 from ohmward.results.quantities import CHANGES, evaluate, reference_cell
-from ohmward.results.report import report_stage
+from ohmward.results.report import report_stage, report_value
 from ohmward.results.self_check import step_in
-from ohmward.results.whole_stage import judge_whole
+from ohmward.results.whole_stage import judge_change_between, judge_whole
 from ohmward.terms.accuracy import ImpedanceAccuracy
 from ohmward.terms.decision import Decision
 from ohmward.terms.limit import Limit
@@ -64,13 +65,23 @@ def judge(
         mine = []
         for limit in own:
             stage = found.get(limit.stage, Stage(cells=[]))
-            mine.append(_row(run_id, limit, judge_limit(part, limit, stage, rule)))
+            judged = judge_limit(part, limit, stage, rule)
+            mine.append(_row(run_id, limit, judged))
+            if asks(limit):
+                mine += _as_measured(run_id, limit, judged, stage, rule)
         for name, stage in found.items():
             here = [limit for limit in own if limit.stage == name]
             for limit, judged in report_stage(part, name, stage, here, rule):
                 mine.append(_row(run_id, limit, judged))
         rows += merged(mine)
     return rows
+
+
+def _as_measured(run_id: str, limit: Limit, judged: Judged, stage: Stage, rule: Rule) -> list[Row]:
+    """The value beside the one that was carried to a reference."""
+    plain = uncorrected(limit)
+    cells = [cell for cell in stage.cells if cell.point == judged.point]
+    return [_row(run_id, plain, report_value(limit.quantity, cell, stage, rule)) for cell in cells]
 
 
 def _stage(cells: list[Cell], *, closes: bool) -> Stage:
@@ -93,13 +104,15 @@ def judge_limit(part: Part, limit: Limit, stage: Stage, rule: Rule) -> Judged:
     if QUANTITIES[limit.quantity].per == "part":
         return judge_whole(part, stage.cells, limit, rule, stage.drift)
     cells = [cell for cell in stage.cells if matches(limit, cell.point)]
+    if limit.quantity in CHANGES and not cells:
+        return judge_change_between(stage.cells, limit, rule, stage.drift)
     if limit.quantity in CHANGES:
         # the reference is 0 by definition: it proves nothing unless it is asked for
         asked = [cell for cell in cells if reference_cell(cell, stage.cells) is not cell]
         cells = asked or cells
     if not cells:
         return Judged(decision=Decision.INVALID, reason=reasons.no_reading(limit))
-    return min((_judge_cell(rule, limit, cell, stage) for cell in cells), key=_badness)
+    return min((_judge_cell(part, rule, limit, cell, stage) for cell in cells), key=_badness)
 
 
 def _badness(judged: Judged) -> tuple[int, float]:
@@ -107,23 +120,28 @@ def _badness(judged: Judged) -> tuple[int, float]:
     return SEVERITY.index(judged.decision), probability
 
 
-def _judge_cell(rule: Rule, limit: Limit, cell: Cell, stage: Stage) -> Judged:
+def _judge_cell(part: Part, rule: Rule, limit: Limit, cell: Cell, stage: Stage) -> Judged:
     quantity = limit.quantity
     found = evaluate(quantity, cell, stage.cells) if cell.good else None
     doubt = why_not(quantity, cell, stage)
     if found is None or doubt:
         return _invalid(doubt, cell, found.value if found else nan)
-    spread = expand(rule, found, cell)
+    carried = correct(limit, part, cell, expand(rule, found, cell), rule)
+    if carried.doubt:
+        where = reasons.condition(cell.point)
+        return _invalid(f"{quantity} at {where} {carried.doubt}", cell)
+    spread = carried.spread
     decision, probability = spread.decide(rule, limit.minimum, limit.maximum)
     said = reasons.measured(
-        quantity, found.value, spread.u_expanded, spread.k, reasons.condition(cell.point)
+        quantity, spread.value, spread.u_expanded, spread.k, reasons.condition(cell.point)
     )
-    note = f" ({found.note})" if found.note else ""
+    notes = "; ".join(note for note in (found.note, carried.note) if note)
+    note = f" ({notes})" if notes else ""
     reason = reasons.judged(said + note, limit, decision, probability) + reasons.left_out(cell)
     return Judged(
         decision=decision,
         reason=reason,
-        value=found.value,
+        value=spread.value,
         u_expanded=spread.u_expanded,
         k=spread.k,
         probability=probability,
@@ -148,6 +166,8 @@ def _row(run_id: str, limit: Limit, judged: Judged) -> Row:
         "bias_a": point.bias_a if point else _number(limit.bias_a),
         "voltage_v": nan,
         "since_voltage_s": nan,
+        "reference_temperature_c": _number(limit.reference_temperature_c),
+        "reference_age_s": _number(limit.reference_age_s),
         "value": judged.value,
         "u_expanded": judged.u_expanded,
         "coverage_k": judged.k,

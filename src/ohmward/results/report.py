@@ -42,13 +42,13 @@ def report_stage(
         covered = {*here, *(_SAME_THING.get(quantity, quantity) for quantity in here)}
         for quantity in MAIN_QUANTITIES[part.kind]:
             if quantity not in covered:
-                rows.append((quantity, _report(quantity, cell, stage, rule)))
+                rows.append((quantity, report_value(quantity, cell, stage, rule)))
     named = {limit.quantity for limit in limits}
     change = _CHANGE.get(part.kind)
     biased = [cell for cell in stage.cells if reference_cell(cell, stage.cells) is not cell]
     if change and biased and change not in named:
         most = max(biased, key=lambda cell: (abs(cell.point.bias_v), abs(cell.point.bias_a)))
-        rows.append((change, _report(change, most, stage, rule)))
+        rows.append((change, report_value(change, most, stage, rule)))
     if "self_resonance_hz" not in named and not stage.drift:
         resonance = report_resonance(stage.cells, rule)
         if resonance is not None:
@@ -71,7 +71,7 @@ def _no_limit(part: Part, stage: str, quantity: str) -> Limit:
     )
 
 
-def _report(quantity: str, cell: Cell, stage: Stage, rule: Rule) -> Judged:
+def report_value(quantity: str, cell: Cell, stage: Stage, rule: Rule) -> Judged:
     """A value without a limit; where it cannot be trusted there is no value, only the reason."""
     value = evaluate(quantity, cell, stage.cells) if cell.good else None
     doubt = why_not(quantity, cell, stage)

@@ -1,8 +1,9 @@
-"""Quantities that have one value for a whole stage: self-resonance and saturation current."""
+"""What needs a whole stage: self-resonance, saturation current, a change between two biases."""
 
+from dataclasses import replace
 from math import isnan
 
-from ohmward.metrology.bias import saturation_current
+from ohmward.metrology.bias import BeyondSweep, change_at, saturation_current
 from ohmward.metrology.decide import decide
 from ohmward.metrology.errors import TooFewPoints
 from ohmward.metrology.resonance import Resonance, self_resonance
@@ -59,6 +60,35 @@ def judge_saturation(cells: list[Cell], limit: Limit, rule: Rule, drift: str) ->
     return _decided(found.current_a, found.u_a, limit, rule, point)
 
 
+def judge_change_between(cells: list[Cell], limit: Limit, rule: Rule, drift: str) -> Judged:
+    """A limit on the change at a bias that lies between two that were measured.
+
+    Linear between them, with what the curve may do there as an uncertainty (`change_at`). Looked
+    at is the first frequency and level that the limit covers.
+    """
+    anywhere = replace(limit, bias_v=None, bias_a=None)
+    good = [cell for cell in cells if cell.good and matches(anywhere, cell.point)]
+    good = [cell for cell in good if not isnan(cell.type_b[1]) and same_setting(cell, good[0])]
+    changes = [evaluate(limit.quantity, cell, good) for cell in good]
+    by_current = bool(limit.bias_a)
+    at = (limit.bias_a if by_current else limit.bias_v) or 0.0
+    try:
+        value, u = change_at(
+            [cell.point.bias_a if by_current else cell.point.bias_v for cell in good],
+            [change.value for change in changes],
+            [change.u for change in changes],
+            at,
+        )
+    except (TooFewPoints, BeyondSweep) as error:
+        why = f"{reasons.no_reading(limit)}; nor between others: {error}"
+        return Judged(decision=Decision.INVALID, reason=why)
+    point = replace(good[0].point, bias_v=limit.bias_v or 0.0, bias_a=limit.bias_a or 0.0)
+    if drift:
+        return Judged(decision=Decision.INVALID, reason=f"{limit.quantity}: {drift}", point=point)
+    note = f" at {reasons.condition(point)} (between biases that were measured)"
+    return _decided(value, u, limit, rule, point, note)
+
+
 def judge_resonance(part: Part, cells: list[Cell], limit: Limit, rule: Rule, drift: str) -> Judged:
     """A limit on the self-resonance, also where the sweep ends before it or begins beyond it.
 
@@ -81,10 +111,12 @@ def judge_resonance(part: Part, cells: list[Cell], limit: Limit, rule: Rule, dri
     return _decided(found.frequency_hz, found.u_hz, limit, rule, point)
 
 
-def _decided(value: float, u: float, limit: Limit, rule: Rule, point: Point) -> Judged:
+def _decided(
+    value: float, u: float, limit: Limit, rule: Rule, point: Point, note: str = ""
+) -> Judged:
     k = rule.coverage_k
     decision, probability = decide(value, u, k, limit.minimum, limit.maximum, rule.guard)
-    said = reasons.measured(limit.quantity, value, k * u, k)
+    said = reasons.measured(limit.quantity, value, k * u, k) + note
     return Judged(
         decision=decision,
         reason=reasons.judged(said, limit, decision, probability),
