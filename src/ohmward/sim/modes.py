@@ -233,15 +233,21 @@ class Course:
         self._y = modes.into @ state
         self._fed = (modes.drive @ fed) / modes.rates
         self._rising = (modes.drive @ rising) if rising.any() else None
+        self._looked, self._looked_s = state, math.nan
 
     def at(self, now_s: float) -> Array:
         """The state x at an instant."""
         return self.after(now_s - self.began_s)
 
     def after(self, elapsed_s: float) -> Array:
-        """The state x so long after ``began_s``, to where the clock itself is too coarse."""
-        found: Array = np.real(self.modes.out @ self._modal(elapsed_s))
-        return found
+        """The state x so long after ``began_s``, to where the clock itself is too coarse.
+
+        Several instruments look at one instant: the last one is remembered, and not to be written.
+        """
+        if elapsed_s != self._looked_s:
+            self._looked = np.real(self.modes.out @ self._modal(elapsed_s))
+            self._looked_s = elapsed_s
+        return self._looked
 
     def _modal(self, t: float) -> Modal:
         """y(t) = e^(−λt)·y(0) + φ₁·fed + φ₂·rising; φ₁ = ∫e^(−λs)ds, φ₂ = ∫φ₁ds over 0…t."""
