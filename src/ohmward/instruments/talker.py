@@ -199,15 +199,18 @@ class Talker:
         deadline_s = trio.current_time() + (timeout_s or self.driver.link.timeout)
         await self._skip_what_waits()
         try:
-            while (message := self._unasked.next()) is NEED_DATA:
-                left_s = deadline_s - trio.current_time()
-                if left_s <= 0:
-                    raise LinkTimeout("nothing whole came in time")
-                self._unasked.feed(await self.link.receive(left_s) + self._end)
+            return await self._whole_by(deadline_s)
         except LinkTimeout as error:
             # one that talks of its own accord and is silent: its link may be dead
             self.link.distrust(str(error), reopen=True)
             raise
+
+    async def _whole_by(self, deadline_s: float) -> bytes:
+        while (message := self._unasked.next()) is NEED_DATA:
+            left_s = deadline_s - trio.current_time()
+            if left_s <= 0:
+                raise LinkTimeout("nothing whole came in time")
+            self._unasked.feed(await self.link.receive(left_s) + self._end)
         return message
 
     async def _skip_what_waits(self) -> None:

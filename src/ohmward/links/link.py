@@ -352,6 +352,11 @@ class Link:
         if not await self._drained(channel):
             raise ReplyMalformed("the instrument never stops talking", address=self.address)
         identity = await self._greet(channel) if self._hello.query else b""
+        if identity and not settings.free_running and self._waiter.unread(channel):
+            # whichever of the lines is the identity, this one may not be
+            raise ReplyMalformed(
+                f"more followed the identity {identity[:80]!r}", address=self.address
+            )
         self._recognise(channel, identity)
         if self._unanswered > 1 and not await self._drained(channel):
             # an earlier identity query went unanswered: on a line that outlives its session
