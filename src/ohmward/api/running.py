@@ -241,8 +241,6 @@ async def _carry_out(
         if progress is None:
             for key, value in task.facts.items():
                 await recorder.fact(key, value)
-        else:
-            await recorder.event("resumed")
         await recorder.settled()
     except OhmwardError:
         with suppress(OhmwardError):

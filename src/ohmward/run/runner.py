@@ -212,6 +212,8 @@ async def _note_identities(order: Order, bench: OpenBench, recorder: Recorder) -
             found=repr(bench.identities[bench.meter_name]),
         )
     problems.raise_if_any()
+    if order.identities:
+        await recorder.event("resumed")
     for name, identity in bench.identities.items():
         instrument, driver = order.bench.instruments[name], order.drivers[name]
         await recorder.instrument(

@@ -1,0 +1,12 @@
+"""The program, loaded once for all tests of a module."""
+
+from collections.abc import Iterator
+
+import pytest
+from tests.run.program import Program
+
+
+@pytest.fixture(scope="module")
+def program(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Program]:
+    with Program(tmp_path_factory.mktemp("processes")) as program:
+        yield program
