@@ -9,7 +9,7 @@ from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 
-from ohmward.errors import BadInput, BenchHeld, OhmwardError, Problem
+from ohmward.errors import BadInput, BenchHeld, OhmwardError, Problems
 from ohmward.sequence.brief import Brief
 from ohmward.setup.driver import Driver
 
@@ -29,17 +29,21 @@ class Sources:
     drivers: Mapping[str, Driver]
 
 
-def refuse_existing(out: Path) -> None:
-    """Raise BadInput when the folder is there already: nothing is ever written over."""
-    if out.exists() or out.is_symlink():
-        raise _out_refused(
-            "output-exists", out, "a folder that does not exist yet", "one that does"
-        )
+def note_unusable(out: Path, problems: Problems) -> None:
+    """Note a problem when the folder is there already: nothing is ever written over."""
+    try:
+        out.lstat()
+    except FileNotFoundError:
+        return
+    except (OSError, ValueError) as error:
+        reason = getattr(error, "strerror", None) or str(error)
+        _note(problems, "output-unusable", out, "a place for a new folder", reason)
+        return
+    _note(problems, "output-exists", out, "a folder that does not exist yet", "one that does")
 
 
-def _out_refused(id: str, out: Path, expected: str, found: str) -> BadInput:  # noqa: A002
-    problem = Problem(id=id, file=str(out), key="--out", expected=expected, found=found)
-    return BadInput((problem,))
+def _note(problems: Problems, id: str, out: Path, expected: str, found: str) -> None:  # noqa: A002
+    problems.add(id=id, file=out, key="--out", expected=expected, found=found)
 
 
 @contextmanager
@@ -72,12 +76,15 @@ def make(out: Path, sources: Sources, brief: Brief) -> Path:
 
     Raises BadInput when it exists or cannot be made, FolderUnusable when it cannot be written.
     """
-    refuse_existing(out)
+    problems = Problems()
+    note_unusable(out, problems)
+    problems.raise_if_any()
     try:
         out.mkdir(parents=True)
     except OSError as error:
         reason = error.strerror or str(error)
-        raise _out_refused("output-unusable", out, "a place for a new folder", reason) from error
+        _note(problems, "output-unusable", out, "a place for a new folder", reason)
+        raise BadInput(tuple(problems)) from error
     try:
         inputs = out / INPUTS
         (inputs / "drivers").mkdir(parents=True)

@@ -23,18 +23,18 @@ def find_file(name_or_path: str, folder: str, suffix: str = ".toml") -> Path:
     """The file that a person means: a path as it stands, else a shipped file by its name.
 
     ``film-sweep`` without a suffix or slash is ``sequences/film-sweep.toml`` of what is
-    shipped, unless a file of just that name is there.
+    shipped, unless a file (not a folder) of just that name is there.
     """
     path = Path(name_or_path)
     plain = path.suffix != suffix and "/" not in name_or_path and "\\" not in name_or_path
-    if plain and not _exists(path):
+    if plain and not _is_there(path):
         return shipped(folder) / f"{name_or_path}{suffix}"
     return path
 
 
-def _exists(path: Path) -> bool:
-    """Whether something has that name; False too for a name that nothing can have."""
+def _is_there(path: Path) -> bool:
+    """Whether there is such a file, pipe or link; False for a name that nothing can have."""
     try:
-        return path.exists()
+        return path.exists() and not path.is_dir()
     except (OSError, ValueError):
         return False
