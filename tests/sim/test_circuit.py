@@ -88,6 +88,25 @@ def test_the_level_follows_at_its_slew() -> None:
     assert circuit.voltage("A") == pytest.approx(400.0, rel=1e-4)
 
 
+@pytest.mark.parametrize("begin_s", [0.0, 1e4, 3e6])
+def test_a_level_that_falls_meets_the_limit_late_in_the_day(begin_s: float) -> None:
+    """A clock that reads weeks tells microseconds apart, not what supply and rail settle in."""
+    circuit = Circuit(wired(), {"A": ideal(1e-6)})
+    circuit.advance(begin_s)
+    close(circuit, "supply", "bypass")
+    circuit.set_supply(400.0, 1e-5, True, 500.0)
+    wait(circuit, 0.3)
+    for volts in (0.0, 300.0, 10.0, 200.0):
+        circuit.set_supply(volts, 1e-5, True, 500.0)
+        wait(circuit, 0.05)
+        close(circuit, "A.connect")
+        open_(circuit, "A.connect")
+    circuit.set_supply(50.0, 1e-3, True, 500.0)
+    close(circuit, "A.connect")
+    wait(circuit, 600.0)
+    assert circuit.voltage("A") == pytest.approx(50.0, rel=1e-3)
+
+
 def test_one_quadrant_cannot_pull_a_part_down() -> None:
     farad = 1e-6
     circuit = Circuit(wired(), {"A": ideal(farad)})

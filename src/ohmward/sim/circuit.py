@@ -23,6 +23,7 @@ from ohmward.sim.stressed import PartState, Stressed
 DRY_V = 1.0
 LASTS_S = 2e-6  # a current that is over sooner charges a cable and harms no contact
 ARC_A = 1e-3
+MOST_AT_ONCE = 10_000  # events at one instant: beyond, something is wrong with the model
 
 
 @dataclass(frozen=True, slots=True)
@@ -80,12 +81,16 @@ class Circuit:
     def advance(self, to_s: float) -> None:
         """Let time pass up to an instant; one that is past changes nothing."""
         bench = self._all
+        stood = 0
         while True:
             island = min(bench.islands, key=lambda each: each.turn.at_s)
             move_s = self._moves[0].at_s if self._moves else math.inf
             at_s = min(island.turn.at_s, move_s)
             if at_s > to_s:
                 break
+            stood = stood + 1 if at_s <= bench.now_s else 0
+            if stood > MOST_AT_ONCE:
+                raise RuntimeError(f"the simulated circuit stands still at {at_s} s: {island.turn}")
             bench.now_s = max(bench.now_s, at_s)
             if move_s <= island.turn.at_s:
                 self._move(heapq.heappop(self._moves))

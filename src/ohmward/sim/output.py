@@ -84,11 +84,11 @@ class Output:
         amperes = self.regulating_a(now_s, out_v)
         if amperes > self.limit_a:
             return "current"
-        return "voltage" if amperes >= -self._sure_a else "blocked"
+        return "voltage" if amperes >= -self._sure_a(now_s) else "blocked"
 
     def leavings(self, now_s: float) -> tuple[Leaving, ...]:
         """What ends the present way of working, t counted from now."""
-        ohm, sure = self.output_ohm, self._sure_a
+        ohm, sure = self.output_ohm, self._sure_a(now_s)
         amperes, rate = self.level_v(now_s) / ohm, self.moves(now_s) / ohm
         if self.way == "voltage":
             return (
@@ -101,6 +101,7 @@ class Output:
             return (Leaving("voltage", -1 / ohm, amperes - sure, rate),)
         return ()
 
-    @property
-    def _sure_a(self) -> float:
-        return max(SURE * self.limit_a, 1e-11)
+    def _sure_a(self, now_s: float) -> float:
+        """By how much it must be past a limit: more than the clock's last digit moves it."""
+        blurred_a = 8.0 * math.ulp(now_s) * abs(self.moves(now_s)) / self.output_ohm
+        return max(SURE * self.limit_a, 1e-11, blurred_a)
