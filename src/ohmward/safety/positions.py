@@ -99,9 +99,14 @@ class Positions:
         return found
 
     async def read_v(self) -> float:
-        """The voltmeter's reading; BenchFault when it is none."""
+        """The voltmeter's reading; BenchFault when it is none.
+
+        One that ranges by itself is asked again where the voltage has left its range meanwhile.
+        """
         with in_time(self.desk.facts.reply_s, "voltmeter"):
             reading = await self.desk.equipment.voltmeter.read()
+            if reading.status is Status.OVERLOAD:
+                reading = await self.desk.equipment.voltmeter.read()
         if reading.status is not Status.OK:
             raise BenchFault(f"the voltmeter says {reading.status}")
         return reading.voltage_v

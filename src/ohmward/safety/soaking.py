@@ -32,6 +32,7 @@ from ohmward.terms.status import Status
 
 DIVIDER_SHARE = 0.5  # an open bypass lets the meter see at least this share of the divider current
 INSTANT_S = 1e-6  # clocks add up in floating point: what is due within this is due now
+DRAIN_SURE = 1.1  # a bleeder is stated within a tenth: what passes this is the part's
 CLOSED_SHARE = 0.2  # and a closed one at most this share of what flows
 
 
@@ -45,6 +46,7 @@ class Course:
     drawn_c: float = 0.0
     range_a: float | None = None  # of the current meter while its bypass is open
     bypass_shown: bool = False
+    flows_a: float = 0.0  # what the supply was seen to give the part, at least
     currents: list[tuple[float, float]] = field(default_factory=list)  # time s, supply's A
     from_v: float = 0.0
     ramp_s: float = 0.0
@@ -69,6 +71,7 @@ class Charger:
         laws, position = self._desk.laws, hold.position
         await self._positions.event(position, PositionEvent.CHARGE)
         await self._desk.source.begin_ramp()
+        await self._range(self._watching_range_a())
         course.set_v, soak_s = laws.injection_v, hold.soak_s
         voltage_v: float | None = hold.voltage_v
         while voltage_v is not None:
@@ -83,6 +86,12 @@ class Charger:
                 await self._positions.event(position, PositionEvent.CHANGE)
                 await self._desk.source.begin_ramp(SourceEvent.CHANGE)
                 course.range_a = None  # the change has closed the bypass
+                await self._range(self._watching_range_a())
+
+    def _watching_range_a(self) -> float:
+        """The range on which a bypassed meter watches a ramp: an open bypass overloads it (A)."""
+        ranges_a, least_a = self._desk.facts.ranges_a, CLOSED_SHARE * self._desk.facts.limit_a
+        return next((range_a for range_a in ranges_a if range_a >= least_a), ranges_a[-1])
 
     # ---- up
 
@@ -176,7 +185,9 @@ class Charger:
             course.currents.append((desk.time.now_s(), supply.current_a))
             if since_s >= settle_s:
                 self._judge_connection(hold, course)
-        net_a = supply.current_a - volts / desk.wiring.divider_ohm - desk.facts.supply_error_a
+        drained_a = volts / self._positions.drain_ohm()
+        net_a = supply.current_a - DRAIN_SURE * drained_a - desk.facts.supply_error_a
+        course.flows_a = net_a
         self._check_part(hold, net_a, volts)
         return supply, volts
 
@@ -341,7 +352,7 @@ class Charger:
             return
         await self._range(range_a)
         closed = await self._read_current()
-        if abs(closed.current_a) > CLOSED_SHARE * divider_a + 3.0 * self._error_a(range_a):
+        if abs(closed.current_a) > CLOSED_SHARE * predicted_a + 3.0 * self._error_a(range_a):
             raise BenchFault("the current meter sees current: its bypass does not make")
         check_meter_survives(
             voltage_v=course.set_v,
@@ -374,15 +385,20 @@ class Charger:
         return True
 
     def _check_bypass_open(self, reading: CurrentReading, divider_a: float, course: Course) -> None:
-        """The meter must see at least what the voltmeter's divider takes."""
+        """The meter must see at least what the voltmeter's divider takes.
+
+        Where that is too little for its range, what the supply was seen to give the part shows
+        it as well: a bypass that is made takes all but a small share of either.
+        """
         if reading.status is not Status.OK:
             return
-        error_a = self._error_a(reading.range_a)
-        if DIVIDER_SHARE * divider_a <= 3.0 * error_a:
-            return  # it cannot be shown: then nothing of this hold counts
-        if reading.current_a < DIVIDER_SHARE * divider_a:
-            raise BenchFault("the current meter sees too little: its bypass does not open")
-        course.bypass_shown = True
+        least_a = 3.0 * self._error_a(reading.range_a)
+        if DIVIDER_SHARE * divider_a > least_a:
+            if reading.current_a < DIVIDER_SHARE * divider_a:
+                raise BenchFault("the current meter sees too little: its bypass does not open")
+            course.bypass_shown = True
+        elif reading.current_a >= DIVIDER_SHARE * course.flows_a > least_a:
+            course.bypass_shown = True  # else it cannot be shown, and nothing of this hold counts
 
     async def _close_bypass(self, course: Course) -> None:
         await self._desk.board.move(self._desk.wiring.bypass, make=True)

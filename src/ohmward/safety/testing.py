@@ -88,22 +88,40 @@ class Tester:
         if not await source.isolate():
             source.isolated(proven=False)
             raise BenchFault("the supply's contact does not open")
+        least_v = self._desk.laws.injection_rel * self._desk.laws.injection_v
+        found_v = await self._seen_behind(position)
+        if found_v is None:
+            source.isolated(proven=True)
+            return
+        welded = found_v > least_v
+        if welded:
+            # or absorption charges the part up: then it did so with the supply off, and more
+            await self._empty(position)
+            await self._desk.time.sleep(self.settling_s(position))
+            alone_v = abs(await self._positions.read_v())
+            welded = (await self._seen_behind(position) or 0.0) - alone_v > least_v
+        source.isolated(proven=not welded)
+        if welded:
+            raise BenchFault("the supply's contact reads back open and conducts: it is welded")
+
+    async def _seen_behind(self, position: str) -> float | None:
+        """What a test voltage behind the open contact brings to the part (V).
+
+        None where a supply that is down cannot show it: the read-back of the contact has to do.
+        """
+        source = self._desk.source
         await self._empty(position)
         try:
             await source.test()
         except (BenchFault, LinkError):
-            if not ledger.tripped:
+            if not self._desk.ledger.tripped:
                 raise
-            await source.fall()  # a supply that is down cannot show it: the read-back has to do
-            source.isolated(proven=True)
-            return
+            await source.fall()
+            return None
         await self._desk.time.sleep(self.settling_s(position))
         volts = await self._positions.read_v()
         await source.fall()
-        welded = abs(volts) > self._desk.laws.injection_rel * self._desk.laws.injection_v
-        source.isolated(proven=not welded)
-        if welded:
-            raise BenchFault("the supply's contact reads back open and conducts: it is welded")
+        return abs(volts)
 
     async def _empty(self, position: str) -> None:
         """A part that still holds the test voltage is shorted for a moment: it is below 1 V."""
