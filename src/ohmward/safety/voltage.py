@@ -130,6 +130,30 @@ class HighVoltageWarden:
 
         await self._guarded(position, work)
 
+    async def holds(self) -> bool:
+        """Whether the meter's contacts at the leased position, and no others, read back made."""
+
+        async def work() -> bool:
+            desk, position = self._desk, self._desk.ledger.leased
+            if position is None:
+                return False
+            await desk.board.refresh()
+            wired = self._positions.wired(position)
+            others = (
+                contact
+                for other in desk.wiring.positions
+                if other.position != position
+                for contact in (other.connect, *other.meter)
+            )
+            found = {
+                contact
+                for contact in (desk.wiring.supply, *wired.contacts(), *others)
+                if desk.board.made(contact)
+            }
+            return found == set(wired.meter)
+
+        return await self._guarded(self._desk.ledger.leased or "", work)
+
     async def release(self) -> None:
         """Open the meter path; the meter may have charged the part with its own bias."""
 
