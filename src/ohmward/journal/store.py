@@ -139,6 +139,7 @@ class Store:
         rows = list(
             self._select(
                 "SELECT time_us, elapsed_s FROM (SELECT time_us, elapsed_s FROM impedance"
+                " UNION ALL SELECT time_us, elapsed_s FROM leakage"
                 " UNION ALL SELECT time_us, elapsed_s FROM event) ORDER BY elapsed_s DESC LIMIT 1"
             )
         )

@@ -13,9 +13,13 @@ from ohmward.instruments.scanner import Scanner
 from ohmward.instruments.talker import Talker, open_talker
 from ohmward.instruments.thermometer import Thermometer
 from ohmward.links.waiter import Waiter
+from ohmward.run.high_voltage import high_voltage_warden
 from ohmward.safety.equipment import Operator
 from ohmward.safety.handle import Warden
 from ohmward.safety.inprocess import HandLoadedWarden, ScannerWarden
+from ohmward.safety.messages import Events
+from ohmward.safety.permit import Permit
+from ohmward.safety.voltage import HighVoltageWarden
 from ohmward.setup.bench import Bench
 from ohmward.setup.driver import Driver
 from ohmward.terms.role import Role
@@ -25,11 +29,27 @@ CANNOT_ENERGISE = frozenset({Role.SCANNER, Role.THERMOMETER})
 
 @dataclass(frozen=True, kw_only=True, slots=True)
 class Connections:
-    """How instruments are reached: one VISA resource manager, one way of waiting."""
+    """How instruments are reached: one VISA resource manager, one way of waiting.
+
+    ``look_s`` is how often a part under voltage is looked at, beside its readings.
+    """
 
     manager: pyvisa.ResourceManager
     waiter: Waiter
     operator: Operator
+    look_s: float = 0.5
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class Leave:
+    """What a run may do with high voltage: its permit, and who is told of what happens.
+
+    ``meter_bias_v`` is the highest bias that the impedance meter puts on any part.
+    """
+
+    permit: Permit
+    meter_bias_v: float = 0.0
+    events: Events | None = None
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -37,7 +57,8 @@ class OpenBench:
     """A bench whose instruments have all said who they are.
 
     Where ``only_meter_energises``, nothing on the bench can hold a voltage on a part while the
-    meter's own bias is off, whatever the relays do.
+    meter's own bias is off, whatever the relays do. ``high_voltage`` is the warden as one that
+    may energise, None where this bench or this run has no leave to.
     """
 
     identities: Mapping[str, str]
@@ -46,13 +67,19 @@ class OpenBench:
     thermometer: Thermometer | None
     warden: Warden
     only_meter_energises: bool
+    high_voltage: HighVoltageWarden | None = None
 
 
 @asynccontextmanager
 async def open_bench(
-    bench: Bench, drivers: Mapping[str, Driver], connections: Connections
+    bench: Bench,
+    drivers: Mapping[str, Driver],
+    connections: Connections,
+    leave: Leave | None = None,
 ) -> AsyncIterator[OpenBench]:
     """Open all links, ask every identity, and close everything at the end.
+
+    With ``leave``, a bench that has high voltage gets the warden that may energise it.
 
     Raises LinkError or WrongIdentity naming the instrument; what was opened is closed again.
     """
@@ -73,23 +100,51 @@ async def open_bench(
             except LinkError as error:
                 error.add_note(f"instrument {name} of {bench.name}")
                 raise
-        yield _gather(bench, talkers, identities, connections.operator)
+        high = _high_voltage(bench, drivers, talkers, connections, leave)
+        yield _gather(bench, talkers, identities, connections.operator, high)
     finally:
         with trio.CancelScope(shield=True):
             for talker in talkers.values():
                 await talker.aclose()
 
 
+def _high_voltage(
+    bench: Bench,
+    drivers: Mapping[str, Driver],
+    talkers: Mapping[str, Talker],
+    connections: Connections,
+    leave: Leave | None,
+) -> HighVoltageWarden | None:
+    if leave is None or bench.high_voltage is None:
+        return None
+    return high_voltage_warden(
+        bench,
+        drivers,
+        talkers,
+        permit=leave.permit,
+        look_s=connections.look_s,
+        meter_bias_v=leave.meter_bias_v,
+        events=leave.events,
+    )
+
+
 def _gather(
-    bench: Bench, talkers: Mapping[str, Talker], identities: dict[str, str], operator: Operator
+    bench: Bench,
+    talkers: Mapping[str, Talker],
+    identities: dict[str, str],
+    operator: Operator,
+    high: HighVoltageWarden | None,
 ) -> OpenBench:
     names = {
         instrument.role: name for name, instrument in bench.instruments.items()
     }  # a role that a run needs stands once on a bench: the brief has checked it
     meter_name = names[Role.IMPEDANCE_METER]
     thermometer = names.get(Role.THERMOMETER)
-    if bench.fixture.loading == "scanner":
-        warden: Warden = ScannerWarden(
+    warden: Warden
+    if high is not None:
+        warden = high
+    elif bench.fixture.loading == "scanner":
+        warden = ScannerWarden(
             scanner=Scanner(talkers[names[Role.SCANNER]]),
             meter_channels={place.name: place.meter_channels for place in bench.positions},
         )
@@ -104,4 +159,5 @@ def _gather(
         thermometer=Thermometer(talkers[thermometer]) if thermometer else None,
         warden=warden,
         only_meter_energises=set(names) <= CANNOT_ENERGISE | {Role.IMPEDANCE_METER},
+        high_voltage=high,
     )

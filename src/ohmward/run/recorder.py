@@ -1,11 +1,13 @@
 """Puts what happens into the journal, with the instant at which it happened."""
 
+import json
 from datetime import UTC, datetime, timedelta
 from math import isnan
 
 from ohmward.clock import Clock
 from ohmward.journal import schema
 from ohmward.journal.writer import Writer
+from ohmward.safety.messages import Event, Held, Hold, Observation, Recover, to_line
 from ohmward.sequence.brief import PlannedStage
 from ohmward.terms.condition import Point
 from ohmward.terms.part import Part
@@ -19,6 +21,11 @@ def _missing_is_null(number: float) -> float | None:
     return None if isnan(number) else number
 
 
+def _as_json(message: Hold | Recover | Held) -> str:
+    """A message's body as JSON; what is infinite is a string."""
+    return str(json.dumps(json.loads(to_line(message))["body"], sort_keys=True))
+
+
 class Recorder:
     """The run's pen: one method for each kind of thing that is kept.
 
@@ -29,6 +36,8 @@ class Recorder:
         self._writer = writer
         self._clock = clock
         self._offset_s = elapsed_offset_s
+        self._stage: PlannedStage | None = None
+        self._happened: list[tuple[object, ...]] = []
 
     def _instant(self) -> tuple[int, float]:
         return (self._clock.utc() - EPOCH) // MICROSECOND, self._clock.elapsed_s() + self._offset_s
@@ -47,15 +56,32 @@ class Recorder:
     async def event(
         self, kind: str, detail: str = "", *, part: Part | None = None, stage: str = ""
     ) -> None:
-        """Keep a thing that happened."""
+        """Keep a thing that happened, after what the warden has told meanwhile."""
+        await self._keep_happened()
         time_us, elapsed_s = self._instant()
         part_id, position = (part.part_id, part.position) if part else ("", "")
         row = (time_us, elapsed_s, part_id, position, stage, kind, detail)
         await self._writer.add(schema.INSERT_EVENT, row)
 
+    def happened(self, event: Event) -> None:
+        """Note what the warden tells, at its instant; it is kept with whatever is kept next."""
+        stage = self._stage
+        here = stage is not None and stage.part.position == event.position
+        part_id = stage.part.part_id if stage is not None and here else ""
+        name = stage.stage if stage is not None and here else ""
+        instant = self._instant()
+        self._happened.append(
+            (*instant, part_id, event.position, name, event.kind.replace(" ", "-"), event.detail)
+        )
+
+    async def _keep_happened(self) -> None:
+        while self._happened:
+            row = self._happened.pop(0)
+            await self._writer.add(schema.INSERT_EVENT, row)
+
     async def stage_begun(self, stage: PlannedStage) -> None:
         """Keep that a stage of a part began, or was taken up again."""
-        part = stage.part
+        self._stage, part = stage, stage.part
         row = (stage.number, stage.stage, stage.kind, part.part_id, part.position)
         await self._writer.add(schema.BEGIN_STAGE, row)
         await self.event("stage-begun", part=part, stage=stage.stage)
@@ -65,6 +91,52 @@ class Recorder:
         await self._writer.add(schema.END_STAGE, (state, stage.number))
         await self.event(f"stage-{state}", part=stage.part, stage=stage.stage)
         await self._writer.settled()
+
+    async def begin_again(self, stage: PlannedStage) -> None:
+        """Forget what a stage under voltage has read before: it starts from its beginning."""
+        await self._writer.add(schema.FORGET_LEAKAGE, (stage.number,))
+        await self._writer.add(schema.FORGET_HOLDS, (stage.number,))
+
+    async def leakage(
+        self,
+        stage: PlannedStage,
+        hold: int,
+        seen: Observation,
+        *,
+        background_a: float | None,
+        environment: Environment,
+        instrument: str,
+    ) -> None:
+        """Keep one reading under voltage as it was sent; returns when it is lasting."""
+        await self._keep_happened()
+        time_us, elapsed_s = self._instant()
+        row = (
+            stage.number,
+            hold,
+            time_us,
+            elapsed_s,
+            seen.since_voltage_s,
+            seen.voltage_set_v,
+            _missing_is_null(seen.voltage_v),
+            None if seen.current_a is None else _missing_is_null(seen.current_a),
+            seen.divider_a,
+            background_a,
+            seen.range_a,
+            seen.status.value,
+            _missing_is_null(environment.temperature_c),
+            _missing_is_null(environment.humidity_pct),
+            instrument,
+            seen.current_reply,
+            seen.voltage_reply,
+        )
+        await self._writer.add(schema.INSERT_LEAKAGE, row)
+        await self._writer.settled()
+
+    async def held(self, stage: PlannedStage, hold: int, asked: Hold | Recover, held: Held) -> None:
+        """Keep what was asked of a hold and how it went."""
+        await self._keep_happened()
+        row = (stage.number, hold, _as_json(asked), _as_json(held))
+        await self._writer.add(schema.INSERT_HOLD, row)
 
     async def settings(self, stage: PlannedStage, instrument: str, found: dict[str, str]) -> None:
         """Keep what an instrument was set to and read back at the start of a stage."""
@@ -130,4 +202,7 @@ class Recorder:
 
     async def close(self) -> None:
         """Close the journal in order."""
-        await self._writer.close()
+        try:
+            await self._keep_happened()
+        finally:
+            await self._writer.close()

@@ -107,6 +107,9 @@ class SupplyTable(Model):
     output_capacitance: Farads = 0.0
     output_on_at_power_on: bool = Field(True, description="true unless the manual says otherwise")
     least_current_limit: Amperes = 0.0
+    current_reading_error: Amperes | None = Field(
+        None, description="half-width of its own reading of its current, near zero"
+    )
 
 
 class WatchdogTable(Model):
