@@ -9,7 +9,9 @@ from ohmward.results.budgets import NoBudget, budgets
 from ohmward.results.compare import changes
 from ohmward.results.derive import derive_impedance
 from ohmward.results.judge import judge
+from ohmward.terms.accuracy import LevelFactor
 from ohmward.terms.decision import Decision
+from ohmward.terms.kind import Kind
 
 ACCURACY = {"meter": flat_accuracy(1e-3, 1e-3, distribution="rectangular")}
 ROW = {"pair": "Cs-D", "first": 1e-7, "second": 1e-3, "first_resolution": 1e-10}
@@ -26,6 +28,20 @@ def test_the_budget_is_that_of_the_judged_value() -> None:
     # by hand: 0.1 % rectangular of C, and a last digit of 0.1 nF
     assert by_name["accuracy of the magnitude"] == pytest.approx(1e-10 / sqrt(3), rel=1e-5)
     assert by_name["resolution and compensation"] == pytest.approx(1e-10 / sqrt(12), rel=1e-5)
+
+
+def test_a_level_that_collapses_at_a_low_impedance_is_judged_by_the_one_that_was_set() -> None:
+    factors = (LevelFactor(level_min_v=0.5, factor=1.0), LevelFactor(level_min_v=0.01, factor=15.0))
+    accuracy = {
+        "meter": flat_accuracy(1e-3, 1e-3, distribution="rectangular", level_factors=factors)
+    }
+    readings = readings_of([{"first": 1.0, "second": 0.01, "level_v": 0.01}])
+    part = part_of(Kind.RESISTOR, 1.0)
+    table = derive_impedance(readings, [part], accuracy)
+    (found,) = budgets(readings, table, "P1", "rs_ohm", accuracy)
+    # by hand: 0.1 % rectangular of 1 ohm, not fifteen times that
+    assert found.budget.u == pytest.approx(1e-3 / sqrt(3), rel=1e-3)
+    assert found.interval.u == pytest.approx(float(table["u_rs_ohm"][0]), rel=1e-6)
 
 
 def test_what_has_no_budget_is_refused_by_name() -> None:

@@ -42,7 +42,6 @@ class Cell:
     range: str = ""
     integration: str = ""
     instrument: str = ""
-    level_v: float = float("nan")
     temperature_c: float = float("nan")
     time_s: float = float("nan")
     stated: Stated | None = None
@@ -132,7 +131,7 @@ def _stated(cell: Cell, accuracy: ImpedanceAccuracy, cable_m: float) -> Stated |
         accuracy,
         frequency_hz=cell.point.frequency_hz,
         magnitude_ohm=max(abs(cell.impedance), 1e-15),
-        level_v=cell.level_v,
+        level_v=cell.point.level_v,  # the one that is set, as manuals count it
         integration=cell.integration,
         cable_m=cable_m,
         temperature_c=cell.temperature_c,
@@ -208,7 +207,6 @@ class _Means:
             np.sqrt(self._mean(dx * dx) * shrink),
             self._mean(dr * dx) * shrink,
         )
-        self.level = self._mean(_level(readings))
         self.temperature = self._mean(np.asarray(readings["temperature_c"], dtype=np.float64))
         self.time = self._mean(_seconds(readings["time_utc"]))
 
@@ -244,7 +242,6 @@ class _Means:
             range=str(self.readings["range"][first]),
             integration=str(self.readings["integration"][first]),
             instrument=str(self.readings["instrument"][first]),
-            level_v=float(self.level[group]),
             temperature_c=float(self.temperature[group]),
             time_s=float(self.time[group]),
         )
@@ -254,11 +251,6 @@ def _seconds(instants: NDArray[np.generic]) -> FloatArray:
     """Instants as seconds since 1970."""
     whole: FloatArray = instants.astype("datetime64[us]").astype(np.int64) / 1e6
     return whole
-
-
-def _level(readings: Columns) -> FloatArray:
-    level = np.asarray(readings["level_v"], dtype=np.float64)
-    return np.where(np.isfinite(level), level, np.asarray(readings["level_set_v"], np.float64))
 
 
 def _covariance(parts: tuple[FloatArray, FloatArray, FloatArray], group: int) -> Covariance:
