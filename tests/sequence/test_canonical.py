@@ -79,8 +79,7 @@ def test_parts_bench_and_drivers_are_in_it_each_by_itself(tmp_path: Path) -> Non
     changed = {name for name in plain.hashes if moved.hashes[name] != plain.hashes[name]}
     assert changed == {"bench"}
     assert moved.hash != plain.hash
-    short = DRIVERS["meter"].model_copy()
-    short._merged = {**DRIVERS["meter"].merged, "summary": "another meter"}
+    short = DRIVERS["meter"].model_copy(update={"summary": "another meter"})
     swapped = make(tmp_path, TEXT, drivers={**DRIVERS, "meter": short}).good
     assert swapped.hashes["drivers"] != plain.hashes["drivers"]
 

@@ -87,7 +87,7 @@ def tabulate(
     finally:
         store.abandon()
     readings, derived = (one.whole() for one in kept)
-    closures = {stage.stage for stage in brief.stages if stage.closure}
+    closures = {stage.stage for stage in brief.sweeps if stage.closure}
     rule = Rule(guard=brief.guard, coverage_k=brief.coverage_k)
     results = judge(
         readings,

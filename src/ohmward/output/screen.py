@@ -14,7 +14,9 @@ from rich.progress import BarColumn, Progress, TextColumn
 from rich.table import Table
 
 from ohmward.errors import Problem
+from ohmward.output import dangers
 from ohmward.output.verdicts import PartVerdict
+from ohmward.output.wording import duration
 from ohmward.sequence.brief import Brief, PlannedStage, PlannedSweep
 from ohmward.terms.decision import Decision
 from ohmward.units.values import format_quantity
@@ -25,14 +27,6 @@ DECISION_STYLES = {
     Decision.UNDECIDED: "yellow",
     Decision.INVALID: "bold magenta",
 }
-
-
-def duration(seconds: float) -> str:
-    """Seconds as a person says them: ``42 s``, ``12 min``, ``3 h 05 min``."""
-    if seconds < 100:
-        return f"{seconds:.0f} s"
-    minutes = round(seconds / 60)
-    return f"{minutes} min" if minutes < 100 else f"{minutes // 60} h {minutes % 60:02d} min"
 
 
 def show_problems(console: Console, problems: Sequence[Problem]) -> None:
@@ -57,8 +51,10 @@ def show_brief(console: Console, brief: Brief) -> None:
     if brief.compensation:
         _line(console, f"Compensation: {brief.compensation}")
     _list(console, "Before anyone touches the bench", brief.cautions)
-    console.print()
-    console.print(_stage_table(brief.stages))
+    dangers.show(console, brief)
+    if brief.sweeps:
+        console.print()
+        console.print(_stage_table(brief.sweeps))
     _list(
         console,
         "This bench cannot reach",

@@ -3,62 +3,44 @@
 from collections.abc import Mapping
 from dataclasses import dataclass, fields
 from enum import Enum
-from typing import Any, ClassVar
+from math import isfinite
+from typing import Any
 
-from ohmward.terms.condition import Point
+from ohmward.safety.hazard import Grade, Hazard
+from ohmward.safety.permit import Permit
+from ohmward.sequence.planned import (
+    PlannedAbsorption,
+    PlannedDirect,
+    PlannedInsulation,
+    PlannedLeakage,
+    PlannedProof,
+    PlannedReform,
+    PlannedResistance,
+    PlannedStage,
+    PlannedSweep,
+    Settle,
+)
 from ohmward.terms.limit import Limit
 from ohmward.terms.part import Part
 
-
-@dataclass(frozen=True, kw_only=True, slots=True)
-class Settle:
-    """A point is settled when its last ``readings`` readings agree within ``tolerance_rel``.
-
-    The tolerance is a fraction of their mean; after ``at_most_s`` the point is unsettled.
-    """
-
-    tolerance_rel: float
-    readings: int
-    at_most_s: float
-
-
-@dataclass(frozen=True, kw_only=True, slots=True)
-class PlannedStage:
-    """One stage for one part; ``number`` counts all planned stages of the run from 1."""
-
-    kind: ClassVar[str]
-
-    number: int
-    stage: str
-    part: Part
-    duration_s: float
-
-
-@dataclass(frozen=True, kw_only=True, slots=True)
-class PlannedSweep(PlannedStage):
-    """A sweep of an impedance meter: every point in order, each read ``repeats`` times.
-
-    With ``closure`` the last point is the first one again, which shows drift. ``interval_s``
-    is from the beginning of one repeat to that of the next, 0 for as fast as it goes.
-    ``pair`` and ``range_ohm`` of None leave the choice to the driver and to the meter.
-    """
-
-    kind: ClassVar[str] = "sweep"
-
-    points: tuple[Point, ...]
-    closure: bool
-    repeats: int
-    dwell_s: float
-    interval_s: float
-    settle: Settle | None
-    integration: str
-    pair: str | None
-    range_ohm: float | None
-
-    @property
-    def readings(self) -> int:
-        """How many readings are kept of this stage."""
-        return len(self.points) * self.repeats
+__all__ = [
+    "Attendance",
+    "Brief",
+    "CannotDecide",
+    "CannotReach",
+    "LeakageFloor",
+    "PlannedAbsorption",
+    "PlannedDirect",
+    "PlannedInsulation",
+    "PlannedLeakage",
+    "PlannedProof",
+    "PlannedReform",
+    "PlannedResistance",
+    "PlannedStage",
+    "PlannedSweep",
+    "Settle",
+    "as_plain",
+]
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -83,14 +65,57 @@ class CannotDecide:
     """A limit so near to what the bench can resolve that no reading could accept the part.
 
     ``expanded_uncertainty`` is the predicted one at the worst condition of the limit, in the
-    quantity's SI unit; None where the driver states no accuracy there.
+    quantity's SI unit; None where the driver states no accuracy there. Frequency and level are
+    None for what is measured under direct voltage.
     """
 
     limit: Limit
-    frequency_hz: float
-    level_v: float
+    frequency_hz: float | None
+    level_v: float | None
     expanded_uncertainty: float | None
     reason: str
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class LeakageFloor:
+    """The least leakage that this bench can tell from none, for one part, voltage and time.
+
+    ``floor_a`` is the expanded uncertainty of a current near zero plus the charging current
+    that is left. What it is made of, half-widths in ampere: ``meter_a`` of the current meter on
+    ``range_a``, ``divider_a`` of the divider's current that is taken off, ``drift_a`` = C·dV/dt of
+    the supply, ``fixture_a`` through the fixture's insulation, ``charging_a`` =
+    0.01·(V/R)·e^(−t/RC) as counted from within 1 % of the voltage. ``not_stated`` names what
+    bench or drivers do not say, and what is therefore not in it. ``range_a`` is None where no
+    range takes what flows. ``bypass_shown`` says whether the divider's current is enough to
+    show that the bypass is open; where it is not, no reading counts.
+    """
+
+    part_id: str
+    stage: str
+    voltage_v: float
+    since_voltage_s: float
+    floor_a: float
+    range_a: float | None
+    meter_a: float
+    divider_a: float
+    drift_a: float
+    fixture_a: float
+    charging_a: float
+    not_stated: tuple[str, ...]
+    bypass_shown: bool
+
+
+@dataclass(frozen=True, kw_only=True, slots=True)
+class Attendance:
+    """Whether the run may be left alone, and why; where not, a person stays and says so."""
+
+    unattended: bool
+    because: tuple[str, ...]
+
+
+NOBODY_NEEDED = Attendance(
+    unattended=True, because=("nothing in this run passes a threshold of danger",)
+)
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -100,7 +125,10 @@ class Brief:
     ``parts`` are those that are measured; ``warnings`` name the others. ``stages`` are in order
     of execution: part by part, each part's stages in their order.
     ``compensation`` says what corrects the fixture, "" where nothing does.
-    ``energising`` names the stages that put a hazardous voltage on a part. ``hash`` is the
+    ``energising`` names the stages that put a hazardous voltage on a part. ``hazards`` are those
+    of each part, ``nodes`` those of what parts share; ``floors`` what leakage the bench can
+    see; ``permit`` the ceilings for the warden, None on a bench without a path for high
+    voltage. ``hash`` is the
     SHA-256 of everything that changes what is done; ``hashes`` are those of each input, so
     that a later difference can be named.
     """
@@ -110,7 +138,7 @@ class Brief:
     follows: str
     bench: str
     parts: tuple[Part, ...]
-    stages: tuple[PlannedSweep, ...]
+    stages: tuple[PlannedStage, ...]
     limits: tuple[Limit, ...]
     coverage_k: float
     guard: float
@@ -123,6 +151,26 @@ class Brief:
     hash: str
     hashes: Mapping[str, str]
     compensation: str = ""
+    hazards: tuple[Hazard, ...] = ()
+    nodes: tuple[Hazard, ...] = ()
+    floors: tuple[LeakageFloor, ...] = ()
+    attendance: Attendance = NOBODY_NEEDED
+    permit: Permit | None = None
+
+    @property
+    def sweeps(self) -> tuple[PlannedSweep, ...]:
+        """The planned stages of the impedance meter."""
+        return tuple(stage for stage in self.stages if isinstance(stage, PlannedSweep))
+
+    @property
+    def grade(self) -> Grade:
+        """The highest shock grade of any part or node."""
+        return max((one.grade for one in (*self.hazards, *self.nodes)), default=Grade.NONE)
+
+    @property
+    def needs_authorisation(self) -> bool:
+        """Whether a person must put a name to this run."""
+        return any(one.needs_authorisation for one in (*self.hazards, *self.nodes))
 
     @property
     def readings(self) -> int:
@@ -132,11 +180,18 @@ class Brief:
     def as_dict(self) -> dict[str, Any]:
         """The brief in types that JSON has, for ``--json``; names are the fields' own."""
         plain = {field.name: as_plain(getattr(self, field.name)) for field in fields(self)}
-        return {**plain, "readings": self.readings}
+        return {
+            **plain,
+            "readings": self.readings,
+            "grade": self.grade.name.lower(),
+            "needs_authorisation": self.needs_authorisation,
+        }
 
 
 def as_plain(value: Any) -> Any:
     """A model, a mapping or a sequence of them, in types that JSON has; missing is null."""
+    if isinstance(value, Grade):
+        return value.name.lower()
     if isinstance(value, PlannedStage):
         return {"kind": value.kind} | _fields_as_plain(value) | {"part": value.part.part_id}
     if hasattr(value, "__dataclass_fields__"):
@@ -149,6 +204,8 @@ def as_plain(value: Any) -> Any:
         return value.value
     if hasattr(value, "isoformat"):
         return value.isoformat()
+    if isinstance(value, float) and not isfinite(value):
+        return None  # no such limit: JSON has no infinity
     return value
 
 

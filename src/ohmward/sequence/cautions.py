@@ -3,7 +3,12 @@
 from collections.abc import Iterable
 
 from ohmward.safety.hazard import SEVERE_J, energy_j
-from ohmward.sequence.brief import PlannedSweep
+from ohmward.sequence.brief import (
+    PlannedDirect,
+    PlannedResistance,
+    PlannedStage,
+    PlannedSweep,
+)
 from ohmward.terms.kind import Kind
 from ohmward.terms.part import Part
 from ohmward.units.values import format_quantity
@@ -20,11 +25,13 @@ SHOWN_AT_MOST = 5
 
 
 def cautions(
-    stages: Iterable[PlannedSweep], parts: Iterable[Part], *, by_hand: bool
+    stages: Iterable[PlannedStage], parts: Iterable[Part], *, by_hand: bool
 ) -> tuple[str, ...]:
     """The cautions for these parts and stages, the most general first."""
-    lot, planned = tuple(parts), tuple(stages)
+    lot, every = tuple(parts), tuple(stages)
+    planned = tuple(stage for stage in every if isinstance(stage, PlannedSweep))
     found = [NO_INTERLOCK]
+    found += _high_voltage(stage for stage in every if isinstance(stage, PlannedDirect))
     if any(part.kind is Kind.CAPACITOR for part in lot):
         found.append(DISCHARGE)
     found += _large(lot)
@@ -43,6 +50,24 @@ def cautions(
     if by_hand:
         found.append("Parts are loaded by hand: the time that this takes is not in the estimate.")
     return tuple(found)
+
+
+def _high_voltage(direct: Iterable[PlannedDirect]) -> list[str]:
+    """That parts are charged on purpose, and how far."""
+    stages = list(direct)
+    if not stages:
+        return []
+    most_v = max(stage.source_v for stage in stages)
+    found = [
+        f"Parts are charged to as much as {format_quantity(most_v, 'V')}: every part is live until "
+        "it is proven dead, also when a run has ended early. Have a hardware current limit."
+    ]
+    if any(isinstance(stage, PlannedResistance) for stage in stages):
+        found.append(
+            "Windings carry a direct current: it goes to zero before any contact opens; an open "
+            "winding has the supply's whole voltage on it."
+        )
+    return found
 
 
 def _large(lot: Iterable[Part]) -> list[str]:

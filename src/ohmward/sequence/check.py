@@ -5,16 +5,12 @@ from pathlib import Path
 from typing import TypeVar
 
 from ohmward.errors import Problems
-from ohmward.sequence.model import (
-    Condition,
-    FrequencyRange,
-    LimitTable,
-    PartFilter,
-    Sequence,
-    StageTable,
-    SweepStage,
-)
-from ohmward.sequence.rules import RULES, same_frequency
+from ohmward.sequence.direct import READ_AT_S, DirectStage
+from ohmward.sequence.direct_check import check_direct
+from ohmward.sequence.model import Condition, FrequencyRange, LimitTable, Sequence, SweepStage
+from ohmward.sequence.rule_book import RULES
+from ohmward.sequence.rules import same_frequency
+from ohmward.sequence.tables import PartFilter, StageTable
 from ohmward.sequence.values import Bias
 from ohmward.setup.toml import one_of
 from ohmward.terms.kind import Kind
@@ -28,7 +24,8 @@ NOMINAL_QUANTITIES: dict[str, frozenset[Kind]] = {
     **dict.fromkeys(("capacitance_f", "cs_f", "cp_f"), frozenset({Kind.CAPACITOR})),
     **dict.fromkeys(("inductance_h", "ls_h", "lp_h"), frozenset({Kind.INDUCTOR})),
     **dict.fromkeys(
-        ("resistance_ohm", "impedance_ohm", "rs_ohm", "rp_ohm"), frozenset({Kind.RESISTOR})
+        ("resistance_ohm", "impedance_ohm", "rs_ohm", "rp_ohm", "direct_ohm"),
+        frozenset({Kind.RESISTOR}),
     ),
 }
 
@@ -67,7 +64,7 @@ class Checker:
         self._path = path
         self._problems = problems
 
-    def note(self, problem_id: str, key: str, *, expected: str, found: object) -> None:
+    def note(self, problem_id: str, key: str, /, *, expected: str, found: object) -> None:
         """Note one problem of this file."""
         self._problems.add(
             id=problem_id, file=self._path, key=key, expected=expected, found=str(found)
@@ -86,7 +83,10 @@ class Checker:
         for stage in self._sequence.stage:
             key = f"stage[{stage.place}]"
             self._filter(stage.parts, f"{key}.parts", self._sequence.kinds)
-            self._sweep(stage, key)
+            if isinstance(stage, SweepStage):
+                self._sweep(stage, key)
+            elif isinstance(stage, DirectStage):
+                check_direct(stage, key, self._sequence.kinds, self.note)
 
     def _sweep(self, stage: SweepStage, key: str) -> None:
         if not isinstance(stage.frequency, FrequencyRange):
@@ -150,8 +150,8 @@ class Checker:
             for stage in stages:
                 self._condition(limit.at, stage, key, limit)
 
-    def _stages_of(self, limit: LimitTable, key: str) -> list[SweepStage]:
-        found: list[SweepStage] = []
+    def _stages_of(self, limit: LimitTable, key: str) -> list[StageTable]:
+        found: list[StageTable] = []
         for name in limit.stage:
             if name not in self._names:
                 known = [known for known in self._names if known]
@@ -161,7 +161,7 @@ class Checker:
             found += [stage for stage in self._sequence.stage if stage.name == name]
         return found
 
-    def _kinds_of(self, limit: LimitTable, stages: list[SweepStage]) -> frozenset[Kind]:
+    def _kinds_of(self, limit: LimitTable, stages: list[StageTable]) -> frozenset[Kind]:
         """The kinds of part that the limit judges; none where its stages are not known."""
         among = [kinds_of(stage.parts, self._sequence.kinds) for stage in stages]
         return kinds_of(limit.parts, frozenset[Kind]().union(*among))
@@ -176,13 +176,20 @@ class Checker:
                 expected=f"a quantity of every {' and '.join(sorted(kinds))} that it judges",
                 found=f"{limit.quantity}, which no {' and no '.join(sorted(lacking))} has",
             )
-        if quantity.per == "part" and limit.at.frequency is not None:
-            self.note(
-                "limit-condition-of-part",
-                f"{key}.at.frequency",
-                expected=f"no frequency: {limit.quantity} is one value for all of them",
-                found=_hertz(limit.at.frequency),
-            )
+        for name, asked, pers in (
+            ("frequency", limit.at.frequency, {"point"}),
+            ("level", limit.at.level, {"point", "part"}),
+            ("bias", limit.at.bias, {"point", "part"}),
+            ("voltage", limit.at.voltage, {"time", "hold"}),
+            ("since_voltage", limit.at.since_voltage, {"time", "hold"}),
+        ):
+            if asked is not None and quantity.per not in pers:
+                self.note(
+                    "limit-condition-of-part",
+                    f"{key}.at.{name}",
+                    expected=f"no {name}: {limit.quantity} does not depend on one",
+                    found=asked if not isinstance(asked, float) else _plain(name, asked),
+                )
 
     def _bounds(self, limit: LimitTable, key: str, kinds: frozenset[Kind]) -> None:
         ends = [end for end in (limit.minimum, limit.maximum) if end is not None]
@@ -251,6 +258,16 @@ class Checker:
             )
 
     def _condition(self, at: Condition, stage: StageTable, key: str, limit: LimitTable) -> None:
+        if limit.quantity not in stage.measures:
+            self.note(
+                "limit-not-measured",
+                f"{key}.stage",
+                expected=f"a stage that measures {limit.quantity}",
+                found=f"'{stage.name}', which does not",
+            )
+            return
+        if isinstance(stage, DirectStage):
+            self._direct_condition(limit, stage, key)
         if not isinstance(stage, SweepStage) or not stage.whole:
             return
         if QUANTITIES[limit.quantity].per == "point":
@@ -261,6 +278,24 @@ class Checker:
         if not (between and limit.quantity == "capacitance_change"):
             self._measured(f"{key}.at.bias", at.bias, stage.bias, same_bias, str)
 
+    def _direct_condition(self, limit: LimitTable, stage: DirectStage, key: str) -> None:
+        """Times under voltage that a limit names, or that its quantity is made of."""
+        if not stage.whole:
+            return
+        times: tuple[float, ...] = getattr(stage, "read_at_s", ())
+        ratio = READ_AT_S.get(limit.quantity, ())
+        asked = limit.at.since_voltage
+        if asked is not None and ratio:
+            self.note(
+                "limit-condition-of-part",
+                f"{key}.at.since_voltage",
+                expected=f"no since_voltage: {limit.quantity} has two times of its own",
+                found=_seconds(asked),
+            )
+        for one in ratio or (() if asked is None else (asked,)):
+            where = f"{key}.stage" if ratio else f"{key}.at.since_voltage"
+            self._measured(where, one, times, same_value, _seconds)
+
     def _measured(
         self,
         key: str,
@@ -270,7 +305,7 @@ class Checker:
         show: Callable[[T], str],
     ) -> None:
         if asked is not None and not any(same(asked, value) for value in values):
-            shown = ", ".join(show(value) for value in values[:6])
+            shown = ", ".join(show(value) for value in values[:6]) or "none"
             more = f" and {len(values) - 6} more" if len(values) > 6 else ""
             self.note(
                 "limit-not-measured",
@@ -291,6 +326,15 @@ def check_sequence(
 
 def _hertz(value: float) -> str:
     return format_quantity(value, "Hz", 6)
+
+
+def _seconds(value: float) -> str:
+    return format_quantity(value, "s", 6)
+
+
+def _plain(name: str, value: float) -> str:
+    units = {"frequency": "Hz", "since_voltage": "s"}
+    return format_quantity(value, units.get(name, "V"), 6)
 
 
 def _volts(value: float) -> str:

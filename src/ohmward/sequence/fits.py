@@ -1,7 +1,7 @@
 """Whether a stage or a limit is for a part."""
 
 from ohmward.sequence.dielectric import dielectric_key
-from ohmward.sequence.model import PartFilter
+from ohmward.sequence.tables import PartFilter
 from ohmward.terms.part import Part
 
 NOMINAL_TOLERANCE = 1e-9  # 1 nF read as "1000 pF" is still 1 nF

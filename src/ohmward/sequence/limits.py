@@ -4,14 +4,21 @@ from collections.abc import Sequence as Listed
 from dataclasses import dataclass, replace
 
 from ohmward.errors import Problems
-from ohmward.sequence.brief import CannotReach, PlannedSweep
+from ohmward.sequence.brief import (
+    CannotReach,
+    PlannedDirect,
+    PlannedResistance,
+    PlannedStage,
+    PlannedSweep,
+)
+from ohmward.sequence.direct import READ_AT_S
 from ohmward.sequence.fits import fits
-from ohmward.sequence.model import LimitTable, Sequence
+from ohmward.sequence.model import STAGE_TABLES, LimitTable, Sequence
 from ohmward.sequence.notes import Notes
 from ohmward.sequence.rating import resolve_bias
 from ohmward.sequence.references import can_refer
+from ohmward.sequence.rule_book import RULES
 from ohmward.sequence.rules import (
-    RULES,
     Bounds,
     NotStated,
     Rule,
@@ -19,12 +26,15 @@ from ohmward.sequence.rules import (
     same_frequency,
     widen,
 )
+from ohmward.sequence.rules_direct import DirectRule
 from ohmward.sequence.values import Bound
 from ohmward.terms.condition import Point
 from ohmward.terms.limit import Limit
 from ohmward.terms.part import Part
 from ohmward.terms.quantity import QUANTITIES
 from ohmward.units.values import format_quantity
+
+STATED_WITHIN = 0.02  # a voltage this near to the one that a rule is stated at is that one
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -75,7 +85,7 @@ def where_of(limit: Limit) -> Where:
     )
 
 
-def resolve_limits(sequence: Sequence, planned: Listed[PlannedSweep], notes: Notes) -> Resolved:
+def resolve_limits(sequence: Sequence, planned: Listed[PlannedStage], notes: Notes) -> Resolved:
     """Resolve all limits; warns of a limit that judges nothing, and a part that nothing judges."""
     limits: list[Limit] = []
     missed: list[CannotReach] = []
@@ -98,26 +108,31 @@ def resolve_limits(sequence: Sequence, planned: Listed[PlannedSweep], notes: Not
     return Resolved(limits=tuple(limits), cannot_reach=tuple(missed))
 
 
-def _measured(planned: Listed[PlannedSweep]) -> tuple[str, ...]:
+def _measured(planned: Listed[PlannedStage]) -> tuple[str, ...]:
     return tuple(dict.fromkeys(stage.part.part_id for stage in planned))
 
 
-def _judges(table: LimitTable, stage: PlannedSweep) -> bool:
+def _judges(table: LimitTable, stage: PlannedStage) -> bool:
     """Whether the limit is for this part; a kind that lacks the quantity was noted before."""
     return (
         stage.stage in table.stage
+        and table.quantity in STAGE_TABLES[stage.kind].measures
         and fits(table.parts, stage.part)
         and stage.part.kind in QUANTITIES[table.quantity].kinds
     )
 
 
-def _resolve(table: LimitTable, stage: PlannedSweep, notes: Notes) -> Limit | CannotReach | None:
+def _resolve(table: LimitTable, stage: PlannedStage, notes: Notes) -> Limit | CannotReach | None:
     key = f"limit[{table.place}]"
+    if isinstance(stage, PlannedDirect):
+        return _resolve_direct(table, stage, key, notes)
+    if not isinstance(stage, PlannedSweep):
+        return None
     rule = None if table.rule is None else RULES.get(table.rule)
     where = _where(table, rule, stage, key, notes)
     if where is None:
         return None
-    bounds = _bounds(table, rule, where, stage.part, key, notes)
+    bounds = _bounds(table, rule, where.frequency_hz or 0.0, stage.part, key, notes)
     if bounds is None:
         return None
     if not can_refer(table, stage.part, key, notes):
@@ -151,10 +166,95 @@ def _between(table: LimitTable, where: Where, stage: PlannedSweep) -> bool:
     """Whether a change is asked for at a bias between two that the stage measures."""
     if table.quantity != "capacitance_change" or where.bias_v is None:
         return False
-    biases = [
-        point.bias_v for point in stage.points if replace(where, bias_v=None).holds_at(point)
-    ]
+    biases = [point.bias_v for point in stage.points if replace(where, bias_v=None).holds_at(point)]
     return bool(biases) and min(biases) < where.bias_v < max(biases)
+
+
+def _resolve_direct(
+    table: LimitTable, stage: PlannedDirect, key: str, notes: Notes
+) -> Limit | None:
+    """A limit on what a stage under direct voltage or current measures."""
+    rule = None if table.rule is None else RULES.get(table.rule)
+    volts = None if isinstance(stage, PlannedResistance) else stage.source_v
+    if table.at.voltage is not None:
+        unseen = replace(notes, problems=Problems())  # what is wrong was noted with the stage
+        asked = resolve_bias(table.at.voltage, stage.part, f"{key}.at.voltage", unseen)
+        if asked is None:
+            return None
+        if volts is None or not same_frequency(asked[0], volts):
+            notes.sequence(
+                "limit-not-measured",
+                f"{key}.at.voltage",
+                expected="no voltage" if volts is None else _volts_of(stage, volts),
+                found=format_quantity(asked[0], "V", 6),
+            )
+            return None
+    try:
+        since_s = _since(table, rule, stage, key, notes)
+        if isinstance(rule, DirectRule) and volts is not None:
+            _warn_of_extrapolation(table, rule, stage, volts, notes)
+    except (RuleLacks, NotStated):
+        since_s = None  # what the rule lacks is told with its bounds
+    bounds = _bounds(table, rule, volts or 0.0, stage.part, key, notes)
+    if bounds is None:
+        return None
+    return Limit(
+        part_id=stage.part.part_id,
+        stage=stage.stage,
+        quantity=table.quantity,
+        minimum=bounds[0],
+        maximum=bounds[1],
+        source=table.source,
+        voltage_v=volts,
+        since_voltage_s=since_s,
+    )
+
+
+def _since(
+    table: LimitTable, rule: Rule | None, stage: PlannedDirect, key: str, notes: Notes
+) -> float | None:
+    """The time that decides: as written, else the rule's, else the stage's last."""
+    if not stage.times_s or table.quantity in READ_AT_S:
+        return None
+    asked = table.at.since_voltage
+    stated = rule.times(stage.part) if isinstance(rule, DirectRule) else ()
+    if asked is None:
+        asked = next((one for one in stated if _among(one, stage.times_s)), None)
+    if asked is None and stated:
+        notes.sequence(
+            "limit-not-measured",
+            f"{key}.stage",
+            expected=f"a stage that reads {stage.part.part_id} after {_seconds(stated)}, when "
+            f"{table.rule} is stated, or the time in 'at.since_voltage'",
+            found=f"{stage.stage}, which reads after {_seconds(stage.times_s)}",
+        )
+    elif asked is not None and stated and not _among(asked, stated):
+        notes.warn(
+            f"limit {table.place}: {table.rule} is stated after {_seconds(stated)}, and is held "
+            f"here after {_seconds((asked,))}"
+        )
+    return asked if asked is not None else stage.times_s[-1]
+
+
+def _warn_of_extrapolation(
+    table: LimitTable, rule: DirectRule, stage: PlannedDirect, volts: float, notes: Notes
+) -> None:
+    """Insulation at rated voltage from a figure stated at 100 V is an extrapolation."""
+    stated_v = rule.stated_v(stage.part)
+    if stated_v is None or abs(volts - stated_v) <= STATED_WITHIN * stated_v:
+        return
+    notes.warn(
+        f"limit {table.place}: {table.rule} is stated at other voltages than stage {stage.stage} "
+        "has for some parts: held there, it is an extrapolation"
+    )
+
+
+def _volts_of(stage: PlannedDirect, volts: float) -> str:
+    return f"{format_quantity(volts, 'V', 6)}, which stage {stage.stage} has"
+
+
+def _seconds(values: Listed[float]) -> str:
+    return " or ".join(format_quantity(value, "s", 6) for value in values)
 
 
 def _where(
@@ -199,12 +299,15 @@ def _where(
 def _bounds(
     table: LimitTable,
     rule: Rule | None,
-    where: Where,
+    condition: float,
     part: Part,
     key: str,
     notes: Notes,
 ) -> Bounds | None:
-    """Minimum and maximum in SI units; None with the reason noted where there are none."""
+    """Minimum and maximum in SI units; None with the reason noted where there are none.
+
+    ``condition`` is what a rule is asked with: a frequency (Hz), or a direct voltage (V).
+    """
     if rule is None:
         if table.minimum is None and table.maximum is None:
             return None  # noted when the sequence was read
@@ -219,7 +322,7 @@ def _bounds(
             return None
         return low, high
     try:
-        found = rule.bounds(part, where.frequency_hz or 0.0)
+        found = rule.bounds(part, condition)
     except RuleLacks as lack:
         notes.cell(
             "rule-lacks-cell",

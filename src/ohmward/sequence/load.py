@@ -11,9 +11,8 @@ from ohmward.sequence.model import (
     LimitTable,
     Sequence,
     SequenceHead,
-    SweepStage,
-    Table,
 )
+from ohmward.sequence.tables import StageTable, Table
 from ohmward.setup.toml import read_toml, salvage, validate
 from ohmward.terms.kind import Kind
 
@@ -56,7 +55,7 @@ def _saved(data: Mapping[str, Any]) -> Sequence | None:
     head = salvage(SequenceHead, rest, _STAND_INS)
     if head is None:
         return None
-    stages: list[SweepStage] = []
+    stages: list[StageTable] = []
     for place, table in _tables(data, "stage"):
         model = STAGE_TABLES.get(str(table.get("kind")))
         if model is not None:
@@ -66,8 +65,9 @@ def _saved(data: Mapping[str, Any]) -> Sequence | None:
         for place, table in _tables(data, "limit")
         for limit in _table(LimitTable, table, place)
     ]
-    known = {name: getattr(head, name) for name in SequenceHead.model_fields}
-    return Sequence.model_construct(**known, stage=tuple(stages), limit=tuple(limits))
+    known: dict[str, Any] = {name: getattr(head, name) for name in SequenceHead.model_fields}
+    known |= {"stage": tuple(stages), "limit": tuple(limits)}
+    return Sequence.model_construct(**known)
 
 
 def _tables(data: Mapping[str, Any], key: str) -> list[tuple[int, dict[str, Any]]]:

@@ -1,22 +1,29 @@
 """The tables of a sequence file; what they hold is checked here, how they fit in `check`."""
 
-import re
 from math import floor, log10
 from typing import Annotated, Any, ClassVar, Literal, Self
 
 from pydantic import (
-    AfterValidator,
     Discriminator,
     Field,
-    PrivateAttr,
     Tag,
     ValidationInfo,
     field_validator,
     model_validator,
 )
 
-from ohmward.sequence.rules import RULES, same_frequency
-from ohmward.sequence.values import Bias, BiasSetting, Bound, NominalValue, read_bound
+from ohmward.sequence.direct import (
+    AbsorptionStage,
+    InsulationStage,
+    LeakageStage,
+    ProofStage,
+    ReformStage,
+    ResistanceStage,
+)
+from ohmward.sequence.rule_book import RULES
+from ohmward.sequence.rules import same_frequency
+from ohmward.sequence.tables import PartFilter, Share, StageTable, Table, Times
+from ohmward.sequence.values import Bias, BiasSetting, Bound, VoltageSetting, read_bound
 from ohmward.setup.quantities import (
     Celsius,
     Model,
@@ -31,71 +38,15 @@ from ohmward.setup.quantities import (
 )
 from ohmward.setup.schema import register
 from ohmward.setup.toml import one_of
-from ohmward.terms.kind import Kind, Polarity
+from ohmward.terms.kind import Kind
 from ohmward.terms.quantity import QUANTITIES
 from ohmward.terms.role import Role
 from ohmward.units.values import format_quantity
 
-Share = Annotated[float, quantity("1", above=0, maximum=1)]
-Times = Annotated[float, quantity("1", above=0, maximum=1000)]
 Coverage = Annotated[float, quantity("1", above=0, maximum=10)]
 Guard = Annotated[float, quantity("1", minimum=0, maximum=10)]
 MOST_POINTS = 10_000  # of one range
 SIGNIFICANT_DIGITS = 6  # of the frequencies of a range: more than any meter sets
-
-
-STAGE_NAME = r"^[a-z0-9][a-z0-9 ._-]{0,39}$"
-
-
-def _stage_name(value: str) -> str:
-    if re.fullmatch(STAGE_NAME, value) is None:
-        raise wrong("a name of lower-case letters, digits, spaces and . _ -", value)
-    return value
-
-
-StageName = Annotated[
-    str, AfterValidator(_stage_name), Field(json_schema_extra={"pattern": STAGE_NAME})
-]
-
-
-class Table(Model):
-    """A table of a list of tables, which knows its place so that problems can name it.
-
-    ``whole`` is False for what could be saved of a table with something wrong in it: a check
-    must not report what is only missing because it was wrong.
-    """
-
-    _place: int = PrivateAttr(default=1)
-    _whole: bool = PrivateAttr(default=True)
-
-    @property
-    def place(self) -> int:
-        """Its place in the file, counted from 1."""
-        return self._place
-
-    @property
-    def whole(self) -> bool:
-        """Whether nothing was wrong with it."""
-        return self._whole
-
-    def placed(self, place: int, *, whole: bool = True) -> Self:
-        """Itself, told where it stands."""
-        self._place, self._whole = place, whole
-        return self
-
-
-class PartFilter(Model):
-    """Which parts something applies to; every key that is there must fit."""
-
-    kind: OneOrMany[Kind] = Field(default_factory=tuple, description="kinds of part")
-    dielectric: OneOrMany[str] = Field(
-        default_factory=tuple,
-        description="dielectrics, as the parts list names them",
-        examples=["PP"],
-    )
-    polarity: Polarity | None = Field(None, description="polar or nonpolar parts only")
-    above: NominalValue | None = Field(None, description="nominal value above this")
-    up_to: NominalValue | None = Field(None, description="nominal value up to and with this")
 
 
 class FrequencyRange(Model):
@@ -153,22 +104,13 @@ class SettleRule(Model):
     at_most: Seconds = Field(description="then the point is unsettled", examples=["10 s"])
 
 
-class StageTable(Table):
-    """What every kind of stage has."""
-
-    roles: ClassVar[frozenset[Role]] = frozenset()
-    energises: ClassVar[bool] = False  # whether it exists to put a high voltage on a part
-
-    name: StageName = Field(
-        description="what limits and tables call this stage: lower case", examples=["sweep"]
-    )
-    parts: PartFilter = Field(default_factory=PartFilter, description="which parts get this stage")
-
-
 class SweepStage(StageTable):
     """Impedance over frequency × level × bias: bias changes least often, frequency most."""
 
     roles: ClassVar[frozenset[Role]] = frozenset({Role.IMPEDANCE_METER})
+    measures: ClassVar[frozenset[str]] = frozenset(
+        name for name, quantity in QUANTITIES.items() if quantity.per in {"point", "part"}
+    )
 
     kind: Literal["sweep"]
     frequency: Frequencies = Field(description="a frequency, a list, or { from, to, per_decade }")
@@ -200,10 +142,26 @@ class SweepStage(StageTable):
         return self.frequency
 
 
-# Every kind of stage, by its word in the file. With a second one, AnyStage becomes
-# Annotated[SweepStage | …, Field(discriminator="kind")] and `plan` gets a row in its table.
-STAGE_TABLES: dict[str, type[SweepStage]] = {"sweep": SweepStage}
-AnyStage = SweepStage
+# Every kind of stage, by its word in the file.
+STAGE_TABLES: dict[str, type[StageTable]] = {
+    "sweep": SweepStage,
+    "leakage": LeakageStage,
+    "insulation": InsulationStage,
+    "reform": ReformStage,
+    "proof": ProofStage,
+    "absorption": AbsorptionStage,
+    "resistance": ResistanceStage,
+}
+AnyStage = Annotated[
+    SweepStage
+    | LeakageStage
+    | InsulationStage
+    | ReformStage
+    | ProofStage
+    | AbsorptionStage
+    | ResistanceStage,
+    Field(discriminator="kind"),
+]
 
 
 class Condition(Model):
@@ -221,6 +179,12 @@ class Condition(Model):
         None,
         description="time since the last heating that a class 2 value is carried to",
         examples=["1000 h"],
+    )
+    voltage: VoltageSetting | None = Field(
+        None, description="direct voltage under which it is measured", examples=["100 % of rating"]
+    )
+    since_voltage: PositiveSeconds | None = Field(
+        None, description="time since the part had it", examples=["60 s"]
     )
 
 

@@ -13,7 +13,7 @@ from ohmward.metrology.accuracy import impedance_uncertainty
 from ohmward.metrology.arrays import FloatArray
 from ohmward.metrology.immittance import views
 from ohmward.results.quantities import SERIES_BELOW_OHM, SHARED_VARIANCE
-from ohmward.sequence.brief import CannotDecide, PlannedSweep
+from ohmward.sequence.brief import CannotDecide, PlannedStage, PlannedSweep
 from ohmward.sequence.check import NOMINAL_QUANTITIES
 from ohmward.sequence.limits import where_of
 from ohmward.sequence.model import DecisionTable
@@ -39,7 +39,7 @@ class MeterAccuracy:
 
 def cannot_decide(
     limits: tuple[Limit, ...],
-    stages: tuple[PlannedSweep, ...],
+    stages: tuple[PlannedStage, ...],
     meter: MeterAccuracy,
     decision: DecisionTable,
 ) -> tuple[CannotDecide, ...]:
@@ -49,6 +49,8 @@ def cannot_decide(
     for limit in limits:
         stage = of_part[limit.part_id, limit.stage]
         doubt: CannotDecide | None = None
+        if not isinstance(stage, PlannedSweep):
+            continue
         if limit.quantity == "self_resonance_hz":
             doubt = _resonance_doubt(limit, stage)
         elif QUANTITIES[limit.quantity].per == "point":

@@ -72,6 +72,27 @@ def resolve_bias(bias: Bias, part: Part, key: str, notes: Notes) -> tuple[float,
     return (bias.value, 0.0) if bias.unit == "V" else (0.0, bias.value)
 
 
+def resolve_current(current: Bias, part: Part, notes: Notes) -> float | None:
+    """Amperes of a direct current as written, a share being of the rated current."""
+    if current.unit == "A":
+        return current.value
+    if part.rated_a is None:
+        _rating_missing(part, notes, "rated_current")
+        return None
+    return current.value * part.rated_a
+
+
+def check_ratings_of_current(
+    amperes: float, part: Part, key: str, notes: Notes, share: float
+) -> None:
+    """Note where a direct current is too much for the part: its rated current, its power."""
+    allowance = Allowance(share=share)
+    stress = Stress(bias_v=0.0, bias_a=amperes, level_v=0.0)
+    _check_current(stress, part, key, notes, allowance)
+    if part.kind is Kind.RESISTOR:
+        _check_power(stress, part, key, notes, allowance)
+
+
 def check_stress(stress: Stress, part: Part, key: str, notes: Notes, allowance: Allowance) -> None:
     """Note every way in which this is too much for the part or for the bench."""
     _check_ceilings(stress, key, notes, allowance)

@@ -239,7 +239,7 @@ RULES: dict[str, Rule] = {
             kinds=frozenset(Kind),
             quantities=frozenset(
                 {"capacitance_f", "cs_f", "cp_f", "inductance_h", "ls_h", "lp_h"}
-                | {"resistance_ohm", "rs_ohm", "rp_ohm", "impedance_ohm"}
+                | {"resistance_ohm", "rs_ohm", "rp_ohm", "impedance_ohm", "direct_ohm"}
             ),
             bounds=marked_tolerance,
         ),

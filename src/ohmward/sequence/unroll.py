@@ -6,21 +6,37 @@ from pathlib import Path
 
 from ohmward.errors import Problems
 from ohmward.safety.hazard import LIVE_DC_V, peak_voltage_v
-from ohmward.sequence.brief import Brief, CannotReach, PlannedSweep
-from ohmward.sequence.canonical import brief_hash, input_hashes
+from ohmward.sequence.brief import (
+    Brief,
+    CannotDecide,
+    CannotReach,
+    PlannedDirect,
+    PlannedStage,
+    PlannedSweep,
+    as_plain,
+)
+from ohmward.sequence.canonical import brief_hash, hash_of, input_hashes
 from ohmward.sequence.cautions import cautions
 from ohmward.sequence.compensated import Compensated, check_compensation
+from ohmward.sequence.dangers import attendance_of, hazards_of, nodes_of, permit_of
+from ohmward.sequence.direct import DirectStage
 from ohmward.sequence.fits import fits
+from ohmward.sequence.floor import cannot_decide_direct, charging_warnings, floors_of
+from ohmward.sequence.high import High, high_of
 from ohmward.sequence.limits import resolve_limits
-from ohmward.sequence.model import STAGE_TABLES, Sequence
+from ohmward.sequence.model import STAGE_TABLES, Sequence, SweepStage
 from ohmward.sequence.notes import Notes
+from ohmward.sequence.path_check import check_order, check_path
+from ohmward.sequence.plan_direct import Task, plan_direct
 from ohmward.sequence.predict import MeterAccuracy, cannot_decide
 from ohmward.sequence.rating import Allowance
 from ohmward.sequence.reach import Reach, check_reach, reachable_frequencies
 from ohmward.sequence.sweep import RELAYS_S, BiasOf, Given, plan_sweep
+from ohmward.sequence.tables import StageTable
 from ohmward.setup.bench import Bench
 from ohmward.setup.driver import Driver
 from ohmward.setup.toml import one_of
+from ohmward.terms.limit import Limit
 from ohmward.terms.part import Part
 from ohmward.terms.role import Role
 from ohmward.units.values import format_quantity
@@ -51,20 +67,27 @@ def unroll(
     )
     if bench is not None:
         _check_bench(sequence, bench, parts, notes)
-    given = _given(sequence, bench, drivers)
-    planned, left_out = _plan(sequence, parts, given, notes)
+    given, high = _given(sequence, bench, drivers), high_of(bench, drivers)
+    planned, left_out = _plan(sequence, parts, given, high, notes)
+    check_path(planned, high, notes)
+    check_order(planned, notes)
     resolved = resolve_limits(sequence, planned, notes)
     corrected = ""
     if bench is not None:
         corrected = check_compensation(sequence, bench, planned, compensation, notes)
-    if len(problems) or bench is None or given.reach.driver is None:
+    sweeps = any(isinstance(stage, PlannedSweep) for stage in planned)
+    if len(problems) or bench is None or (sweeps and given.reach.driver is None):
         return None
     file = compensation.file if compensation else None
     hashes = input_hashes(sequence, bench, drivers, tuple(parts), resolved.limits, file)
-    meter = MeterAccuracy(
-        accuracy=given.reach.driver.impedance_accuracy,
-        cable_m=bench.instruments[given.reach.name].cable_m,
-    )
+    hashes |= _stages_hash(planned)
+    meter_ohm = _meter_ohm(given.reach)
+    hazards = hazards_of(planned, high, meter_ohm=meter_ohm, notes=notes)
+    by_hand = bench.fixture.loading == "by hand"
+    nodes = nodes_of(planned, high)
+    for text in charging_warnings(resolved.limits, planned, high):
+        notes.warn(text)
+    digest = brief_hash(hashes)
     return Brief(
         name=sequence.name,
         purpose=sequence.purpose,
@@ -78,13 +101,55 @@ def unroll(
         duration_s=sum(stage.duration_s for stage in planned),
         energising=_energising(planned),
         cannot_reach=(*left_out, *resolved.cannot_reach),
-        cannot_decide=cannot_decide(resolved.limits, planned, meter, sequence.decision),
-        cautions=cautions(planned, parts, by_hand=bench.fixture.loading == "by hand"),
+        cannot_decide=(
+            *_cannot_decide(resolved.limits, planned, bench, given.reach, sequence),
+            *cannot_decide_direct(resolved.limits, planned, high, sequence.decision),
+        ),
+        cautions=cautions(planned, parts, by_hand=by_hand),
         warnings=tuple(notes.warnings),
-        hash=brief_hash(hashes),
+        hash=digest,
         hashes=hashes,
         compensation=corrected,
+        hazards=hazards,
+        nodes=nodes,
+        floors=floors_of(planned, high, sequence.decision.coverage),
+        attendance=attendance_of((*hazards, *nodes), high, by_hand=by_hand),
+        permit=permit_of(planned, high, brief_hash=digest),
     )
+
+
+def _stages_hash(planned: Listed[PlannedStage]) -> dict[str, str]:
+    """A hash of what is planned under direct voltage: its voltages may come from built-in rules."""
+    direct = [as_plain(stage) for stage in planned if isinstance(stage, PlannedDirect)]
+    return {"stages": hash_of(direct)} if direct else {}
+
+
+def _meter_ohm(reach: Reach) -> float:
+    """What lies between the impedance meter's bias and a part (ohm); 0 where nobody says."""
+    meter = None if reach.driver is None else reach.driver.meter
+    return 0.0 if meter is None else meter.source_resistance
+
+
+def _cannot_decide(
+    limits: tuple[Limit, ...],
+    planned: tuple[PlannedStage, ...],
+    bench: Bench,
+    reach: Reach,
+    sequence: Sequence,
+) -> tuple[CannotDecide, ...]:
+    if reach.driver is None:
+        return ()
+    meter = MeterAccuracy(
+        accuracy=reach.driver.impedance_accuracy,
+        cable_m=bench.instruments[reach.name].cable_m,
+    )
+    return cannot_decide(limits, planned, meter, sequence.decision)
+
+
+_WHY = {
+    Role.VOLTMETER: ", that sees the part's own terminals",
+    Role.CURRENT_METER: ", that reads the leakage",
+}
 
 
 def _check_bench(sequence: Sequence, bench: Bench, parts: Listed[Part], notes: Notes) -> None:
@@ -95,9 +160,16 @@ def _check_bench(sequence: Sequence, bench: Bench, parts: Listed[Part], notes: N
             notes.bench(
                 "role-missing",
                 "instrument",
-                expected=f"an instrument with the role '{role}'",
+                expected=f"an instrument with the role '{role}'{_WHY.get(role, '')}",
                 found="none",
             )
+    if bench.high_voltage is None and any(stage.energises for stage in sequence.stage):
+        notes.bench(
+            "path-missing",
+            "high_voltage",
+            expected="how high voltage reaches the parts and how they are freed of it",
+            found="nothing",
+        )
     names = [place.name for place in bench.positions]
     for part in parts:
         if bench.position(part.position) is None:
@@ -133,10 +205,10 @@ def _given(sequence: Sequence, bench: Bench | None, drivers: Mapping[str, Driver
 
 
 def _plan(
-    sequence: Sequence, parts: Listed[Part], given: Given, notes: Notes
-) -> tuple[tuple[PlannedSweep, ...], tuple[CannotReach, ...]]:
+    sequence: Sequence, parts: Listed[Part], given: Given, high: High, notes: Notes
+) -> tuple[tuple[PlannedStage, ...], tuple[CannotReach, ...]]:
     """All stages in order of execution: part by part, each part's stages in their order."""
-    planned: list[PlannedSweep] = []
+    planned: list[PlannedStage] = []
     biases: dict[tuple[str, str], list[str]] = {}
     unmeasured: dict[str, list[str]] = {}
     for part in parts:
@@ -145,18 +217,16 @@ def _plan(
             continue
         mine = [stage for stage in sequence.stage if fits(stage.parts, part)]
         for stage in mine:
-            sweep, left_out = plan_sweep(
-                stage, part, number=len(planned) + 1, given=given, notes=notes
-            )
-            if sweep is not None:
-                planned.append(sweep)
+            number = len(planned) + 1
+            one, left_out = _plan_one(stage, part, number, sequence, given, high, notes)
+            planned += [one] if one is not None else []
             for bias in left_out:
                 biases.setdefault((stage.name, _bias_text(bias)), []).append(part.part_id)
         if not mine and all(stage.whole for stage in sequence.stage):
             unmeasured.setdefault("no stage is for them", []).append(part.part_id)
     for why, part_ids in unmeasured.items():
         notes.warn(f"not measured, because {why}: {', '.join(part_ids)}")
-    for stage in sequence.stage:
+    for stage in _sweeps(sequence):
         check_reach(stage, given.reach, notes)
     if parts and not planned and not len(notes.problems):
         notes.sequence(
@@ -169,17 +239,46 @@ def _plan(
     return tuple(planned), (*_clipped(sequence, planned, given), *_left_out(biases, given))
 
 
-def _warn_of_idle_stages(sequence: Sequence, planned: Listed[PlannedSweep], notes: Notes) -> None:
+def _plan_one(
+    stage: StageTable,
+    part: Part,
+    number: int,
+    sequence: Sequence,
+    given: Given,
+    high: High,
+    notes: Notes,
+) -> tuple[PlannedStage | None, tuple[BiasOf, ...]]:
+    """One stage for one part, by its kind; a kind that it is not for was noted before."""
+    if isinstance(stage, SweepStage):
+        return plan_sweep(stage, part, number=number, given=given, notes=notes)
+    if not isinstance(stage, DirectStage) or part.kind not in stage.for_kinds:
+        return None, ()
+    task = Task(
+        part=part,
+        number=number,
+        key=f"stage[{stage.place}]",
+        high=high,
+        share=sequence.rating_allowed,
+        notes=notes,
+    )
+    return plan_direct(stage, task), ()
+
+
+def _sweeps(sequence: Sequence) -> list[SweepStage]:
+    return [stage for stage in sequence.stage if isinstance(stage, SweepStage)]
+
+
+def _warn_of_idle_stages(sequence: Sequence, planned: Listed[PlannedStage], notes: Notes) -> None:
     used = {stage.stage for stage in planned}
     for stage in sequence.stage:
         if stage.name not in used:
             notes.warn(f"stage {stage.name} is for no part of this lot")
 
 
-def _clipped(sequence: Sequence, planned: Listed[PlannedSweep], given: Given) -> list[CannotReach]:
+def _clipped(sequence: Sequence, planned: Listed[PlannedStage], given: Given) -> list[CannotReach]:
     """Frequencies of a clipped range that the meter does not have."""
     found: list[CannotReach] = []
-    for stage in sequence.stage:
+    for stage in _sweeps(sequence):
         reached = reachable_frequencies(stage, given.reach)
         lost = [f for f in stage.frequencies_hz if f not in reached]
         parts = tuple(one.part.part_id for one in planned if one.stage == stage.name)
@@ -225,7 +324,7 @@ def _frequencies_text(lost: Listed[float]) -> str:
     )
 
 
-def _energising(planned: Listed[PlannedSweep]) -> tuple[str, ...]:
+def _energising(planned: Listed[PlannedStage]) -> tuple[str, ...]:
     """Names of stages that put a hazardous voltage on a part.
 
     Stages of a kind that exists for it, and sweeps whose bias with its level passes the
@@ -235,10 +334,13 @@ def _energising(planned: Listed[PlannedSweep]) -> tuple[str, ...]:
         stage.stage
         for stage in planned
         if STAGE_TABLES[stage.kind].energises
-        or any(
-            point.bias_v
-            and peak_voltage_v(bias_v=point.bias_v, level_v=point.level_v) > LIVE_DC_V.value
-            for point in stage.points
+        or (
+            isinstance(stage, PlannedSweep)
+            and any(
+                point.bias_v
+                and peak_voltage_v(bias_v=point.bias_v, level_v=point.level_v) > LIVE_DC_V.value
+                for point in stage.points
+            )
         )
     ]
     return tuple(dict.fromkeys(names))

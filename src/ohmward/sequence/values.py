@@ -82,6 +82,31 @@ def read_bias(value: object, *, written: bool) -> Bias:
     raise wrong(expected, f"'{value}'", "wrong-unit-or-value")
 
 
+def read_voltage(value: object, *, written: bool) -> Bias:
+    """``"400 V"``, ``"100 % of rating"``: above zero; raises PydanticCustomError."""
+    return _read_one(value, "V", "a voltage such as '400 V' or '100 % of rating'")
+
+
+def read_current(value: object, *, written: bool) -> Bias:
+    """``"10 mA"``, ``"10 % of rating"``: above zero; raises PydanticCustomError."""
+    return _read_one(value, "A", "a current such as '10 mA' or '10 % of rating'")
+
+
+def _read_one(value: object, unit: str, expected: str) -> Bias:
+    if isinstance(value, Bias) and value.unit in {unit, "1"}:
+        return value
+    if isinstance(value, int | float) and not isinstance(value, bool):
+        raise wrong(expected, f"{value}, which has no unit", "missing-unit")
+    if not isinstance(value, str):
+        raise wrong(expected, value)
+    share = clean(value).removesuffix("of rating").strip()
+    unit = "1" if share.endswith("%") else unit
+    found = _read_in(share if unit == "1" else value, unit, expected)
+    if found <= 0:
+        raise wrong(f"{expected}, above zero", f"'{value}'", "out-of-range")
+    return Bias(found, unit)
+
+
 def read_part_value(value: object, *, written: bool) -> PartValue:
     """``"1 nF"``, ``"10 mH"``, ``"4.7 kohm"``: above zero; raises PydanticCustomError."""
     expected = "a value such as '1 nF', '10 mH' or '4.7 kohm'"
@@ -130,6 +155,9 @@ def _bound_expected(unit: str) -> str:
         "ohm": "a bound such as '47 mohm' or '-5 %'",
         "Hz": "a bound such as '1 MHz'",
         "rad": "a bound such as '-1.55 rad' or '-89 deg'",
+        "A": "a bound such as '15 nA'",
+        "V": "a bound such as '400 V'",
+        "s": "a bound such as '1000 s'",
     }.get(unit, f"a bound in {unit}")
 
 
@@ -178,4 +206,20 @@ BiasSetting = Annotated[
 NominalValue = Annotated[
     PartValue,
     ReadBy(read_part_value, "a nominal value in F, H or ohm", ("1 nF", "10 mH", "4.7 kohm")),
+]
+VoltageSetting = Annotated[
+    Bias,
+    ReadBy(
+        read_voltage,
+        "a direct voltage, or a share of the part's own rating",
+        ("400 V", "100 % of rating"),
+    ),
+]
+CurrentSetting = Annotated[
+    Bias,
+    ReadBy(
+        read_current,
+        "a direct current, or a share of the part's own rating",
+        ("10 mA", "10 % of rating"),
+    ),
 ]

@@ -25,6 +25,8 @@ Capacitance = Annotated[float, quantity("F", minimum=0)]
 Resistance = Annotated[float, quantity("ohm", minimum=0)]
 Energy = Annotated[float, quantity("J", above=0)]
 Power = Annotated[float, quantity("W", above=0)]
+Share = Annotated[float, quantity("1", above=0, maximum=1)]
+Drift = Annotated[float, quantity("V/s", minimum=0)]
 ContactRating = Annotated[float, quantity("V", minimum=0)]
 ContactCurrent = Annotated[float, quantity("A", minimum=0)]
 
@@ -126,6 +128,15 @@ class HighVoltage(Model):
     )
     divider_ceiling_v: PositiveVolts = Field(
         alias="divider_ceiling", description="what the divider stands"
+    )
+    divider_rel: Share | None = Field(
+        None, alias="divider_tolerance", description="how well the divider's resistance is known"
+    )
+    insulation_ohm: PositiveOhms | None = Field(
+        None, alias="insulation", description="of fixture, relays and cables across a part"
+    )
+    supply_drift_v_per_s: Drift | None = Field(
+        None, alias="supply_drift", description="how fast the supply's voltage may wander"
     )
     meter_survives_a: PositiveAmperes | None = Field(
         None,

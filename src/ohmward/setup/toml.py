@@ -163,6 +163,9 @@ def _note(
         if item["type"] == "too_short" and len(item["input"]) >= item["ctx"]["min_length"]:
             continue  # pydantic counts only the items that are right
         kind, expected, found = _told(item, model, data, where)
+        if item["type"] in _TAGS and isinstance(item["ctx"].get("discriminator"), str):
+            word = item["ctx"]["discriminator"].strip("'")
+            where = (*where, word) if word.isidentifier() else where
         wanted = gathered.setdefault((kind, dotted(where), found), [])
         if expected not in wanted:
             wanted.append(expected)  # the members of a union each say what they wanted
@@ -191,7 +194,7 @@ def _told(
         return "unknown-word", context["expected"], found
     if kind in _TYPES:
         return "wrong-type", _TYPES[kind], found
-    if kind in {"union_tag_invalid", "union_tag_not_found"}:
+    if kind in _TAGS:
         tag = context["discriminator"]
         expected = f"{tag} to be one of {context['expected_tags']}" if "tag" in context else tag
         return "unknown-word", expected, shown(context.get("tag"))
@@ -202,6 +205,7 @@ def _told(
     return "wrong-value", item["msg"].removeprefix("Input should be "), found
 
 
+_TAGS = frozenset({"union_tag_invalid", "union_tag_not_found"})
 _TYPES = {
     "string_type": "text in quotes",
     "int_type": "a whole number",

@@ -8,7 +8,9 @@ class Limit:
     """Bounds on one quantity of one part at one condition, in the quantity's SI unit.
 
     A condition that is None is not a condition: the limit then holds at every point of its
-    stage. At least one of ``minimum`` and ``maximum`` is set.
+    stage. ``since_voltage_s`` counts from the part's voltage within 1 % of ``voltage_v``, or for
+    what comes back after a short, from the end of the short. At least one
+    of ``minimum`` and ``maximum`` is set.
     """
 
     part_id: str
@@ -23,3 +25,5 @@ class Limit:
     bias_a: float | None = None
     reference_temperature_c: float | None = None
     reference_age_s: float | None = None
+    voltage_v: float | None = None
+    since_voltage_s: float | None = None

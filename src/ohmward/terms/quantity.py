@@ -17,8 +17,10 @@ _R = frozenset({Kind.RESISTOR})
 class Quantity:
     """A quantity that a limit may name.
 
-    ``per`` says what one value belongs to: ``point`` (a frequency, level and bias), or
-    ``part`` (one value for the whole stage, such as a self-resonance).
+    ``per`` says what one value belongs to: ``point`` (a frequency, level and bias), ``part``
+    (one value for a whole sweep, such as a self-resonance), ``time`` (a direct voltage and the
+    time that the part has had it), or ``hold`` (one value for a whole stage under voltage or
+    direct current).
     """
 
     name: str
@@ -26,6 +28,14 @@ class Quantity:
     kinds: frozenset[Kind]
     per: str
     meaning: str
+
+
+def _time(name: str, unit: str, meaning: str) -> Quantity:
+    return Quantity(name=name, unit=unit, kinds=_C, per="time", meaning=meaning)
+
+
+def _hold(name: str, unit: str, kinds: frozenset[Kind], meaning: str) -> Quantity:
+    return Quantity(name=name, unit=unit, kinds=kinds, per="hold", meaning=meaning)
 
 
 def _point(name: str, unit: str, kinds: frozenset[Kind], meaning: str) -> Quantity:
@@ -68,5 +78,15 @@ QUANTITIES: dict[str, Quantity] = {
             )
             for percent in (10, 20, 30)
         ),
+        _time("leakage_a", "A", "current through the part under direct voltage"),
+        _time("insulation_ohm", "ohm", "insulation resistance, voltage over leakage"),
+        _time("insulation_time_s", "s", "insulation resistance times capacitance, R·C"),
+        _hold("absorption_ratio", "1", _C, "insulation resistance after 60 s over that after 30 s"),
+        _hold("polarization_index", "1", _C, "insulation resistance after 10 min over 1 min"),
+        _hold("absorption_rel", "1", _C, "voltage that comes back after a short, over the first"),
+        _hold("reformed_v", "V", _C, "highest voltage at which reforming let the leakage fall"),
+        _hold("withstood_v", "V", _C, "proof voltage that did not break the part down for good"),
+        _hold("winding_ohm", "ohm", _L, "resistance of the winding to direct current"),
+        _hold("direct_ohm", "ohm", _R, "resistance to direct current"),
     )
 }
