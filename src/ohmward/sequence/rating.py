@@ -52,14 +52,18 @@ def resolve_bias(bias: Bias, part: Part, key: str, notes: Notes) -> tuple[float,
             _rating_missing(part, notes, "rated_voltage")
             return None
         return bias.value * part.rated_v, 0.0
-    if bias.unit == "working":
+    if bias.unit == "working" and part.kind is not Kind.INDUCTOR:
         if part.working_v is None:
             _rating_missing(part, notes, "working_voltage")
             return None
         return part.working_v, 0.0
     if bias.value == 0:
         return 0.0, 0.0
-    wrong = {("V", Kind.INDUCTOR): "a current", ("A", Kind.CAPACITOR): "a voltage"}
+    wrong = {
+        ("working", Kind.INDUCTOR): "a current",
+        ("V", Kind.INDUCTOR): "a current",
+        ("A", Kind.CAPACITOR): "a voltage",
+    }
     wanted = wrong.get((bias.unit, part.kind))
     if wanted is not None:
         notes.sequence(

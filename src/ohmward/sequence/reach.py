@@ -10,6 +10,7 @@ from ohmward.sequence.values import Bias
 from ohmward.setup.driver import Driver, Setting
 from ohmward.units.values import format_quantity
 
+OF_THE_PART = frozenset({"1", "working"})  # units of a bias that each part's own row settles
 BIAS_SETTINGS = {"V": "bias_voltage", "A": "bias_current"}
 
 
@@ -135,7 +136,9 @@ def check_reach(stage: SweepStage, reach: Reach, notes: Notes) -> None:
 
 def can_bias(bias: Bias, reach: Reach) -> bool:
     """Whether the meter can set this bias; a share of the rating is looked at part by part."""
-    return bias.unit == "1" or bias.value == 0 or reach.can(BIAS_SETTINGS[bias.unit], bias.value)
+    if bias.unit in OF_THE_PART or bias.value == 0:
+        return True
+    return reach.can(BIAS_SETTINGS[bias.unit], bias.value)
 
 
 def _check_frequencies(stage: SweepStage, reach: Reach, notes: Notes, key: str) -> None:

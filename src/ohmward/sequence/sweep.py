@@ -6,7 +6,7 @@ from ohmward.sequence.brief import PlannedSweep, Settle
 from ohmward.sequence.model import SweepStage
 from ohmward.sequence.notes import Notes
 from ohmward.sequence.rating import Allowance, Stress, check_stress, resolve_bias
-from ohmward.sequence.reach import BIAS_SETTINGS, Reach, reachable_frequencies
+from ohmward.sequence.reach import BIAS_SETTINGS, OF_THE_PART, Reach, reachable_frequencies
 from ohmward.sequence.values import Bias
 from ohmward.terms.condition import Point
 from ohmward.terms.part import Part
@@ -92,7 +92,7 @@ def _biases(
         one = BiasOf(written=bias, volts=volts, amperes=amperes)
         stress = Stress(bias_v=volts, bias_a=amperes, level_v=max(stage.level))
         check_stress(stress, part, key, notes, given.allowance)
-        if bias.unit in ("1", "working") and not _meter_can(one, given.reach):
+        if bias.unit in OF_THE_PART and not _meter_can(one, given.reach):
             left_out.append(one)
         else:
             reached.append(one)
