@@ -8,8 +8,10 @@ from ohmward.errors import Problems
 from ohmward.sequence.brief import Brief
 from ohmward.sequence.load import load_sequence
 from ohmward.sequence.unroll import unroll
-from ohmward.setup.bench import Bench
+from ohmward.setup.bench import Bench, load_bench
+from ohmward.setup.bench_drivers import load_drivers
 from ohmward.setup.driver import Driver, load_driver
+from ohmward.setup.resources import shipped
 from ohmward.setup.toml import validate
 from ohmward.terms.kind import Kind
 from ohmward.terms.part import Part
@@ -77,6 +79,20 @@ def shipped_drivers() -> dict[str, Driver]:
 DRIVERS = shipped_drivers()
 
 
+def high_bench() -> tuple[Bench, dict[str, Driver]]:
+    """The shipped bench for rated voltage (16 positions, 10 kohm each, 800 V) and its drivers."""
+    problems = Problems()
+    found = load_bench(shipped("simulators") / "depot-retest-bench.toml", problems)
+    assert found is not None, [str(problem) for problem in problems]
+    drivers = load_drivers(found, problems)
+    assert drivers is not None
+    assert not len(problems)
+    return found, dict(drivers)
+
+
+HIGH, HIGH_DRIVERS = high_bench()
+
+
 def capacitor(part_id: str = "C1", nominal: float = 100e-9, **more: Any) -> Part:
     """A capacitor, 100 nF ± 10 % 100 V PP unless told otherwise."""
     plain: dict[str, Any] = {
@@ -133,6 +149,11 @@ class Made:
         """The brief; fails with the problems where there is none."""
         assert self.brief is not None, "\n".join(str(problem) for problem in self.problems)
         return self.brief
+
+
+def make_high(folder: Path, text: str, *parts: Part, on: Bench | None = None) -> Made:
+    """`make` on the bench for rated voltage; parts lie at its positions '1' to '16'."""
+    return make(folder, text, *parts, on=on or HIGH, drivers=HIGH_DRIVERS)
 
 
 def make(

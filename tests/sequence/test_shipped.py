@@ -6,7 +6,17 @@ from pathlib import Path
 
 import jsonschema
 import pytest
-from tests.sequence.given import CAPACITORS, DRIVERS, SWEEP, bench, capacitor, inductor, resistor
+from tests.sequence.given import (
+    CAPACITORS,
+    DRIVERS,
+    HIGH,
+    HIGH_DRIVERS,
+    SWEEP,
+    bench,
+    capacitor,
+    inductor,
+    resistor,
+)
 
 from ohmward.errors import Problems
 from ohmward.sequence.brief import Brief
@@ -20,6 +30,8 @@ from ohmward.terms.part import Part
 
 FILES = sorted(shipped("sequences").glob("*.toml"))
 SCHEMA = shipped("schemas") / "sequence.json"
+
+ENERGISING = {"absorption", "coupling-retest", "electrolytic-retest", "film-retest", "proof"}
 
 
 def tray() -> tuple[Part, ...]:
@@ -48,11 +60,15 @@ def brief_of(path: Path) -> Brief:
     problems = Problems()
     sequence = load_sequence(path, problems)
     assert sequence is not None
+    high = any(stage.energises for stage in sequence.stage)
+    parts = tray()
+    if high:
+        parts = tuple(replace(part, position=part.position.removeprefix("P")) for part in parts)
     brief = unroll(
         sequence,
-        bench=bench(positions=14),
-        drivers=DRIVERS,
-        parts=tray(),
+        bench=HIGH if high else bench(positions=14),
+        drivers=HIGH_DRIVERS if high else DRIVERS,
+        parts=parts,
         sequence_file=path,
         parts_file=Path("parts.csv"),
         problems=problems,
@@ -63,6 +79,7 @@ def brief_of(path: Path) -> Brief:
 
 def test_the_named_ones_are_there() -> None:
     assert {path.stem for path in FILES} >= {
+        *ENERGISING,
         "ceramic-bias",
         "day-soak",
         "depot-survey",
@@ -126,7 +143,8 @@ def test_it_can_be_carried_out_and_decided_on_the_shipped_meter(path: Path) -> N
     judged = {limit.part_id for limit in brief.limits}
     assert judged == {part.part_id for part in brief.parts}
     assert [doubt.reason for doubt in brief.cannot_decide] == []
-    assert brief.energising == ()
+    assert bool(brief.energising) == (path.stem in ENERGISING)
+    assert brief.needs_authorisation == (path.stem in ENERGISING)
 
 
 def test_the_depot_survey_leaves_no_part_out() -> None:

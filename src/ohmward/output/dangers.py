@@ -142,7 +142,12 @@ def what_is_done(stage: PlannedDirect) -> str:
 
 def _floor_table(floors: Sequence[LeakageFloor]) -> Table:
     table = _table("part", "stage", "voltage", "after", "leakage seen from", "range")
-    for one in floors:
+    worst: dict[tuple[str, str], LeakageFloor] = {}
+    for floor in floors:
+        known = worst.setdefault((floor.part_id, floor.stage), floor)
+        if floor.floor_a > known.floor_a:
+            worst[floor.part_id, floor.stage] = floor
+    for one in worst.values():
         seen = _said(one.floor_a, "A")
         if one.range_a is None:
             seen = "none: no range takes what flows"

@@ -29,16 +29,21 @@ def hazards_of(
     planned: Sequence[PlannedStage], high: High, *, meter_ohm: float, notes: Notes
 ) -> tuple[Hazard, ...]:
     """What each part may do, at the most that the run puts on it; warns of long discharges."""
-    found = []
-    for part, stages in _by_part(planned):
-        hazard = assess_part(_most(part, stages), _path(part, high, meter_ohm))
-        found.append(hazard)
-        if hazard.discharge_s > LONG_DISCHARGE_S:
-            notes.warn(
-                f"{part.part_id} takes {format_quantity(hazard.discharge_s, 's', 3)} to discharge "
-                f"from {format_quantity(hazard.peak_v, 'V')}: wait for it, also after a trip"
-            )
-    return tuple(found)
+    found = tuple(
+        assess_part(_most(part, stages), _path(part, high, meter_ohm))
+        for part, stages in _by_part(planned)
+    )
+    slow = [one for one in found if one.discharge_s > LONG_DISCHARGE_S]
+    if slow:
+        told = ", ".join(
+            f"{one.name} ({format_quantity(one.discharge_s, 's', 2)})"
+            for one in sorted(slow, key=lambda one: -one.discharge_s)
+        )
+        notes.warn(
+            f"these take more than {format_quantity(LONG_DISCHARGE_S, 's')} to discharge, also "
+            f"after a trip: {told}"
+        )
+    return found
 
 
 def nodes_of(planned: Sequence[PlannedStage], high: High) -> tuple[Hazard, ...]:

@@ -7,6 +7,7 @@ from ohmward.sequence.brief import CannotDecide, LeakageFloor
 from ohmward.sequence.high import High, capacitance_bounds
 from ohmward.sequence.model import DecisionTable
 from ohmward.sequence.planned import (
+    PlannedDirect,
     PlannedLeakage,
     PlannedReform,
     PlannedResistance,
@@ -209,6 +210,52 @@ def charging_warnings(
                 f"{format_quantity(since_s, 's')}, above 1 % of its limit: they must be fitted"
             )
     return found
+
+
+def stop_warnings(
+    limits: Sequence[Limit], planned: Sequence[PlannedStage], high: High
+) -> list[str]:
+    """Stages in which a part is stopped before its leakage can be what its limit allows.
+
+    The warden stops a part whose own voltage is 2 % below the set one; I·R of the series
+    resistor takes that at I = 0.02·V/R. The stage's own limits of current and power do too.
+    """
+    allowed_a = {
+        (limit.part_id, limit.stage): found
+        for limit in limits
+        for stage in planned
+        if isinstance(stage, PlannedLeakage)
+        and (limit.part_id, limit.stage) == (stage.part.part_id, stage.stage)
+        and (found := largest_leakage_a(limit, stage.part, stage.voltage_v)) is not None
+    }
+    early: dict[str, list[str]] = {}
+    for stage in planned:
+        if isinstance(stage, PlannedReform):
+            needed_a, volts = stage.next_below_a, stage.voltages_v[0]
+        elif isinstance(stage, PlannedLeakage):
+            needed_a = allowed_a.get((stage.part.part_id, stage.stage), 0.0)
+            volts = stage.voltage_v
+        else:
+            continue
+        stops_a = stopped_from_a(stage, volts, high)
+        if stops_a < needed_a:
+            told = f"{stage.part.part_id} ({_amperes(stops_a)} of {_amperes(needed_a)})"
+            early.setdefault(stage.stage, []).append(told)
+    return [
+        f"in stage {stage} these are stopped before their leakage is what it may be, by the "
+        f"series resistor's share of the voltage or by the stage's own limits: {', '.join(told)}"
+        for stage, told in early.items()
+    ]
+
+
+def stopped_from_a(stage: PlannedDirect, voltage_v: float, high: High) -> float:
+    """The current from which on the warden stops a part at this voltage (A)."""
+    wired = high.wired(stage.part)
+    series_ohm = 0.0 if wired is None else wired.series_ohm
+    drop_a = 2.0 * high.laws.within * voltage_v / series_ohm if series_ohm > 0.0 else inf
+    by_power_a = inf if stage.power_max_w is None else stage.power_max_w / voltage_v
+    by_current_a = inf if stage.current_max_a is None else stage.current_max_a
+    return min(drop_a, by_power_a, by_current_a)
 
 
 def _resistance_doubt(

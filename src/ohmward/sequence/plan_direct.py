@@ -3,9 +3,8 @@
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from itertools import pairwise
-from math import exp, inf
+from math import exp
 
-from ohmward.safety.permit import Laws
 from ohmward.sequence.direct import (
     AbsorptionStage,
     DirectStage,
@@ -37,7 +36,6 @@ from ohmward.terms.part import Part
 from ohmward.units.values import format_quantity
 
 DROOP_MOST_REL = 0.05
-DROP_MOST_REL = 2 * Laws().within  # the warden stops a part whose own voltage is further off
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -117,7 +115,6 @@ def _reform(stage: ReformStage, task: Task) -> PlannedDirect | None:
         )
         return None
     _check_voltage(volts[-1], task, f"{task.key}.voltages", task.share)
-    _warn_of_drop(stage, task, volts[0])
     ramp = task.high.ramp(stage.ramp, task.part)
     return PlannedReform(
         number=task.number,
@@ -150,22 +147,10 @@ def _next_below_a(stage: ReformStage, task: Task) -> float | None:
     except NotStated as reason:
         _not_stated(reason, rule.name, f"{task.key}.leakage_rule", task)
         return None
-    return None if largest is None else largest * stage.times
-
-
-def _warn_of_drop(stage: ReformStage, task: Task, lowest_v: float) -> None:
-    """A part that draws its limit must still have its voltage, or the warden stops it."""
-    wired = task.high.wired(task.part)
-    if wired is None or stage.current_limit is None:
-        return
-    most_a = DROP_MOST_REL * lowest_v / wired.series_ohm if wired.series_ohm > 0 else inf
-    if stage.current_limit > most_a:
-        task.notes.warn(
-            f"{task.part.part_id}, {stage.name}: at {_volts(lowest_v)} it is stopped from "
-            f"{format_quantity(most_a, 'A', 3)} on, not from "
-            f"{format_quantity(stage.current_limit, 'A', 3)}: the series resistor takes "
-            f"{100 * DROP_MOST_REL:g} % of the voltage then"
-        )
+    if largest is None:
+        return None
+    below_a = largest * stage.times
+    return below_a if stage.current_limit is None else min(below_a, stage.current_limit)
 
 
 def _proof(stage: ProofStage, task: Task) -> PlannedDirect | None:

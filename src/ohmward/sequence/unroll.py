@@ -21,7 +21,7 @@ from ohmward.sequence.compensated import Compensated, check_compensation
 from ohmward.sequence.dangers import attendance_of, hazards_of, nodes_of, permit_of
 from ohmward.sequence.direct import DirectStage
 from ohmward.sequence.fits import fits
-from ohmward.sequence.floor import cannot_decide_direct, charging_warnings, floors_of
+from ohmward.sequence.floor import cannot_decide_direct, charging_warnings, floors_of, stop_warnings
 from ohmward.sequence.high import High, high_of
 from ohmward.sequence.limits import resolve_limits
 from ohmward.sequence.model import STAGE_TABLES, Sequence, SweepStage
@@ -85,8 +85,9 @@ def unroll(
     hazards = hazards_of(planned, high, meter_ohm=meter_ohm, notes=notes)
     by_hand = bench.fixture.loading == "by hand"
     nodes = nodes_of(planned, high)
-    for text in charging_warnings(resolved.limits, planned, high):
-        notes.warn(text)
+    for warnings in (charging_warnings, stop_warnings):
+        for text in warnings(resolved.limits, planned, high):
+            notes.warn(text)
     digest = brief_hash(hashes)
     return Brief(
         name=sequence.name,
