@@ -60,10 +60,11 @@ class JudgedAgain:
 
 
 def judge_again(run: Path, *, limits: str | Path, out: Path | None = None) -> JudgedAgain:
-    """Decide a run's readings by the limits and the decision rule of another sequence file.
+    """Decide a run's sweeps by the limits and the decision rule of another sequence file.
 
-    The run's folder is only read. ``out`` is a new CSV file for all rows, with its metadata
-    beside it. Raises BadInput with every problem, also of limits on what was not measured.
+    What other stages decided stands. The run's folder is only read. ``out`` is a new CSV file
+    for all rows, with its metadata beside it. Raises BadInput with every problem, also of limits
+    on what was not measured.
     """
     past = past_run(run)
     path = find_file(str(limits), "sequences")
@@ -94,6 +95,8 @@ def judge_again(run: Path, *, limits: str | Path, out: Path | None = None) -> Ju
         run_id=past.run_id,
     )
     before = _decided_then(past)
+    swept = {stage.stage for stage in past.sweeps}
+    after += [row for row in before if row["stage"] not in swept]  # as they were decided then
     if out is not None:
         with TableWriter(out.parent, replace(columns.RESULTS, file=out.name)) as table:
             table.rows(after)
