@@ -19,6 +19,8 @@ from ohmward.terms.part import Part
 
 ResultRow = dict[str, object]
 
+LOOK_S = 5.0  # a simulated part needs no closer watch than its readings, and looking takes time
+
 
 class SimulatedOperator:
     """The person at a hand-loaded fixture, who is at once and always right."""
@@ -72,6 +74,7 @@ def connections(bench: SimulatedBench) -> Connections:
         manager=pyvisa.ResourceManager(library),
         waiter=VirtualWaiter(),
         operator=SimulatedOperator(bench),
+        look_s=LOOK_S,
     )
 
 

@@ -149,3 +149,14 @@ def _drains_ohm(supply: Driver, path: HighVoltage) -> float:
     """
     stated = supply.supply.off_impedance if supply.supply else None
     return min(path.bleeder_ohm or inf, stated or inf)
+
+
+def error_a(ammeter: Driver, current_a: float) -> float:
+    """Half-width of what a current meter reads at this current, on a range with room for it (A).
+
+    Raises ValueError where its driver states no accuracy.
+    """
+    ranges = _scalar(ammeter).ranges
+    fits = (one for one in ranges if one.full_scale > 2.0 * abs(current_a))
+    range_ = next(fits, ranges[-1])
+    return range_.reading_rel * abs(current_a) + range_.offset

@@ -21,15 +21,18 @@ from ohmward.errors import (
     Stopped,
     WrongIdentity,
 )
-from ohmward.run.bench import Connections, OpenBench, open_bench
+from ohmward.run.bench import Connections, Leave, OpenBench, open_bench
+from ohmward.run.high_voltage import error_a
+from ohmward.run.holding import Holding
 from ohmward.run.recorder import Recorder
 from ohmward.run.stopping import StopSignals, catch_signals
 from ohmward.run.sweep import Room, Sweep
 from ohmward.run.watcher import Watcher
 from ohmward.safety.handle import Ending
-from ohmward.sequence.brief import Brief, PlannedStage
+from ohmward.sequence.brief import Brief, PlannedDirect, PlannedStage, PlannedSweep
 from ohmward.setup.bench import Bench
 from ohmward.setup.driver import Driver
+from ohmward.terms.role import Role
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -83,7 +86,8 @@ async def _on_open_bench(
     """Open the bench, see that it is the right one, work on it and leave it at rest."""
     opened = False
     try:
-        async with open_bench(order.bench, order.drivers, connections) as bench:
+        leave = _leave(order, recorder)
+        async with open_bench(order.bench, order.drivers, connections, leave) as bench:
             opened = True
             await _note_identities(order, bench, recorder)
             await _work_then_end(order, bench, recorder, watcher)
@@ -134,11 +138,52 @@ async def _work(order: Order, bench: OpenBench, recorder: Recorder, watcher: Wat
     await bench.meter.rest()  # before any relay moves: it may stand there with its bias on
     await bench.warden.start()
     room = Room(bench.thermometer)
+    given_up: dict[str, NotProvenSafe] = {}
     for stage in order.brief.stages:
-        if stage.number in order.ended:
+        part_id = stage.part.part_id
+        if stage.number in order.ended or part_id in given_up:
             continue
         watcher.stage(stage)
-        taken = order.taken.get(stage.number, set())
+        await recorder.stage_begun(stage)
+        state = "stopped"
+        try:
+            await _stage(stage, order, bench, room, recorder, watcher)
+            state = "ended"
+        except NotProvenSafe as error:
+            if bench.high_voltage is None or bench.high_voltage.tripped:
+                raise
+            # it stays cut off from everything else: the lot goes on, and the end says so
+            given_up[part_id] = error
+            await recorder.event("given-up", str(error), part=stage.part, stage=stage.stage)
+            watcher.note(f"{part_id}: {error}")
+        finally:
+            with trio.CancelScope(shield=True):
+                await _note_stage_end(recorder, stage, state)
+
+
+async def _stage(
+    stage: PlannedStage,
+    order: Order,
+    bench: OpenBench,
+    room: Room,
+    recorder: Recorder,
+    watcher: Watcher,
+) -> None:
+    """One stage of one part, by what kind of stage it is."""
+    if isinstance(stage, PlannedDirect):
+        if bench.high_voltage is None:
+            raise OhmwardError(f"{order.bench.name} cannot energise, and {stage.stage} does")
+        name = order.bench.name_of_role(Role.CURRENT_METER)
+        await Holding(
+            stage,
+            warden=bench.high_voltage,
+            meter_name=name,
+            error_a=partial(error_a, order.drivers[name]),
+            room=room,
+            recorder=recorder,
+            watcher=watcher,
+        ).carry_out()
+    elif isinstance(stage, PlannedSweep):
         sweep = Sweep(
             stage,
             meter=bench.meter,
@@ -149,17 +194,21 @@ async def _work(order: Order, bench: OpenBench, recorder: Recorder, watcher: Wat
             watcher=watcher,
             compensated=bool(order.compensated_by),
         )
-        await recorder.stage_begun(stage)
-        state = "stopped"
-        try:
-            await bench.warden.lease(stage.part.position, stage.part.part_id)
-            await sweep.carry_out(taken)
-            await bench.meter.rest()
-            await bench.warden.release()
-            state = "ended"
-        finally:
-            with trio.CancelScope(shield=True):
-                await _note_stage_end(recorder, stage, state)
+        await bench.warden.lease(stage.part.position, stage.part.part_id)
+        await sweep.carry_out(order.taken.get(stage.number, set()))
+        await bench.meter.rest()
+        await bench.warden.release()
+    else:
+        raise OhmwardError(f"nobody carries out a stage of kind {stage.kind}")
+
+
+def _leave(order: Order, recorder: Recorder) -> Leave | None:
+    """What this run may do with high voltage, as its brief's permit says."""
+    permit = order.brief.permit
+    if permit is None:
+        return None
+    biases = [point.bias_v for stage in order.brief.sweeps for point in stage.points]
+    return Leave(permit=permit, meter_bias_v=max(biases, default=0.0), events=recorder)
 
 
 async def _note_stage_end(recorder: Recorder, stage: PlannedStage, state: str) -> None:

@@ -19,9 +19,10 @@ class Hold:
     """Charge a part, soak it, read its current; then discharge it and prove it dead.
 
     Readings are taken ``every_s`` and at the times ``also_s``, counted from when the part's
-    own voltage is within 1 % of the set voltage. ``measured_f`` is its capacitance, where a
-    sweep has measured it. The part stops when its net current passes ``current_max_a`` or
-    voltage × current passes ``power_max_w``.
+    own voltage is within 1 % of the set voltage, or within ``within_rel`` where that is given:
+    an oxide that forms draws current through the series resistor. ``measured_f`` is the part's
+    capacitance, where a sweep has measured it. The part stops when its net current passes
+    ``current_max_a`` or voltage × current passes ``power_max_w``.
     """
 
     __pydantic_config__: ClassVar[ConfigDict] = _LINE
@@ -34,6 +35,7 @@ class Hold:
     every_s: float
     also_s: tuple[float, ...] = ()
     measured_f: float | None = None
+    within_rel: float | None = None
     current_max_a: float = inf
     power_max_w: float = inf
 

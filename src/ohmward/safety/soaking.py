@@ -124,7 +124,7 @@ class Charger:
             if volts > max(0.5 * course.set_v, 2.0 * desk.laws.dead_v):
                 known.witnessed = True  # the voltmeter follows what is applied
             await self._check_bypass_closed(supply)
-            if course.set_v == to_v and volts >= (1.0 - desk.laws.within) * to_v:
+            if course.set_v == to_v and volts >= (1.0 - self._within(hold)) * to_v:
                 break
             if limit_is_fault(desk.laws, elapsed_s=spent_s, expected_s=expected_s):
                 raise PartFault(_why_low(volts, course.set_v, supply))
@@ -133,6 +133,10 @@ class Charger:
         course.ramp_s = desk.time.now_s() - began_s
         await self._positions.event(hold.position, PositionEvent.REACHED)
         desk.source.reached()
+
+    def _within(self, hold: Hold) -> float:
+        """How far below the set voltage the part's own may be and count as reached (share)."""
+        return self._desk.laws.within if hold.within_rel is None else hold.within_rel
 
     async def _check_bypass_closed(self, supply: SupplyReading) -> None:
         """While a ramp's current flows, the bypassed current meter must not see it."""
@@ -174,7 +178,7 @@ class Charger:
         """One look at a part that has its voltage."""
         desk, known = self._desk, self._positions.charge(hold.position)
         supply, volts = await self._look(hold, course)
-        if abs(volts - course.set_v) > 2.0 * desk.laws.within * course.set_v:
+        if abs(volts - course.set_v) > 2.0 * self._within(hold) * course.set_v:
             raise PartFault(_why_low(volts, course.set_v, supply))
         if supply.limiting:
             raise PartFault("it draws the current limit")

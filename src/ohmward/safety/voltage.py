@@ -92,6 +92,11 @@ class HighVoltageWarden:
         """The position that the meter is connected to."""
         return self._desk.ledger.leased
 
+    @property
+    def tripped(self) -> bool:
+        """Whether it has tripped: then nothing is energised or connected any more."""
+        return self._desk.ledger.tripped
+
     # ---- the handle
 
     async def start(self) -> None:
