@@ -187,7 +187,7 @@ def test_a_link_that_stays_lost_is_not_proven_safe():
         warden = warden_of(relays)
         await warden.start()
         await warden.lease("1")
-        relays.link_fails_on += ["open", "open_all", "open_all"]
+        relays.link_fails_on += ["open", *4 * ["open_all"]]
         with pytest.raises(NotProvenSafe):
             await warden.release()
         assert not (await warden.stop()).proven

@@ -65,8 +65,13 @@ class ScannerWarden:
         """Whether the leased contacts, and no others, read back closed."""
         if self._leased is None:
             return False
+        channels = frozenset(self._meter_channels[self._leased])
         try:
-            return await self._scanner.closed() == frozenset(self._meter_channels[self._leased])
+            return await self._scanner.closed() == channels
+        except LinkError:
+            pass  # asking again moves nothing, and first recovers the link
+        try:
+            return await self._scanner.closed() == channels
         except LinkError as error:
             await self._open_everything(f"after a fault on the scanner's link ({error})")
             raise
@@ -104,18 +109,29 @@ class ScannerWarden:
         raise SafetyTrip(reason)
 
     async def _open_everything(self, when: str) -> None:
-        """Open every relay and read back that none is closed, else raise NotProvenSafe."""
+        """Open every relay and read back that none is closed, else raise NotProvenSafe.
+
+        A link that fails meanwhile gets a second go, which recovers it first: opening what is
+        open already does no harm.
+        """
         with trio.CancelScope(shield=True):
             try:
-                await self._scanner.open_all()
-                still = await self._scanner.closed()
-            except LinkError as error:
-                raise NotProvenSafe(
-                    f"the relays could not be opened {when}: {error}; by hand: {BY_HAND}"
-                ) from error
+                still = await self._all_opened()
+            except LinkError:
+                try:
+                    still = await self._all_opened()
+                except LinkError as error:
+                    raise NotProvenSafe(
+                        f"the relays could not be opened {when}: {error}; by hand: {BY_HAND}"
+                    ) from error
         if still:
             raise NotProvenSafe(f"{_named(still)} will not open {when}; by hand: {BY_HAND}")
         self._leased = None
+
+    async def _all_opened(self) -> frozenset[str]:
+        """Open every relay; returns those that read back closed all the same."""
+        await self._scanner.open_all()
+        return await self._scanner.closed()
 
 
 class HandLoadedWarden:
