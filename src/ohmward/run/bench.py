@@ -14,6 +14,7 @@ from ohmward.instruments.talker import Talker, open_talker
 from ohmward.instruments.thermometer import Thermometer
 from ohmward.links.waiter import Waiter
 from ohmward.run.high_voltage import high_voltage_warden
+from ohmward.run.persistent import PersistentWarden
 from ohmward.safety.equipment import Operator
 from ohmward.safety.handle import Warden
 from ohmward.safety.inprocess import HandLoadedWarden, ScannerWarden
@@ -144,9 +145,11 @@ def _gather(
     if high is not None:
         warden = high
     elif bench.fixture.loading == "scanner":
-        warden = ScannerWarden(
-            scanner=Scanner(talkers[names[Role.SCANNER]]),
-            meter_channels={place.name: place.meter_channels for place in bench.positions},
+        warden = PersistentWarden(
+            ScannerWarden(
+                scanner=Scanner(talkers[names[Role.SCANNER]]),
+                meter_channels={place.name: place.meter_channels for place in bench.positions},
+            )
         )
     else:
         warden = HandLoadedWarden(
