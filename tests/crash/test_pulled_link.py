@@ -190,3 +190,19 @@ def test_a_silence_is_kept_as_a_timeout(tmp_path: Path, program: Program) -> Non
     dry = workbench.dry_run()
     assert [place[:-1] for place in places(out)] == [place[:-1] for place in places(dry)]
     assert decisions(out) == decisions(dry)
+
+
+@pytest.mark.parametrize("asked", range(9))
+def test_a_scanner_that_drops_its_link_at_any_step(tmp_path: Path, asked: int) -> None:
+    """At the start and in the first lease; whichever read-back is cut off, the run goes on."""
+    workbench = job(tmp_path, PATIENT, PATIENT)
+    workbench.write("sequence.toml", sequence(repeats="1"))
+    with Served(workbench, faulty=("switch",)) as served:
+        read_back = Fault(kind="disconnect", matching=b"CLOS:STAT?", after=asked, delay_s=0.2)
+        served.layer("switch").inject(read_back)
+        out = workbench.run()
+        assert served.layer("switch").struck
+        assert served.at_rest()
+    dry = workbench.dry_run()
+    assert places(out) == places(dry)
+    assert decisions(out) == decisions(dry)

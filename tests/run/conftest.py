@@ -1,4 +1,4 @@
-"""The program, loaded once for all tests of a module."""
+"""The program, loaded once for all tests of this folder."""
 
 from collections.abc import Iterator
 
@@ -6,7 +6,7 @@ import pytest
 from tests.run.program import Program
 
 
-@pytest.fixture(scope="module")
+@pytest.fixture(scope="session")
 def program(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Program]:
     with Program(tmp_path_factory.mktemp("processes")) as program:
         yield program

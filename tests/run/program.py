@@ -90,6 +90,11 @@ class Running:
         """Send it a signal."""
         os.kill(self.pid, number)
 
+    @property
+    def said(self) -> str:
+        """What it has written to standard error so far."""
+        return (self._folder / "err").read_text("utf-8")
+
     def until(self, true: Callable[[], bool], seconds: float = PATIENCE_S) -> None:
         """Return as soon as it is true, which it becomes before the process ends."""
         end_s = time.monotonic() + seconds
