@@ -7,6 +7,7 @@ JCGM 100 (first order, k from effective degrees of freedom) where its conditions
 
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
+from functools import lru_cache
 from math import atan2, cos, hypot, inf, isfinite, isinf, isnan, nan, sin, sqrt
 
 import numpy as np
@@ -168,14 +169,20 @@ def draw(z: UncertainImpedance, count: int = SAMPLES) -> tuple[FloatArray, Float
         _add(r, x, tuple(float(number) for number in total), _normal(count, point), 1.0)
     if z.repeat[0] > 0 or z.repeat[1] > 0:
         two = _normal(count, point)
-        scale: FloatArray | float = 1.0
-        if not isinf(z.degrees):
-            from scipy.special import chdtri
-
-            chance = uniform_points(count, 12)[next(point)]
-            scale = np.sqrt(z.degrees / chdtri(z.degrees, chance))
+        scale = 1.0 if isinf(z.degrees) else _scale_of_t(z.degrees, count, next(point))
         _add(r, x, z.repeat, two, scale)
     return r, x
+
+
+@lru_cache(maxsize=16)
+def _scale_of_t(degrees: float, count: int, dimension: int) -> FloatArray:
+    """√(ν/χ²) of each sample: what makes normal deviates those of a t; not to be written to."""
+    from scipy.special import chdtri
+
+    chance = uniform_points(count, 12)[dimension]
+    scale: FloatArray = np.sqrt(degrees / chdtri(degrees, chance))
+    scale.setflags(write=False)
+    return scale
 
 
 def _stated_samples(
