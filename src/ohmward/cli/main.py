@@ -87,6 +87,8 @@ def _outcome() -> int:
     except SystemExit as left:
         if isinstance(left.__context__, BrokenPipeError):
             return 0  # whoever read our output has left, and had what was wanted
+        if isinstance(left.__context__, KeyboardInterrupt):
+            return _told(Stopped("stopped"))
         raise
     except OSError as error:
         where = error.filename or "what was to be said could not be written"
