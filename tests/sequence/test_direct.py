@@ -286,10 +286,10 @@ def test_charging_current_above_a_hundredth_of_the_limit_is_told(tmp_path: Path)
 
 
 def test_a_part_that_would_be_stopped_within_its_limit_is_told(tmp_path: Path) -> None:
-    """Above 2 % of 25 V over 10 kΩ, 50 µA, the part no longer has its voltage."""
+    """Above 20 % of 12.5 V over 10 kΩ, 250 µA, a forming part no longer has its voltage."""
     one = stored(rated_v=25.0, last_energised=None)
     text = CAPACITORS + REFORM.replace('"400 V", ', "")
-    assert any("E1 (25 µA of" in text for text in brief_of(tmp_path, text, one).warnings)
+    assert any("E1 (250 µA of" in text for text in brief_of(tmp_path, text, one).warnings)
 
 
 # ---- limits

@@ -6,6 +6,8 @@ from typing import ClassVar
 from ohmward.terms.condition import Point
 from ohmward.terms.part import Part
 
+FORMING_WITHIN_REL = 0.1  # how far below its voltage an oxide that forms may be held
+
 
 @dataclass(frozen=True, kw_only=True, slots=True)
 class Settle:
