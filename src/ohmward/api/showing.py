@@ -1,41 +1,36 @@
 """Prints what the other functions return, for people and for programs."""
 
-import json
 from math import isfinite, isinf, isnan
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING
 
 from rich.console import Console
 from rich.table import Table
 
-from ohmward.api import checking
-from ohmward.api.budgeting import BudgetOf
-from ohmward.api.judging import JudgedAgain
-from ohmward.api.running import Outcome
-from ohmward.instruments.exercise import Exercised
 from ohmward.instruments.transcript import escaped
 from ohmward.output import screen
-from ohmward.results.budgets import PointBudget
 from ohmward.results.reasons import condition
-from ohmward.sequence.brief import Brief
-from ohmward.setup.compensation_file import CompensationFile
-from ohmward.setup.driver import Driver
 from ohmward.units.values import format_quantity
+
+if TYPE_CHECKING:
+    from ohmward.api.budgeting import BudgetOf
+    from ohmward.api.judging import JudgedAgain
+    from ohmward.api.running import Outcome
+    from ohmward.instruments.exercise import Exercised
+    from ohmward.results.budgets import PointBudget
+    from ohmward.sequence.brief import Brief
+    from ohmward.setup.compensation_file import CompensationFile
+    from ohmward.setup.driver import Driver
 
 PIPE_COLUMNS = 120
 
 
-def as_json(value: Any) -> str:
-    """Indented JSON; NaN and infinities are refused, because JSON has none."""
-    return json.dumps(value, indent=1, ensure_ascii=False, allow_nan=False)
-
-
-def show_brief(brief: Brief) -> None:
+def show_brief(brief: "Brief") -> None:
     """Print a brief."""
     screen.show_brief(_console(), brief)
 
 
-def show_run(outcome: Outcome) -> None:
+def show_run(outcome: "Outcome") -> None:
     """Print the decisions of a finished run and where its tables are."""
     console = _console()
     screen.show_decisions(console, outcome.verdicts)
@@ -44,8 +39,10 @@ def show_run(outcome: Outcome) -> None:
     console.print(f"Tables and report: {outcome.folder}", markup=False, soft_wrap=True)
 
 
-def show_commands(driver: Driver) -> None:
+def show_commands(driver: "Driver") -> None:
     """Print what a driver without a problem sends."""
+    from ohmward.api import checking
+
     table = _table("entry", "command", "query")
     for row in checking.commands_of(driver):
         table.add_row(*row)
@@ -54,11 +51,13 @@ def show_commands(driver: Driver) -> None:
     console.print(f"{driver.name or driver.path.stem}: no problem found in the file")
 
 
-def show_exercise(driver: Driver, address: str) -> bool:
+def show_exercise(driver: "Driver", address: str) -> bool:
     """Try a driver on its instrument, printing each entry as it is done; True if all did well."""
+    from ohmward.api import checking
+
     console = _console()
 
-    def told(one: Exercised) -> None:
+    def told(one: "Exercised") -> None:
         sent = "  ".join(
             f"{escaped(e.sent) or '(nothing)'} -> {escaped(e.received)}" for e in one.exchanges
         )
@@ -74,6 +73,8 @@ def show_exercise(driver: Driver, address: str) -> bool:
 
 def show_bench(file: str) -> bool:
     """Open a bench's instruments and print who answered; True if all did."""
+    from ohmward.api import checking
+
     bench, found = checking.check_bench(file)
     table = _table("instrument", "role", "address", "identity", "remarks")
     for one in found:
@@ -90,7 +91,7 @@ def show_bench(file: str) -> bool:
     return not failed
 
 
-def show_compensation(file: CompensationFile, out: Path) -> None:
+def show_compensation(file: "CompensationFile", out: Path) -> None:
     """Print what a compensation found of the fixture, and what it is worth."""
     console = _console()
     table = _table("position", "short at highest frequency", "open, least", "symmetric")
@@ -120,7 +121,7 @@ def show_compensation(file: CompensationFile, out: Path) -> None:
         console.print(line, markup=False, soft_wrap=True)
 
 
-def show_budget(found: BudgetOf) -> None:
+def show_budget(found: "BudgetOf") -> None:
     """Print the budget of each point: causes with shares, then what they come to."""
     console = _console()
     for one in found.points:
@@ -147,7 +148,7 @@ def show_budget(found: BudgetOf) -> None:
             console.print(line, markup=False, soft_wrap=True)
 
 
-def _sums(one: PointBudget, unit: str) -> list[str]:
+def _sums(one: "PointBudget", unit: str) -> list[str]:
     whole = one.budget
     degrees = "infinite" if isinf(whole.degrees) else f"{whole.degrees:.1f}"
     lines = [
@@ -163,7 +164,7 @@ def _sums(one: PointBudget, unit: str) -> list[str]:
     return [*lines, ""]
 
 
-def show_judged_again(found: JudgedAgain) -> None:
+def show_judged_again(found: "JudgedAgain") -> None:
     """Print what other limits change, quantity by quantity and part by part."""
     console = _console()
     for warning in found.warnings:
