@@ -58,7 +58,8 @@ class Problems:
 
     def add(self, *, id: str, file: object, key: str, expected: str, found: object) -> None:  # noqa: A002
         """Note one problem; the same one twice is kept once."""
-        problem = Problem(id=id, file=str(file), key=key, expected=expected, found=str(found))
+        said = str(found) or "nothing"
+        problem = Problem(id=id, file=str(file), key=key, expected=expected, found=said)
         if problem not in self._found:
             self._found.append(problem)
 
