@@ -40,9 +40,10 @@ def flush() -> str:
     """
     reason = ""
     for stream in (sys.stdout, sys.stderr, sys.__stdout__):
+        if stream is None:
+            continue
         try:
-            if stream is not None:
-                stream.flush()
+            stream.flush()
         except BrokenPipeError:
             let_go(stream)
         except (OSError, ValueError) as error:
