@@ -303,6 +303,7 @@ def _finish(task: _Task, truth: Truth | None) -> Outcome:
             prepared.cable_m,
             truth,
             prepared.compensations,
+            prepared.bench,
         )
         manifest.write(task.folder, about)
     except OSError as error:

@@ -8,6 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from ohmward.api.under_voltage import under_voltage
 from ohmward.journal import schema
 from ohmward.journal.store import Row, Store
 from ohmward.metrology.compensation import Compensation
@@ -16,14 +17,18 @@ from ohmward.output.tables import TableWriter
 from ohmward.results.derive import derive_impedance
 from ohmward.results.judge import judge
 from ohmward.results.judged import Rule
+from ohmward.results.under_voltage import judge_under_voltage
 from ohmward.sequence.brief import Brief
+from ohmward.setup.bench import Bench
 from ohmward.setup.driver import Driver
 from ohmward.terms.accuracy import ImpedanceAccuracy
+from ohmward.terms.quantity import QUANTITIES
 
 Arrays = dict[str, NDArray[Any]]
 ResultRow = dict[str, object]
 Truth = Callable[[ResultRow], tuple[float, str]]
 
+OF_SWEEPS = frozenset({"point", "part"})
 _TEXT = {"range", "integration", "status", "pair", "instrument"}
 _KEPT_OF_JOURNAL = (
     "reading",
@@ -58,10 +63,12 @@ def tabulate(
     cable_m: Mapping[str, float],
     truth: Truth | None = None,
     compensations: Mapping[str, Compensation] | None = None,
+    bench: Bench | None = None,
 ) -> list[ResultRow]:
-    """Write impedance.csv, results.csv, events.csv (and truth.csv) of a run; returns the results.
+    """Write the tables of a run: impedance, leakage, results, events (and truth); returns results.
 
-    The journal must be closed. Readings pass through in batches, so that memory does not grow
+    The journal must be closed. leakage.csv is written where something was planned under voltage,
+    for which ``bench`` is needed. Readings pass through in batches, so that memory does not grow
     with the number of columns.
     """
     store = Store.read(folder / "journal.sqlite")
@@ -84,22 +91,40 @@ def tabulate(
                 kept[0].add(readings)
                 kept[1].add(derived)
         write_events(folder, run_id, store.events())
+        readings, derived = (one.whole() for one in kept)
+        rule = Rule(guard=brief.guard, coverage_k=brief.coverage_k)
+        direct = None
+        if bench is not None and len(brief.sweeps) < len(brief.stages):
+            direct = under_voltage(
+                store,
+                brief,
+                bench,
+                drivers,
+                {**readings, **derived},
+                rule=rule,
+                run_id=run_id,
+                simulated=simulated,
+            )
     finally:
         store.abandon()
-    readings, derived = (one.whole() for one in kept)
     closures = {stage.stage for stage in brief.sweeps if stage.closure}
-    rule = Rule(guard=brief.guard, coverage_k=brief.coverage_k)
     results = judge(
         readings,
         derived,
         brief.parts,
-        brief.limits,
+        [limit for limit in brief.limits if QUANTITIES[limit.quantity].per in OF_SWEEPS],
         rule=rule,
         closures=closures,
         accuracies=accuracies_of(drivers),
         cable_m=cable_m,
         run_id=run_id,
     )
+    if direct is not None:
+        with TableWriter(folder, columns.LEAKAGE) as table:
+            table.arrays(direct.rows)
+        results += judge_under_voltage(brief.limits, brief.parts, direct.stages, run_id=run_id)
+        place = {part.part_id: number for number, part in enumerate(brief.parts)}
+        results.sort(key=lambda row: place[str(row["part_id"])])
     with TableWriter(folder, columns.RESULTS) as table:
         table.rows(results)
     if truth is not None:
