@@ -233,7 +233,8 @@ def test_left_alone_only_where_the_bench_declares_all_it_takes(tmp_path: Path) -
 def test_the_floor_grows_by_what_the_bench_states(tmp_path: Path) -> None:
     """C·dV/dt: 1 mV/s on 1 µF is 1 nA (calculated); 400 V over 1 TΩ is 0.4 nA."""
     text, one = CAPACITORS + leakage(), film(nominal=1e-6, tolerance_high=0.0)
-    (plain,) = brief_of(tmp_path, text, one).floors
+    silent = path_with(supply_drift_v_per_s=None, insulation_ohm=None, divider_rel=None)
+    (plain,) = brief_of(tmp_path, text, one, on=silent).floors
     stated = path_with(supply_drift_v_per_s=1e-3, insulation_ohm=1e12, divider_rel=0.01)
     (floor,) = brief_of(tmp_path, text, one, on=stated).floors
     assert plain.not_stated
