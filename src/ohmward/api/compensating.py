@@ -7,12 +7,12 @@ from dataclasses import dataclass
 from datetime import datetime, timedelta
 from math import inf
 from pathlib import Path
-from typing import Protocol
 
 import numpy as np
 import trio
 from numpy.typing import NDArray
 
+from ohmward.api.operator import Hand, HandAsOperator, TerminalHand
 from ohmward.clock import DRY_RUN_START_UTC, Clock, run_in_real_time, run_in_virtual_time
 from ohmward.errors import BadInput, LinkError, NotProvenSafe, OhmwardError, Problem, Problems
 from ohmward.instruments.impedance_meter import CORRECTIONS, ImpedanceMeter
@@ -66,13 +66,6 @@ class Task:
     def kinds(self) -> tuple[str, ...]:
         """The standards that are taken, in order."""
         return ("open", "short") if self.standards.load is None else ("open", "short", "load")
-
-
-class Hand(Protocol):
-    """Whoever puts standards into the fixture."""
-
-    async def put(self, kind: str, position: str, insertion: int) -> None:
-        """Return once this standard, and nothing else, is in this position."""
 
 
 def compensate(
@@ -154,7 +147,10 @@ def _task(bench: str | Path, sequence: str | Path, insertions: int, only: Sequen
         standards=standards,
         positions=positions,
         frequency_hz=tuple(frequencies),
-        level_v=max(level for stage in sweeps for level in stage.level),
+        level_v=min(
+            max(level for stage in sweeps for level in stage.level),
+            inf if on_bench.level_ceiling_v is None else on_bench.level_ceiling_v,
+        ),
         integration="long" if known else sweeps[0].integration,
         insertions=insertions,
     )
@@ -213,7 +209,6 @@ def _dry(task: Task, seed: int, told: Callable[[str], None]) -> CompensationFile
 def _real(task: Task, told: Callable[[str], None]) -> CompensationFile:
     from pyvisa import ResourceManager
 
-    from ohmward.api.operator import TerminalOperator
     from ohmward.links.thread_waiter import ThreadWaiter
 
     if not sys.stdin.isatty():
@@ -228,44 +223,13 @@ def _real(task: Task, told: Callable[[str], None]) -> CompensationFile:
 
     async def main(clock: Clock) -> CompensationFile:
         manager = ResourceManager("@py")
-        connections = Connections(
-            manager=manager, waiter=ThreadWaiter(), operator=TerminalOperator()
-        )
+        connections = Connections(manager=manager, waiter=ThreadWaiter(), operator=HandAsOperator())
         try:
             return await _take(task, connections, TerminalHand(), clock, told)
         finally:
             manager.close()
 
     return run_in_real_time(main)
-
-
-class TerminalHand:
-    """Asks for each standard on the terminal and waits for Enter; once for all opens."""
-
-    def __init__(self) -> None:
-        self._emptied = False
-
-    async def put(self, kind: str, position: str, insertion: int) -> None:
-        """Ask, and return when the person says that it is done."""
-        if kind == "open" and self._emptied:
-            return
-        self._emptied = kind == "open"
-        what = f"Put the {kind} into position {position}, and nothing else anywhere"
-        if kind == "open":
-            what = "Take every part and standard out of the fixture and close its clips"
-        again = "" if insertion == 0 else " anew (take it out first)"
-        sys.stderr.write(f"{what}{again}, then press Enter (Ctrl-C stops): ")
-        sys.stderr.flush()
-        await trio.lowlevel.wait_readable(sys.stdin)
-        if not sys.stdin.readline():
-            raise OhmwardError(f"nobody placed the {kind}: the terminal was closed")
-
-
-class _HandAsOperator:
-    """The person who has placed the standard already, when a hand-loaded fixture asks again."""
-
-    async def place(self, part_id: str, position: str) -> None:
-        """Nothing is left to be done."""
 
 
 async def _take(
@@ -277,7 +241,7 @@ async def _take(
 ) -> CompensationFile:
     taken = clock.utc()
     with_hand = Connections(
-        manager=connections.manager, waiter=connections.waiter, operator=_HandAsOperator()
+        manager=connections.manager, waiter=connections.waiter, operator=HandAsOperator()
     )
     async with open_bench(task.bench, task.drivers, with_hand) as bench:
         try:

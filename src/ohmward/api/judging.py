@@ -10,8 +10,9 @@ from ohmward.errors import BadInput, OhmwardError, Problem, Problems
 from ohmward.output import columns
 from ohmward.output.tables import TableWriter
 from ohmward.results.compare import Change, changes
-from ohmward.results.judge import Row, judge, part_decisions
+from ohmward.results.judge import judge, part_decisions
 from ohmward.results.judged import Rule
+from ohmward.results.merging import Row
 from ohmward.run.folder import INPUTS
 from ohmward.sequence.limits import resolve_limits
 from ohmward.sequence.load import load_sequence
