@@ -87,8 +87,6 @@ def _outcome() -> int:
     except SystemExit as left:
         if isinstance(left.__context__, BrokenPipeError):
             return 0  # whoever read our output has left, and had what was wanted
-        if isinstance(left.__context__, KeyboardInterrupt):
-            return _told(Stopped("stopped"))
         raise
     except OSError as error:
         where = error.filename or "what was to be said could not be written"
@@ -98,6 +96,8 @@ def _outcome() -> int:
             return _told_usage(error)
         traceback.print_exc()
         return _told(OhmwardError("this is a fault of ohmward's own, not of what you wrote"))
+    if code == Stopped.exit_code:  # the command line library's own end after Ctrl-C is silent
+        return _told(Stopped("stopped"))
     return code if isinstance(code, int) else 0
 
 
