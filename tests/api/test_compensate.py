@@ -126,6 +126,23 @@ def test_the_load_shows_a_fixture_that_is_not_symmetric(tmp_path: Path) -> None:
     assert not found[-1]
 
 
+@pytest.mark.parametrize(
+    ("true", "forgotten", "what"),
+    [
+        ("series_ohm = 2.3e-4", "series_ohm = 1e9", "the short showed"),
+        ("series_ohm = 100.003", "series_ohm = 1e9", "the load came out"),
+        ("series_ohm = 100.003", "series_ohm = 50.0", "the load came out"),
+    ],
+)
+def test_a_standard_that_was_not_in_is_noticed(
+    tmp_path: Path, true: str, forgotten: str, what: str
+) -> None:
+    folder = write_bench(tmp_path / "bench", physics=PHYSICS.replace(true, forgotten))
+    with pytest.raises(CompensationMismatch, match=what):
+        take(folder, only=["1"])
+    assert not (folder / "fixture.toml").exists()
+
+
 def test_a_sequence_that_requires_one_is_refused_without(clips: Path) -> None:
     assert ids(clips, None) == {"compensation-missing"}
 

@@ -371,6 +371,7 @@ def _file(
         standards=compensations.standards_at(task.standards, task.frequency_hz),
         positions=tuple(places),
     )
+    compensations.refuse_implausible(file)
     if task.standards.load is None:
         return file
     return file.model_copy(

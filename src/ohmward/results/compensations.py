@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from ohmward.metrology.accuracy import add_independent, impedance_uncertainty
 from ohmward.metrology.arrays import FloatArray, correlation_of
-from ohmward.metrology.compensation import Compensation, Known, is_symmetric
+from ohmward.metrology.compensation import Compensation, Known, asymmetry, is_symmetric
 from ohmward.metrology.errors import CompensationMismatch
 from ohmward.setup.compensation_file import (
     Admittances,
@@ -23,6 +23,8 @@ from ohmward.terms.accuracy import ImpedanceAccuracy
 
 # an open that the meter cannot see at all counts as none, with what the meter states for one
 BEYOND_OHM = 1e14
+LEAST_APART = 0.1  # a short above this share of the open's impedance is none
+MOST_OFF = 0.2  # a load further from its value than this share is another one
 COVERAGE_K = 2.0  # of the expanded uncertainties in a standards file
 
 
@@ -191,6 +193,34 @@ def symmetric(file: CompensationFile, name: str) -> tuple[bool, ...]:
     """By frequency, whether the fixture is symmetric at a position as far as its load can tell."""
     found = is_symmetric(compensations_of(file)[name])
     return tuple(bool(one) for one in found)
+
+
+def refuse_implausible(file: CompensationFile) -> None:
+    """Raise CompensationMismatch where a standard cannot have been in its position.
+
+    A short that is not far below the open is none; a load that comes out by open and short more
+    than a fifth off its value is another one, or none.
+    """
+    for name, compensation in compensations_of(file).items():
+        f = compensation.frequency_hz
+        away = np.abs(compensation.open_ohm.value)
+        missing = np.abs(compensation.short_ohm.value) > LEAST_APART * away
+        if np.any(missing):
+            raise CompensationMismatch(
+                f"position {name}: at {f[missing][0]:g} Hz the short showed "
+                f"{abs(compensation.short_ohm.value[missing][0]):.3g} ohm, hardly less than the "
+                "open: was it in? Nothing was kept"
+            )
+        if not compensation.has_load:
+            continue
+        off = np.abs(asymmetry(compensation))
+        strange = ~(off <= MOST_OFF)
+        if np.any(strange):
+            raise CompensationMismatch(
+                f"position {name}: at {f[strange][0]:g} Hz the load came out "
+                f"{100 * off[strange][0]:.0f} % away from its value: is it the one in the "
+                "standards file, and was it in? Nothing was kept"
+            )
 
 
 def age_s(file: CompensationFile, now_s: float) -> float:
