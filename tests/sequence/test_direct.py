@@ -161,6 +161,15 @@ def test_no_ramp_takes_more_than_the_supply_gives(
     assert planned.duration_s >= planned.soak_s + volts / planned.ramp_v_per_s
 
 
+def test_a_ramp_may_be_said_by_its_time(tmp_path: Path) -> None:
+    """MIL-C-62: the rated voltage is reached within 60 s, whatever it is."""
+    text = CAPACITORS + leakage(ramp_time='"60 s"')
+    for rated_v in (60.0, 400.0):
+        (planned,) = brief_of(tmp_path, text, film(rated_v=rated_v)).stages
+        assert isinstance(planned, PlannedLeakage)
+        assert planned.ramp_v_per_s * 60.0 == pytest.approx(rated_v)
+
+
 # ---- dangers and the permit
 
 
@@ -287,10 +296,10 @@ def test_charging_current_above_a_hundredth_of_the_limit_is_told(tmp_path: Path)
 
 
 def test_a_part_that_would_be_stopped_within_its_limit_is_told(tmp_path: Path) -> None:
-    """Above 20 % of 12.5 V over 10 kΩ, 250 µA, a forming part no longer has its voltage."""
+    """10 % of 12.5 V over 10 kΩ, 125 µA: a forming part that draws more has not its voltage."""
     one = stored(rated_v=25.0, last_energised=None)
     text = CAPACITORS + REFORM.replace('"400 V", ', "")
-    assert any("E1 (250 µA of" in text for text in brief_of(tmp_path, text, one).warnings)
+    assert any("E1 (125 µA of" in text for text in brief_of(tmp_path, text, one).warnings)
 
 
 # ---- limits

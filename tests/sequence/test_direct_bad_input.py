@@ -66,6 +66,11 @@ BIG = film(nominal=100e-6)  # 8.8 J at 400 V
 
 WITHIN = [
     Case(
+        id="stage-says-two-ramps",
+        key="stage[1]",
+        text=CAPACITORS + leakage(ramp='"10 V/s"', ramp_time='"1 min"'),
+    ),
+    Case(
         id="stage-without-voltage", key="stage[1]", text=CAPACITORS + stage("leakage", soak='"1 s"')
     ),
     Case(

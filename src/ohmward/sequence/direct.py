@@ -44,6 +44,11 @@ class DirectStage(StageTable):
     ramp: PositiveVoltsPerSecond = Field(
         100.0, description="how fast at most; slower where the supply's current asks for it"
     )
+    ramp_time: PositiveSeconds | None = Field(
+        None,
+        description="how long the way up may take, instead of 'ramp': slower for a lower voltage",
+        examples=["60 s"],
+    )
     interval: PositiveSeconds = Field(5.0, description="from one reading to the next")
     current_limit: PositiveAmperes | None = Field(
         None, description="a part that draws more is stopped", examples=["5 mA"]
@@ -51,6 +56,10 @@ class DirectStage(StageTable):
     power_limit: PositiveWatts | None = Field(
         None, description="a part that takes more is stopped", examples=["1 W"]
     )
+
+    def ramp_to(self, voltage_v: float) -> float:
+        """How fast a part is asked to go up to a voltage (V/s)."""
+        return self.ramp if self.ramp_time is None else voltage_v / self.ramp_time
 
 
 class OneVoltageStage(DirectStage):

@@ -44,6 +44,13 @@ def check_direct(stage: DirectStage, key: str, kinds: Iterable[Kind], note: Note
             expected=f"a filter that lets in {' and '.join(sorted(stage.for_kinds))} only",
             found=f"{' and '.join(others)} as well",
         )
+    if stage.ramp_time is not None and "ramp" in stage.model_fields_set:
+        note(
+            "stage-says-two-ramps",
+            key,
+            expected="either 'ramp' or 'ramp_time'",
+            found="both",
+        )
     if isinstance(stage, OneVoltageStage):
         _one_voltage(stage, key, note)
     if isinstance(stage, LeakageStage | InsulationStage | AbsorptionStage):

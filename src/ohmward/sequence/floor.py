@@ -218,9 +218,9 @@ def stop_warnings(
 ) -> list[str]:
     """Stages in which a part is stopped before its leakage can be what its limit allows.
 
-    The warden stops a part whose own voltage is 2 % below the set one, 20 % while it forms; I·R
-    of the series resistor takes that at I = 0.02·V/R. The stage's own limits of current and
-    power do too.
+    A part has its voltage once it is within 1 % of the set one, within 10 % while it forms; the
+    series resistor takes as much at I = 0.01·V/R, and a part that draws more never gets there.
+    The stage's own limits of current and power stop it too.
     """
     allowed_a = {
         (limit.part_id, limit.stage): found
@@ -251,11 +251,11 @@ def stop_warnings(
 
 
 def stopped_from_a(stage: PlannedDirect, voltage_v: float, high: High) -> float:
-    """The current from which on the warden stops a part at this voltage (A)."""
+    """The current from which on a part is stopped, or never has its voltage (A)."""
     wired = high.wired(stage.part)
     series_ohm = 0.0 if wired is None else wired.series_ohm
     within = FORMING_WITHIN_REL if isinstance(stage, PlannedReform) else high.laws.within
-    drop_a = 2.0 * within * voltage_v / series_ohm if series_ohm > 0.0 else inf
+    drop_a = within * voltage_v / series_ohm if series_ohm > 0.0 else inf
     by_power_a = inf if stage.power_max_w is None else stage.power_max_w / voltage_v
     by_current_a = inf if stage.current_max_a is None else stage.current_max_a
     return min(drop_a, by_power_a, by_current_a)

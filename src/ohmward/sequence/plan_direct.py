@@ -62,7 +62,7 @@ def _leakage(stage: LeakageStage, task: Task) -> PlannedDirect | None:
     volts = _one_voltage(stage, task)
     if volts is None:
         return None
-    ramp = task.high.ramp(stage.ramp, task.part)
+    ramp = task.high.ramp(stage.ramp_to(volts), task.part)
     return PlannedLeakage(
         number=task.number,
         stage=stage.name,
@@ -83,7 +83,7 @@ def _insulation(stage: InsulationStage, task: Task) -> PlannedDirect | None:
     volts = _one_voltage(stage, task)
     if volts is None:
         return None
-    ramp, soak_s = task.high.ramp(stage.ramp, task.part), max(stage.read_at_s)
+    ramp, soak_s = task.high.ramp(stage.ramp_to(volts), task.part), max(stage.read_at_s)
     return PlannedInsulation(
         number=task.number,
         stage=stage.name,
@@ -115,7 +115,7 @@ def _reform(stage: ReformStage, task: Task) -> PlannedDirect | None:
         )
         return None
     _check_voltage(volts[-1], task, f"{task.key}.voltages", task.share)
-    ramp = task.high.ramp(stage.ramp, task.part)
+    ramp = task.high.ramp(stage.ramp_to(volts[-1]), task.part)
     return PlannedReform(
         number=task.number,
         stage=stage.name,
@@ -163,7 +163,7 @@ def _proof(stage: ProofStage, task: Task) -> PlannedDirect | None:
             f"{task.part.part_id}, {stage.name}: repeated voltage proofs can damage a safety "
             "capacitor (makers' notes)"
         )
-    ramp = task.high.ramp(stage.ramp, task.part)
+    ramp = task.high.ramp(stage.ramp_to(volts), task.part)
     if rule is not None and not rule.confirmed:
         task.notes.warn(f"stage {stage.name}: {rule.name} is {rule.source}, from memory")
     return PlannedProof(
@@ -186,7 +186,7 @@ def _absorption(stage: AbsorptionStage, task: Task) -> PlannedDirect | None:
     volts = _one_voltage(stage, task)
     if volts is None:
         return None
-    ramp, moment_s = task.high.ramp(stage.ramp, task.part), task.high.moment_s()
+    ramp, moment_s = task.high.ramp(stage.ramp_to(volts), task.part), task.high.moment_s()
     droop = _droop_rel(stage, task, moment_s)
     if droop > DROOP_MOST_REL:
         task.notes.sequence(
@@ -243,7 +243,7 @@ def _resistance(stage: ResistanceStage, task: Task) -> PlannedDirect | None:
             found=format_quantity(amperes, "A"),
         )
     _check_bench(source_v, task, key)
-    ramp = task.high.ramp(stage.ramp, part)
+    ramp = task.high.ramp(stage.ramp_to(source_v), part)
     reading_s = stage.repeats * stage.interval
     return PlannedResistance(
         number=task.number,
