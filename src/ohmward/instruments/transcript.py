@@ -6,6 +6,7 @@ without any link (``replayed``).
 """
 
 import json
+import re
 from collections import deque
 from collections.abc import Awaitable, Callable, Iterable
 from dataclasses import asdict, dataclass
@@ -19,6 +20,7 @@ from ohmward.protocol.layout import Layout
 from ohmward.setup.driver import Driver
 
 MOST = 1000
+_ESCAPES = re.compile(r"\\(?:x[0-9a-f]{2}|[\\nrt])")
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -62,7 +64,9 @@ def escaped(data: bytes) -> str:
 
 
 def unescaped(text: str) -> bytes:
-    """The bytes that ``escaped`` wrote."""
+    """The bytes that ``escaped`` wrote. Raises ValueError for what it cannot have written."""
+    if not text.isascii() or _ESCAPES.sub("", text).count("\\"):
+        raise ValueError(f"no escaped bytes: {text[:60]!r}")
     return text.encode("ascii").decode("unicode_escape").encode("latin-1")
 
 
@@ -75,6 +79,10 @@ class Transcript:
     def lines(self) -> Iterable[str]:
         """Every exchange as a line of JSON."""
         return (exchange.as_line() for exchange in self.exchanges)
+
+    def text(self) -> str:
+        """What is written to a file: a line for each exchange."""
+        return "".join(f"{line}\n" for line in self.lines())
 
 
 class TappedWire:
@@ -138,6 +146,9 @@ class TappedWire:
             received = await exchange()
         except LinkError as failure:
             error = str(failure)
+            raise
+        except BaseException:
+            error = "cut short"  # cancelled: what comes of it nobody hears any more
             raise
         finally:
             took_s = trio.current_time() - at_s
