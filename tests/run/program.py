@@ -18,8 +18,12 @@ from types import TracebackType
 PARENT = """
 import json, os, resource, signal, sys, time, warnings
 warnings.simplefilter("ignore")
+import importlib, pkgutil
 import ohmward.api, ohmward.cli.main, ohmward.links.thread_waiter
-import pandas, pyvisa, pyvisa_py, scipy.stats
+import pyvisa, pyvisa_py, scipy.stats
+
+for room in pkgutil.iter_modules(ohmward.api.__path__):  # they are loaded at need otherwise
+    importlib.import_module(f"ohmward.api.{room.name}")
 
 def child(request):
     for number, name in enumerate(("in", "out", "err")):
@@ -163,6 +167,8 @@ class Program:
         self._count += 1
         folder = self._folder / f"process-{self._count}"
         folder.mkdir()
+        for name in ("out", "err"):
+            (folder / name).touch()
         request = {
             "arguments": arguments,
             "in": stdin,
