@@ -1,4 +1,4 @@
-"""``serve``: a simulated bench behind real sockets on this machine."""
+"""``serve``: a simulated bench behind sockets, HiSLIP and terminals of this machine."""
 
 from typing import Annotated
 
@@ -27,15 +27,33 @@ def serve(
             help="TCP port of an instrument; may be given for each. Any free one otherwise.",
         ),
     ] = None,
+    link: Annotated[
+        list[str] | None,
+        typer.Option(
+            "--link",
+            metavar="NAME=LINK",
+            help="What an instrument is served on: socket, hislip or serial; may be given for "
+            "each. As its address in the bench file says otherwise.",
+        ),
+    ] = None,
     json: Annotated[
         bool, typer.Option("--json", help="Print the instruments as JSON, one line.")
     ] = False,
 ) -> None:
-    """Serve a simulated bench on loopback sockets until stopped; prints the bench file for run."""
+    """Serve a simulated bench on this machine until stopped; prints the bench file for run."""
     from ohmward import api
 
     ports = dict(_port(text) for text in port or ())
-    api.serve(bench, parts=parts, seed=seed, as_json_line=json, ports=ports)
+    links = dict(_link(text) for text in link or ())
+    api.serve(bench, parts=parts, seed=seed, as_json_line=json, ports=ports, links=links)
+
+
+def _link(text: str) -> tuple[str, str]:
+    """An instrument's name and the link that it is to be served on."""
+    name, _, link = text.partition("=")
+    if not name or not link:
+        raise typer.BadParameter(f"{text!r} is not NAME=LINK", param_hint="--link")
+    return name, link
 
 
 def _port(text: str) -> tuple[str, int]:

@@ -10,6 +10,7 @@ import re
 from collections import deque
 from collections.abc import Awaitable, Callable, Iterable
 from dataclasses import asdict, dataclass
+from pathlib import Path
 
 import trio
 
@@ -83,6 +84,38 @@ class Transcript:
     def text(self) -> str:
         """What is written to a file: a line for each exchange."""
         return "".join(f"{line}\n" for line in self.lines())
+
+
+class Transcripts:
+    """The transcripts of a bench's instruments, by name; each begins when it is first asked for."""
+
+    def __init__(self, most: int = MOST) -> None:
+        self._most = most
+        self.by_name: dict[str, Transcript] = {}
+
+    def of(self, name: str) -> Transcript:
+        """The transcript of one instrument."""
+        return self.by_name.setdefault(name, Transcript(self._most))
+
+    def write(self, folder: Path) -> None:
+        """Write NAME.jsonl for each instrument into a folder, which is made. Raises OSError."""
+        folder.mkdir(exist_ok=True)
+        for name, transcript in self.by_name.items():
+            (folder / f"{name}.jsonl").write_text(transcript.text(), "ascii")
+
+
+def read_transcript(path: Path) -> list[Exchange]:
+    """The exchanges of a file that was written by ``Transcript.text``.
+
+    Raises ValueError naming the first line that is none; OSError when it cannot be read.
+    """
+    found = []
+    for number, line in enumerate(path.read_text("utf-8").splitlines(), start=1):
+        try:
+            found.append(Exchange.from_line(line))
+        except ValueError as error:
+            raise ValueError(f"line {number}: {error}") from error
+    return found
 
 
 class TappedWire:

@@ -12,6 +12,7 @@ from ohmward.instruments.impedance_meter import ImpedanceMeter
 from ohmward.instruments.scanner import Scanner
 from ohmward.instruments.talker import Talker, open_talker
 from ohmward.instruments.thermometer import Thermometer
+from ohmward.instruments.transcript import Transcripts
 from ohmward.links.waiter import Waiter
 from ohmward.run.high_voltage import high_voltage_warden
 from ohmward.run.persistent import PersistentWarden
@@ -32,13 +33,15 @@ CANNOT_ENERGISE = frozenset({Role.SCANNER, Role.THERMOMETER})
 class Connections:
     """How instruments are reached: one VISA resource manager, one way of waiting.
 
-    ``look_s`` is how often a part under voltage is looked at, beside its readings.
+    ``look_s`` is how often a part under voltage is looked at, beside its readings. With
+    ``transcripts`` the exchanges of each instrument are kept in them.
     """
 
     manager: pyvisa.ResourceManager
     waiter: Waiter
     operator: Operator
     look_s: float = 0.5
+    transcripts: Transcripts | None = None
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -94,6 +97,7 @@ async def open_bench(
                 manager=connections.manager,
                 waiter=connections.waiter,
                 serial_number=instrument.serial_number,
+                transcript=connections.transcripts.of(name) if connections.transcripts else None,
             )
             talkers[name] = talker
             try:
