@@ -12,6 +12,7 @@ from typing import IO, Any, cast
 from rich.console import Console
 from rich.progress import BarColumn, Progress, TextColumn
 from rich.table import Table
+from rich.text import Text
 
 from ohmward.errors import Problem
 from ohmward.output import dangers
@@ -20,6 +21,8 @@ from ohmward.output.wording import duration
 from ohmward.sequence.brief import Brief, PlannedStage, PlannedSweep
 from ohmward.terms.decision import Decision
 from ohmward.units.values import format_quantity
+
+NARROW = 72  # columns: below it a table of five is no table any more
 
 DECISION_STYLES = {
     Decision.ACCEPT: "green",
@@ -71,9 +74,9 @@ def _stage_table(stages: Sequence[PlannedSweep]) -> Table:
     for _, group in groupby(stages, key=lambda stage: stage.part.part_id):
         for stage in group:
             table.add_row(
-                stage.part.part_id,
-                stage.part.position,
-                stage.stage,
+                Text(stage.part.part_id),  # a Text is never read as markup
+                Text(stage.part.position),
+                Text(stage.stage),
                 f"{len(stage.points)} × {stage.repeats}",
                 _span((point.frequency_hz for point in stage.points), "Hz"),
                 _span((point.level_v for point in stage.points), "V"),
@@ -97,21 +100,37 @@ def _span(values: Iterable[float], unit: str) -> str:
 
 def show_decisions(console: Console, verdicts: Sequence[PartVerdict]) -> None:
     """One row per part with its decision and the reason, then the count of each decision."""
+    if console.width < NARROW:
+        for verdict in verdicts:
+            console.print(Text.assemble(verdict.part.part_id, " ", _decision(verdict)))
+            _line(console, f"  {_what(verdict)} in {verdict.part.position}: {verdict.reason}")
+    else:
+        console.print(_decision_table(verdicts))
+    counts = Counter(verdict.decision for verdict in verdicts)
+    _line(console, ", ".join(f"{counts[d]} {d}" for d in DECISION_STYLES if counts[d]))
+
+
+def _decision_table(verdicts: Sequence[PartVerdict]) -> Table:
     table = Table(box=None, pad_edge=False, header_style="bold")
     for heading in ("part", "position", "what", "decision", "reason"):
         table.add_column(heading, overflow="fold")
     for verdict in verdicts:
-        part = verdict.part
         table.add_row(
-            part.part_id,
-            part.position,
-            f"{part.kind} {format_quantity(part.nominal, part.unit)}",
-            f"[{DECISION_STYLES[verdict.decision]}]{verdict.decision}[/]",
-            verdict.reason,
+            Text(verdict.part.part_id),  # a Text is never read as markup
+            Text(verdict.part.position),
+            Text(_what(verdict)),
+            _decision(verdict),
+            Text(verdict.reason),
         )
-    console.print(table)
-    counts = Counter(verdict.decision for verdict in verdicts)
-    _line(console, ", ".join(f"{counts[d]} {d}" for d in DECISION_STYLES if counts[d]))
+    return table
+
+
+def _what(verdict: PartVerdict) -> str:
+    return f"{verdict.part.kind} {format_quantity(verdict.part.nominal, verdict.part.unit)}"
+
+
+def _decision(verdict: PartVerdict) -> Text:
+    return Text(str(verdict.decision), style=DECISION_STYLES[verdict.decision])
 
 
 def _line(console: Console, text: str) -> None:
@@ -159,7 +178,7 @@ class ProgressBar:
             console.file = cast("IO[str]", _Heedless(console.file))
         self._console = console
         self._progress = Progress(
-            TextColumn("{task.description}"),
+            TextColumn("{task.description}", markup=False),
             BarColumn(),
             TextColumn("{task.percentage:3.0f} %"),
             TextColumn("{task.fields[left]}"),

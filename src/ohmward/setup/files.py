@@ -53,8 +53,16 @@ def _missing(path: Path) -> tuple[str, str]:
     for folder in FOLDERS:
         beside = shipped(folder)
         if path.parent == beside:
-            names = sorted(one.stem for one in beside.glob(f"*{path.suffix}"))
+            names = sorted(one.stem for one in beside.glob(f"*{path.suffix}") if _is_meant(one))
             return path.stem, f"a file, or the name of a shipped one: {', '.join(names)}"
         if path.parent == Path() and (beside / path.name).is_file():
             return str(path), f"a file here; the shipped one is named '{path.stem}'"
     return str(path), "a file"
+
+
+def _is_meant(path: Path) -> bool:
+    """Whether a shipped file is one that commands ask for: a bench, not what is behind it."""
+    if path.suffix != ".toml":
+        return True
+    with path.open(encoding="utf-8") as file:
+        return file.readline().rstrip().endswith(("bench.json", "driver.json", "sequence.json"))
