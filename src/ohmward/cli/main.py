@@ -45,6 +45,9 @@ recording.add_to(app)
 reference.add_to(app)
 serving.add_to(app)
 
+for command in app.registered_commands:  # whole sentences in the list of commands
+    command.short_help = (getattr(command.callback, "__doc__", None) or "").split("\n\n")[0]
+
 
 def _version(asked: bool) -> None:
     if asked:
