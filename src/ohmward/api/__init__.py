@@ -28,6 +28,7 @@ if TYPE_CHECKING:
         show_compensation,
         show_exercise,
         show_judged_again,
+        show_replay,
         show_run,
     )
     from ohmward.api.verifying import Verified, verify
@@ -54,6 +55,7 @@ _NAMES_BY_MODULE: dict[str, tuple[str, ...]] = {
         "show_compensation",
         "show_exercise",
         "show_judged_again",
+        "show_replay",
         "show_run",
     ),
     "verifying": ("Verified", "verify"),
@@ -89,6 +91,7 @@ __all__ = [
     "show_compensation",
     "show_exercise",
     "show_judged_again",
+    "show_replay",
     "show_run",
     "try_address",
     "verify",

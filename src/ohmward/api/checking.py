@@ -9,10 +9,28 @@ from typing import TypeVar
 import trio
 
 from ohmward.clock import Clock, run_in_real_time, today_utc
-from ohmward.errors import BadInput, LinkError, OhmwardError, Problem, Problems
+from ohmward.errors import (
+    BadInput,
+    InstrumentRefused,
+    LinkError,
+    OhmwardError,
+    Problem,
+    Problems,
+)
+from ohmward.instruments.current_meter import CurrentMeter
 from ohmward.instruments.exercise import Exercised, exercise
+from ohmward.instruments.interlock import Interlock
+from ohmward.instruments.supply import Supply
 from ohmward.instruments.talker import Talker, open_talker
-from ohmward.instruments.transcript import Transcript, escaped
+from ohmward.instruments.thermometer import Thermometer
+from ohmward.instruments.transcript import (
+    Replayed,
+    Transcript,
+    escaped,
+    read_transcript,
+    replayed,
+)
+from ohmward.instruments.voltmeter import Voltmeter
 from ohmward.protocol.check import check_driver as compile_driver
 from ohmward.setup.address import AddressError, read_address
 from ohmward.setup.bench import Bench, load_bench
@@ -20,6 +38,7 @@ from ohmward.setup.bench_drivers import load_drivers
 from ohmward.setup.driver import Driver, load_driver
 from ohmward.setup.resources import find_file
 from ohmward.terms.role import Role
+from ohmward.terms.status import Status
 
 T = TypeVar("T")
 TRY_TIMEOUT_S = 3.0
@@ -74,6 +93,25 @@ def exercise_driver(driver: Driver, address: str, told: Callable[[Exercised], No
         return well
 
     return _with_talker(driver, address, transcript, work)
+
+
+def replay(driver: Driver, file: Path) -> list[Replayed]:
+    """Put a transcript through a driver without any link: what each reply means to it.
+
+    Raises BadInput when the file is no transcript.
+    """
+    try:
+        return replayed(read_transcript(file), driver)
+    except (OSError, ValueError) as error:
+        reason = getattr(error, "strerror", None) or str(error)
+        problem = Problem(
+            id="no-transcript",
+            file=str(file),
+            key="transcript",
+            expected="lines of a transcript, as --transcript writes them",
+            found=reason,
+        )
+        raise BadInput((problem,)) from error
 
 
 def try_address(address: str, query: str, termination: str) -> tuple[str, str]:
@@ -180,16 +218,57 @@ def _look(bench: Bench, name: str, driver: Driver) -> Found:
 
 async def _remarks(talker: Talker, role: Role) -> list[str]:
     """What the instrument says of its state, where its role has something that matters."""
-    remarks = []
-    for reading in ("interlock", "state", "voltage", "current"):
-        if role not in (Role.IMPEDANCE_METER, Role.SCANNER) and talker.can_ask(reading):
-            answer = await talker.ask(reading)
-            said = ", ".join(f"{key} {value}" for key, value in answer.values.items())
-            remarks.append(f"{reading}: {said}")
-    if talker.can_set("output") and talker.driver.setting["output"].ask:
-        on = await talker.read_back("output")
-        remarks.append("OUTPUT IS ON" if on else "output off")
+    if role in (Role.HIGH_VOLTAGE_SUPPLY, Role.BIAS_SOURCE):
+        return await _of_supply(talker)
+    if role is Role.CURRENT_METER:
+        return await _of_current_meter(talker)
+    if role is Role.VOLTMETER:
+        reading = await Voltmeter(talker).read()
+        said = f"{reading.voltage_v:.6g} V" if reading.status is Status.OK else reading.status
+        return [f"reads {said} at its terminals now"]
+    if role is Role.INTERLOCK:
+        return ["enclosure closed" if await Interlock(talker).closed() else "ENCLOSURE OPEN"]
+    if role is Role.THERMOMETER:
+        room = await Thermometer(talker).read()
+        return [f"{room.temperature_c:.1f} °C, {room.humidity_pct:.0f} %"]
+    return []
+
+
+async def _of_supply(talker: Talker) -> list[str]:
+    """A supply's output, what is at its terminals, its trip and its interlock; nothing is set."""
+    reading = await Supply(talker).read()
+    remarks = ["OUTPUT IS ON" if reading.output_on else "output off"]
+    zero = f"measures {reading.voltage_v:.4g} V"
+    accuracy = talker.driver.scalar_accuracy
+    if not reading.output_on and accuracy is not None:
+        offset_v = max(one.offset for one in accuracy.ranges)
+        if abs(reading.voltage_v) > offset_v:
+            zero += f" with its output off: more than its zero's {offset_v:g} V"
+    remarks.append(zero)
+    if reading.tripped:
+        remarks.append("TRIPPED")
+    try:
+        interlock = Interlock(talker)
+    except InstrumentRefused:
+        return remarks
+    remarks.append("interlock closed" if await interlock.closed() else "INTERLOCK OPEN")
     return remarks
+
+
+async def _of_current_meter(talker: Talker) -> list[str]:
+    """The offset on the lowest range, the input off the terminals, against its accuracy."""
+    accuracy = talker.driver.scalar_accuracy
+    if accuracy is None or not (talker.can_set("zero_check") and talker.can_set("range")):
+        return ["its zero cannot be checked by its driver"]
+    meter = CurrentMeter(talker)
+    lowest = min(accuracy.ranges, key=lambda one: one.full_scale)
+    zero = await meter.zero(lowest.full_scale)
+    await meter.rest()
+    if zero.status is not Status.OK:
+        return [f"its zero is no reading: {zero.status}"]
+    said = f"zero {zero.current_a:.3g} A on its range of {lowest.full_scale:g} A"
+    within = abs(zero.current_a) <= lowest.offset
+    return [said if within else f"{said}: more than the {lowest.offset:g} A that are stated"]
 
 
 def _with_talker(

@@ -71,6 +71,25 @@ def show_exercise(driver: "Driver", address: str) -> bool:
     return checking.exercise_driver(driver, address, told)
 
 
+def show_replay(driver: "Driver", transcript: Path) -> bool:
+    """Print what each exchange of a transcript means to a driver; True if it took every reply."""
+    from ohmward.api import checking
+    from ohmward.instruments.transcript import escaped
+
+    console = _console()
+    found = checking.replay(driver, transcript)
+    for one in found:
+        exchange = one.exchange
+        line = f"{exchange.at_s:12.6f} s  {escaped(exchange.sent) or '(nothing)'}"
+        line += f" -> {escaped(exchange.received) or '(nothing)'}"
+        if one.entry or one.meaning:
+            line += f"  {one.entry}: {one.meaning}" if one.entry else f"  {one.meaning}"
+        console.print(line, markup=False, soft_wrap=True)
+    failed = sum(not one.understood for one in found)
+    console.print(f"{len(found)} exchanges; replies that the driver does not understand: {failed}")
+    return not failed
+
+
 def show_bench(file: str) -> bool:
     """Open a bench's instruments and print who answered; True if all did."""
     from ohmward.api import checking

@@ -1,5 +1,6 @@
-"""``driver check``, ``driver try`` and ``bench check``: before anything is measured."""
+"""``driver check``, ``try`` and ``replay``, ``bench check``: before anything is measured."""
 
+from pathlib import Path
 from typing import Annotated
 
 import typer
@@ -16,6 +17,7 @@ def add_to(app: typer.Typer) -> None:
     """Add these commands to the program."""
     driver_app.command("check")(check_driver)
     driver_app.command("try")(try_address)
+    driver_app.command("replay")(replay)
     bench_app.command("check")(check_bench)
     app.add_typer(driver_app, rich_help_panel=None)
     app.add_typer(bench_app, rich_help_panel=None)
@@ -57,6 +59,24 @@ def try_address(
     sent, received = api.try_address(address, query, termination)
     typer.echo(f"sent     {sent}")
     typer.echo(f"received {received}")
+
+
+def replay(
+    file: Annotated[
+        str, typer.Argument(metavar="FILE", help="Driver file, or the name of a shipped driver.")
+    ],
+    transcript: Annotated[
+        Path, typer.Argument(metavar="TRANSCRIPT", help="A transcript that --transcript kept.")
+    ],
+) -> None:
+    """Put a transcript through a driver, without any instrument: what each reply means to it.
+
+    Exit code 4 when a reply is none that the driver understands.
+    """
+    from ohmward import api
+
+    if not api.show_replay(api.read_driver(file), transcript):
+        raise typer.Exit(4)
 
 
 def check_bench(

@@ -11,6 +11,7 @@ from collections import deque
 from collections.abc import Awaitable, Callable, Iterable
 from dataclasses import asdict, dataclass
 from pathlib import Path
+from typing import NamedTuple
 
 import trio
 
@@ -191,10 +192,22 @@ class TappedWire:
         return received
 
 
-def replayed(exchanges: Iterable[Exchange], driver: Driver) -> list[tuple[Exchange, str, str]]:
-    """Each exchange decoded again without a link: (exchange, the driver's entry, what it means).
+class Replayed(NamedTuple):
+    """An exchange decoded again: the driver's entry whose query was sent, and what it means.
 
-    The entry is the reading or setting whose query was sent; "" for commands that ask nothing.
+    ``entry`` is empty for what asks nothing that the driver knows; ``understood`` is False where
+    a reply came that the driver cannot take.
+    """
+
+    exchange: Exchange
+    entry: str
+    meaning: str
+    understood: bool
+
+
+def replayed(exchanges: Iterable[Exchange], driver: Driver) -> list[Replayed]:
+    """Each exchange decoded again without a link.
+
     A reply that does not fit says why, in the words that the run would have raised.
     """
     codec = codec_of(driver)
@@ -207,15 +220,15 @@ def replayed(exchanges: Iterable[Exchange], driver: Driver) -> list[tuple[Exchan
         if "{" not in reading.ask:
             query = codec.command(reading.ask).encode({})
             layouts[query] = (f"reading.{name}", codec.layout(reading))
-    found = []
-    for exchange in exchanges:
-        entry, layout = layouts.get(exchange.sent, ("", None))
-        meaning = exchange.error
-        if layout is not None and not exchange.error:
-            try:
-                decoded = layout.decode(exchange.received)
-                meaning = f"{decoded.values} {decoded.status}"
-            except ReplyMalformed as error:
-                meaning = str(error)
-        found.append((exchange, entry, meaning))
-    return found
+    return [_replayed(exchange, *layouts.get(exchange.sent, ("", None))) for exchange in exchanges]
+
+
+def _replayed(exchange: Exchange, entry: str, layout: Layout | None) -> Replayed:
+    if layout is None or exchange.error:
+        return Replayed(exchange, entry, exchange.error, True)
+    try:
+        decoded = layout.decode(exchange.received)
+    except ReplyMalformed as error:
+        return Replayed(exchange, entry, str(error), False)
+    said = ", ".join(f"{name} = {value}" for name, value in decoded.values.items())
+    return Replayed(exchange, entry, f"{said} ({decoded.status})", True)
