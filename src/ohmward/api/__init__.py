@@ -13,6 +13,7 @@ if TYPE_CHECKING:
     from ohmward.api.converting import Converted, convert
     from ohmward.api.exporting import export
     from ohmward.api.judging import judge_again
+    from ohmward.api.mishaps import fault_kinds
     from ohmward.api.opening import Run, open_run
     from ohmward.api.plain_json import as_json
     from ohmward.api.preparing import Prepared, prepare
@@ -40,6 +41,7 @@ _NAMES_BY_MODULE: dict[str, tuple[str, ...]] = {
     "converting": ("Converted", "convert"),
     "exporting": ("export",),
     "judging": ("judge_again",),
+    "mishaps": ("fault_kinds",),
     "opening": ("Run", "open_run"),
     "plain_json": ("as_json",),
     "preparing": ("Prepared", "prepare"),
@@ -76,6 +78,7 @@ __all__ = [
     "dry_run",
     "exercise_driver",
     "export",
+    "fault_kinds",
     "judge_again",
     "open_run",
     "prepare",

@@ -3,20 +3,23 @@
 import json
 import secrets
 import sys
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from contextlib import nullcontext, suppress
 from dataclasses import dataclass
 from datetime import timedelta
 from importlib.metadata import version
 from pathlib import Path
 
+import trio
 from rich.console import Console
 
 from ohmward import __version__
 from ohmward.api import simulation
+from ohmward.api.mishaps import Fated, Mishap, read_mishaps
 from ohmward.api.operator import TerminalOperator
 from ohmward.api.preparing import Prepared, prepare, refuse_other_world
 from ohmward.api.tabulating import Truth, tabulate
+from ohmward.api.witness import Witness, WitnessedRecorder
 from ohmward.clock import (
     DRY_RUN_START_UTC,
     Clock,
@@ -37,6 +40,7 @@ from ohmward.run.resuming import Progress, note_differences, progress_of
 from ohmward.run.runner import Order, carry_out
 from ohmward.run.stopping import StopSignals, catch_signals
 from ohmward.run.watcher import Silent, Watcher
+from ohmward.sim.bench import SimulatedBench
 
 RECORDED_PACKAGES = ("pyvisa", "pyvisa-py", "numpy", "scipy", "pandas", "pydantic", "trio")
 
@@ -52,15 +56,27 @@ class Outcome:
     notes: tuple[str, ...] = ()
 
 
-def dry_run(prepared: Prepared, *, out: Path, seed: int = 0, watch: bool = False) -> Outcome:
+def dry_run(
+    prepared: Prepared,
+    *,
+    out: Path,
+    seed: int = 0,
+    watch: bool = False,
+    faults: Sequence[str] = (),
+) -> Outcome:
     """Carry the brief out on a simulated bench in virtual time; same seed, same bytes.
 
-    Opens none of the bench's addresses. Raises BadInput when ``out`` exists.
+    ``faults`` are what is to go wrong, each as PART=KIND@STAGE+TIME. Opens none of the bench's
+    addresses. Raises BadInput when ``out`` exists, or for a fault that there is not.
     """
     refuse_other_world(prepared, simulated=True)
+    if faults:
+        read_mishaps(faults, prepared.brief, simulation.build(prepared, seed=seed))
     run_id = f"dry-{prepared.brief.hash[:12]}-{seed}"
     journal = run_folder.make(out, prepared.sources, prepared.brief)
     facts = _facts(prepared, run_id=run_id, simulated=True, seed=seed)
+    if faults:
+        facts["faults"] = json.dumps(list(faults))
     with run_folder.held(out):
         return _go(_Task(prepared, out, journal, facts, seed=seed), watch=watch)
 
@@ -110,7 +126,8 @@ def _resume(folder: Path, *, watch: bool) -> Outcome:
     seed = int(facts["seed"]) if progress.simulated else 0
     task = _Task(prepared, folder, folder / run_folder.JOURNAL, facts, seed=seed, progress=progress)
     if progress.finished:
-        return _finish(task, _truth_of(task))
+        world = _world_of(task)
+        return _finish(task, None if world is None else world.truth())
     if not task.simulated:
         refuse_unattended(prepared)
     return _go(task, watch=watch)
@@ -163,43 +180,69 @@ class _Task:
         return self.facts["simulated"] == "yes"
 
 
+@dataclass(frozen=True, slots=True)
+class _World:
+    """The simulated bench of a dry run, what is to go wrong on it, and who sees what is true."""
+
+    bench: SimulatedBench
+    mishaps: tuple[Mishap, ...]
+    witness: Witness
+
+    def truth(self) -> Truth:
+        """What is behind each row of results.csv."""
+        befell = {one.part_id: one.kind for one in self.mishaps}
+        return simulation.truth_of(self.bench, self.witness, befell)
+
+
 def _go(task: _Task, *, watch: bool) -> Outcome:
     """Run, then make tables of whatever was measured, also when the run ended early."""
     console = Console(stderr=True, highlight=False)
     bar = ProgressBar(console) if watch else nullcontext(Silent())
-    truth: Truth | None = None
+    world = _world_of(task)
+    truth = None if world is None else world.truth()
     with catch_signals() as stop:  # until the tables are there: a second Ctrl-C must not tear them
         try:
             with bar as watcher:
-                if task.simulated:
-                    truth = _run_dry(task, watcher, stop)
+                if world is not None:
+                    _run_dry(task, world, watcher, stop)
                 else:
                     _run_real(task, watcher, stop)
         except BadInput:
             raise
         except Exception as error:
-            _finish_what_there_is(task, error)
+            _finish_what_there_is(task, truth, error)
             raise
         return _finish(task, truth)
 
 
-def _run_dry(task: _Task, watcher: Watcher, stop: StopSignals) -> Truth:
-    bench = simulation.build(task.prepared, seed=task.seed)
+def _run_dry(task: _Task, world: _World, watcher: Watcher, stop: StopSignals) -> None:
     last_s = task.progress.last_elapsed_s if task.progress else 0.0
 
     async def main(clock: Clock) -> None:
-        connections = simulation.connections(bench)
-        recorder = Recorder(InlineWriter(_store(task)), clock, elapsed_offset_s=last_s)
-        await _carry_out(task, connections, recorder, watcher, stop)
+        connections = simulation.connections(world.bench)
+        recorder = WitnessedRecorder(
+            InlineWriter(_store(task)), clock, world.witness, elapsed_offset_s=last_s
+        )
+        failed: Exception | None = None
+        async with trio.open_nursery() as nursery:  # for what is to go wrong meanwhile
+            fated = Fated(watcher, world.bench, world.mishaps, nursery)
+            try:
+                await _carry_out(task, connections, recorder, fated, stop)
+            except Exception as error:
+                failed = error
+            nursery.cancel_scope.cancel()
+        if failed is not None:
+            raise failed
 
     run_in_virtual_time(main, start_utc=DRY_RUN_START_UTC + timedelta(seconds=last_s))
-    return simulation.truth_of(bench)
 
 
-def _truth_of(task: _Task) -> Truth | None:
+def _world_of(task: _Task) -> _World | None:
     if not task.simulated:
         return None
-    return simulation.truth_of(simulation.build(task.prepared, seed=task.seed))
+    bench = simulation.build(task.prepared, seed=task.seed)
+    faults = json.loads(task.facts.get("faults", "[]"))
+    return _World(bench, read_mishaps(faults, task.prepared.brief, bench), Witness(bench))
 
 
 def _run_real(task: _Task, watcher: Watcher, stop: StopSignals) -> None:
@@ -318,9 +361,9 @@ def _finish(task: _Task, truth: Truth | None) -> Outcome:
     )
 
 
-def _finish_what_there_is(task: _Task, error: Exception) -> None:
+def _finish_what_there_is(task: _Task, truth: Truth | None, error: Exception) -> None:
     """Tables of a run that ended early; a failure here must not hide what ended it."""
     try:
-        _finish(task, None)
+        _finish(task, truth)
     except Exception as second:
         error.add_note(f"its tables could not be written either: {second}")

@@ -8,6 +8,7 @@ import pyvisa
 import trio
 
 from ohmward.api.preparing import Prepared
+from ohmward.api.witness import Witness
 from ohmward.links.virtual_waiter import VirtualWaiter
 from ohmward.run.bench import Connections
 from ohmward.setup.bench import Bench
@@ -16,6 +17,7 @@ from ohmward.setup.resources import shipped
 from ohmward.sim.backend import InProcessLibrary
 from ohmward.sim.bench import SIMULATORS, InstrumentAt, SimulatedBench
 from ohmward.terms.part import Part
+from ohmward.terms.quantity import QUANTITIES
 
 ResultRow = dict[str, object]
 
@@ -78,24 +80,37 @@ def connections(bench: SimulatedBench) -> Connections:
     )
 
 
-def truth_of(bench: SimulatedBench) -> Callable[[ResultRow], tuple[float, str]]:
-    """What the simulated part of a row of results.csv really is, and its fault."""
+def truth_of(
+    bench: SimulatedBench, witness: Witness | None = None, befell: Mapping[str, str] | None = None
+) -> Callable[[ResultRow], tuple[float, str]]:
+    """What the simulated part of a row of results.csv really is, and its fault.
+
+    Under voltage it is what ``witness`` saw; ``befell`` names what a person let befall a part.
+    """
 
     def truth(row: ResultRow) -> tuple[float, str]:
-        part_id = str(row["part_id"])
+        part_id, quantity = str(row["part_id"]), str(row["quantity"])
+        fault = " and ".join(
+            each for each in (bench.fault(part_id), (befell or {}).get(part_id, "")) if each
+        )
+        if QUANTITIES[quantity].per in ("time", "hold"):
+            if witness is None:
+                return nan, fault
+            since_s = _number(row["since_voltage_s"], nan)
+            return witness.truth(part_id, str(row["stage"]), quantity, since_s), fault
         if _number(row.get("reference_age_s"), 0.0):
-            return nan, bench.fault(part_id)  # simulated parts do not age
+            return nan, fault  # simulated parts do not age
         carried_to_c = _number(row.get("reference_temperature_c"), nan)
         value = bench.truth(
             part_id,
-            str(row["quantity"]),
+            quantity,
             frequency_hz=_number(row["frequency_hz"], nan),
             level_v=_number(row["level_v"], 0.0),
             bias_v=_number(row["bias_v"], 0.0),
             bias_a=_number(row["bias_a"], 0.0),
             temperature_c=None if isnan(carried_to_c) else carried_to_c,
         )
-        return value, bench.fault(part_id)
+        return value, fault
 
     return truth
 

@@ -65,6 +65,15 @@ def brief(
         api.show_brief(prepared.brief)
 
 
+def _list_faults(asked: bool) -> None:
+    if asked:
+        from ohmward import api
+
+        for kind, meaning in api.fault_kinds().items():
+            typer.echo(f"{kind:<20}{meaning}")
+        raise typer.Exit
+
+
 def dryrun(
     sequence: SequenceArgument,
     bench: BenchOption,
@@ -72,12 +81,29 @@ def dryrun(
     out: OutOption,
     compensation: CompensationOption = None,
     seed: SeedOption = 0,
+    fault: Annotated[
+        list[str] | None,
+        typer.Option(
+            "--fault",
+            metavar="PART=KIND@STAGE+TIME",
+            help="Let something go wrong, such as C3=short@leakage+60s; may be given again.",
+        ),
+    ] = None,
+    faults: Annotated[
+        bool,
+        typer.Option(
+            "--faults",
+            callback=_list_faults,
+            is_eager=True,
+            help="List what can go wrong, and exit.",
+        ),
+    ] = False,
 ) -> None:
     """Carry the sequence out on a simulated bench, in virtual time; opens no real address."""
     from ohmward import api
 
     prepared = api.prepare(sequence, bench=bench, parts=parts, compensation=compensation, out=out)
-    _show(api.dry_run(prepared, out=out, seed=seed, watch=True))
+    _show(api.dry_run(prepared, out=out, seed=seed, watch=True, faults=fault or ()))
 
 
 def run(

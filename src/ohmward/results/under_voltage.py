@@ -30,6 +30,7 @@ Row = dict[str, object]
 SAME_TIME_REL, SAME_TIME_S = 0.02, 0.5  # a reading so near to the standard's time is that reading
 RATIOS = {"polarization_index": (60.0, 600.0), "absorption_ratio": (30.0, 60.0)}
 DROOP_MOST_REL = 0.05
+OVERDRAWN = ("it draws the current limit", "its current of", "its power of")
 NOT_HERE = "this version measures no resistance by direct current"
 
 
@@ -104,6 +105,17 @@ class Given:
             return "it was not carried out"
         return self.outcomes[-1].why_not
 
+    @property
+    def gave_way(self) -> bool:
+        """Whether the part, seen to be connected, drew so much that it was stopped for it."""
+        last = self.outcomes[-1] if self.outcomes else None
+        return (
+            last is not None
+            and last.reached  # so that the voltmeter has seen the voltage at its own terminals
+            and last.connection not in ("absent", "excess")
+            and last.stopped.startswith(OVERDRAWN)
+        )
+
 
 @dataclass(frozen=True, kw_only=True, slots=True)
 class Current:
@@ -155,6 +167,13 @@ def judge_one(limit: Limit, given: Given | None) -> Judged:
         return _invalid(f"{limit.quantity}: {NOT_HERE}")
     if limit.quantity == "withstood_v":
         return _withstood(limit, given)
+    if given.gave_way and QUANTITIES[limit.quantity].per == "time":
+        return Judged(
+            decision=Decision.REJECT,
+            reason=f"{limit.quantity}: it did not stand "
+            f"{format_quantity(given.plan.voltage_v, 'V')}: {given.outcomes[-1].stopped}; "
+            f"outside {reasons.bounds(limit)}",
+        )
     if given.why_not and limit.quantity != "reformed_v":
         return _invalid(f"{limit.quantity}: {given.why_not}")
     if limit.quantity == "reformed_v":

@@ -167,12 +167,13 @@ class Circuit:
             self._all.rebuild(island)
 
     def harm(self, position: str, kind: str) -> None:
-        """Something befalls the part there: "breakdown" shorts it for good."""
+        """Something befalls the part there: "breakdown" shorts it for good, "leak" lets it leak."""
         part = self._all.parts[position]
-        if part is None or kind != "breakdown":
+        harms = {} if part is None else {"breakdown": part.short, "leak": part.spring_a_leak}
+        if part is None or kind not in harms:
             raise ValueError(f"nothing at {position} can suffer {kind!r}")
-        self._say("breakdown", position, part.part.part_id)
-        self._all.renew(position, part.short)
+        self._say(kind, position, part.part.part_id)
+        self._all.renew(position, harms[kind])
 
     # ---- what is there
 
@@ -229,6 +230,17 @@ class Circuit:
         if self._all.meter_dead:
             return 0.0
         return (self._all.potential("ret") or 0.0) / self._all.burden_ohm
+
+    def part_current(self, position: str) -> float:
+        """Into the part: what its series resistor brings, less what divider and fixture take."""
+        place = next(each for each in self.path.places if each.name == position)
+        series_ohm = place.series_ohm + self.path.kind(place.connect).contact_ohm
+        if not self.contact_closed(place.connect.channel) or "feed" in self._all.broken[position]:
+            return 0.0
+        given_a = self._difference("rail", f"{position}.hi") / series_ohm
+        sensed = any(self.contact_closed(contact.channel) for contact in place.sense)
+        taken_a = self.divider_voltage() / self.path.divider_ohm if sensed else 0.0
+        return given_a - taken_a - self.voltage(position) / place.insulation_ohm
 
     def divider_voltage(self) -> float:
         """Across the voltmeter's divider; 0 where it is connected to nothing."""

@@ -24,6 +24,7 @@ GROWN_SHARE = 1e-5  # of the formed voltage, below which growth is kept aside
 DRIFT_SHARE = 0.1  # of the ionic current, between two looks at an oxide that forms
 NOTABLE_K = 1.0
 BREAKDOWN_OHM = 30.0
+LEAKING_S = 10.0  # R·C of a part that has sprung a leak; sound film has a thousand times more
 CLEARED_SHARE = 0.3  # of the voltage that a clearing spot takes
 CLEARED_F = 2e-4  # share of the capacitance that goes with it
 
@@ -284,6 +285,12 @@ class Stressed:
             return "cleared itself", volts * (1.0 - CLEARED_SHARE)
         self.short()
         return "breakdown", volts
+
+    def spring_a_leak(self) -> None:
+        """Something conducts across it from now on, a hundred times worse than any good part."""
+        farad = self.part.figures.drawn.value
+        leak_ohm = LEAKING_S / farad if farad else LEAKING_S
+        self.part.change(replace(self.part.figures.condition, short_ohm=leak_ohm))
 
     def short(self) -> None:
         """It breaks down for good."""
