@@ -5,7 +5,7 @@ import secrets
 import sys
 from collections.abc import Callable, Mapping, Sequence
 from contextlib import nullcontext, suppress
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import timedelta
 from importlib.metadata import version
 from pathlib import Path
@@ -28,6 +28,7 @@ from ohmward.clock import (
     today_utc,
 )
 from ohmward.errors import BadInput, OhmwardError, Problems
+from ohmward.instruments.transcript import Transcripts
 from ohmward.journal.store import Store
 from ohmward.journal.writer import InlineWriter, ThreadWriter
 from ohmward.output import manifest
@@ -42,7 +43,9 @@ from ohmward.run.stopping import StopSignals, catch_signals
 from ohmward.run.watcher import Silent, Watcher
 from ohmward.sim.bench import SimulatedBench
 
+TRANSCRIPTS = "transcript"
 RECORDED_PACKAGES = ("pyvisa", "pyvisa-py", "numpy", "scipy", "pandas", "pydantic", "trio")
+OnBench = Callable[[SimulatedBench], None]
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -63,9 +66,13 @@ def dry_run(
     seed: int = 0,
     watch: bool = False,
     faults: Sequence[str] = (),
+    transcript: int = 0,
+    on_bench: OnBench | None = None,
 ) -> Outcome:
     """Carry the brief out on a simulated bench in virtual time; same seed, same bytes.
 
+    With ``transcript`` the last so many exchanges of each instrument are kept in the folder.
+    ``on_bench`` gets the simulated bench beforehand, every instrument behind a layer of faults.
     ``faults`` are what is to go wrong, each as PART=KIND@STAGE+TIME. Opens none of the bench's
     addresses. Raises BadInput when ``out`` exists, or for a fault that there is not.
     """
@@ -78,11 +85,22 @@ def dry_run(
     if faults:
         facts["faults"] = json.dumps(list(faults))
     with run_folder.held(out):
-        return _go(_Task(prepared, out, journal, facts, seed=seed), watch=watch)
+        task = _Task(
+            prepared,
+            out,
+            journal,
+            facts,
+            seed=seed,
+            transcripts=Transcripts(transcript) if transcript else None,
+            on_bench=on_bench,
+        )
+        return _go(task, watch=watch)
 
 
-def run(prepared: Prepared, *, out: Path, watch: bool = False) -> Outcome:
+def run(prepared: Prepared, *, out: Path, watch: bool = False, transcript: int = 0) -> Outcome:
     """Carry the brief out on the real bench.
+
+    With ``transcript`` the last so many exchanges of each instrument are kept in the folder.
 
     Raises BadInput when ``out`` exists, a stage energises or nobody is there to load parts, and
     whatever ended the run early; what was measured until then is in the folder.
@@ -95,7 +113,8 @@ def run(prepared: Prepared, *, out: Path, watch: bool = False) -> Outcome:
     journal = run_folder.make(out, prepared.sources, prepared.brief)
     facts = _facts(prepared, run_id=run_id, simulated=False, seed=None)
     with run_folder.held(out):
-        return _go(_Task(prepared, out, journal, facts), watch=watch)
+        transcripts = Transcripts(transcript) if transcript else None
+        return _go(_Task(prepared, out, journal, facts, transcripts=transcripts), watch=watch)
 
 
 def resume(folder: Path, *, watch: bool = False) -> Outcome:
@@ -174,6 +193,8 @@ class _Task:
     facts: Mapping[str, str]
     seed: int = 0
     progress: Progress | None = None
+    transcripts: Transcripts | None = None
+    on_bench: OnBench | None = None
 
     @property
     def simulated(self) -> bool:
@@ -240,7 +261,9 @@ def _run_dry(task: _Task, world: _World, watcher: Watcher, stop: StopSignals) ->
 def _world_of(task: _Task) -> _World | None:
     if not task.simulated:
         return None
-    bench = simulation.build(task.prepared, seed=task.seed)
+    bench = simulation.build(task.prepared, seed=task.seed, with_faults=task.on_bench is not None)
+    if task.on_bench is not None:
+        task.on_bench(bench)
     faults = json.loads(task.facts.get("faults", "[]"))
     return _World(bench, read_mishaps(faults, task.prepared.brief, bench), Witness(bench))
 
@@ -277,6 +300,7 @@ async def _carry_out(
     watcher: Watcher,
     stop: StopSignals,
 ) -> None:
+    connections = replace(connections, transcripts=task.transcripts)
     progress, brief = task.progress, task.prepared.brief
     ended = progress.ended if progress else frozenset()
     behind_s = sum(stage.duration_s for stage in brief.stages if stage.number in ended)
@@ -348,6 +372,8 @@ def _finish(task: _Task, truth: Truth | None) -> Outcome:
             prepared.compensations,
             prepared.bench,
         )
+        if task.transcripts is not None:
+            task.transcripts.write(task.folder / TRANSCRIPTS)
         manifest.write(task.folder, about)
     except OSError as error:
         reason = error.strerror or str(error)

@@ -35,15 +35,26 @@ class SimulatedOperator:
         self._bench.place(part_id, position, trio.current_time())
 
 
-def build(prepared: Prepared, *, seed: int) -> SimulatedBench:
+def build(prepared: Prepared, *, seed: int, with_faults: bool = False) -> SimulatedBench:
     """The simulated bench for a prepared brief: its parts, wiring and instruments, by seed."""
-    return build_bench(prepared.bench, prepared.drivers, prepared.parts, seed=seed)
+    return build_bench(
+        prepared.bench, prepared.drivers, prepared.parts, seed=seed, with_faults=with_faults
+    )
 
 
 def build_bench(
-    bench: Bench, drivers: Mapping[str, Driver], parts: tuple[Part, ...], *, seed: int
+    bench: Bench,
+    drivers: Mapping[str, Driver],
+    parts: tuple[Part, ...],
+    *,
+    seed: int,
+    with_faults: bool = False,
 ) -> SimulatedBench:
-    """The simulated bench that stands behind a bench file."""
+    """The simulated bench that stands behind a bench file.
+
+    ``with_faults`` puts every instrument behind a layer of faults, which does nothing until it
+    is told to.
+    """
     instruments = [
         InstrumentAt(
             name=name,
@@ -61,6 +72,7 @@ def build_bench(
         [_plain(part) for part in parts],
         seed,
         models=shipped("simulators") / "parts",
+        faulty=tuple(bench.instruments) if with_faults else (),
     )
 
 

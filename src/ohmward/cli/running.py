@@ -29,6 +29,15 @@ CompensationOption = Annotated[
         help="What 'ohmward compensate' found of the bench's fixture.",
     ),
 ]
+TranscriptOption = Annotated[
+    int,
+    typer.Option(
+        "--transcript",
+        metavar="N",
+        min=0,
+        help="Keep the last N exchanges of each instrument in the folder; none otherwise.",
+    ),
+]
 SeedOption = Annotated[
     int, typer.Option("--seed", min=0, help="Draws parts and noise; same seed, same bytes.")
 ]
@@ -98,12 +107,16 @@ def dryrun(
             help="List what can go wrong, and exit.",
         ),
     ] = False,
+    transcript: TranscriptOption = 0,
 ) -> None:
     """Carry the sequence out on a simulated bench, in virtual time; opens no real address."""
     from ohmward import api
 
     prepared = api.prepare(sequence, bench=bench, parts=parts, compensation=compensation, out=out)
-    _show(api.dry_run(prepared, out=out, seed=seed, watch=True, faults=fault or ()))
+    outcome = api.dry_run(
+        prepared, out=out, seed=seed, watch=True, faults=fault or (), transcript=transcript
+    )
+    _show(outcome)
 
 
 def run(
@@ -112,6 +125,7 @@ def run(
     parts: PartsOption,
     out: OutOption,
     compensation: CompensationOption = None,
+    transcript: TranscriptOption = 0,
 ) -> None:
     """Carry the sequence out on the real bench.
 
@@ -121,7 +135,7 @@ def run(
     from ohmward import api
 
     prepared = api.prepare(sequence, bench=bench, parts=parts, compensation=compensation, out=out)
-    _show(api.run(prepared, out=out, watch=True))
+    _show(api.run(prepared, out=out, watch=True, transcript=transcript))
 
 
 def resume(
