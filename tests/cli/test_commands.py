@@ -124,6 +124,7 @@ def test_success_prints_json_that_is_json(ohmward: Ohmward) -> None:
         assert ohmward("schema", name).json["type"] == "object"
 
 
+@pytest.mark.slow
 def test_a_local_file_or_folder_does_not_stand_in_for_the_demos(
     ohmward: Ohmward, tmp_path: Path
 ) -> None:
@@ -134,6 +135,7 @@ def test_a_local_file_or_folder_does_not_stand_in_for_the_demos(
     assert ohmward("brief", "depot-survey", *NAMES).code == 2  # a file of that name is meant
 
 
+@pytest.mark.slow
 def test_names_with_spaces_umlauts_and_links(ohmward: Ohmward, tmp_path: Path) -> None:
     folder = tmp_path / "Prüffeld 2 (Werkstatt)"
     folder.mkdir()

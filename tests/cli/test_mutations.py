@@ -12,6 +12,8 @@ from ohmward import api
 from ohmward.errors import BadInput
 from ohmward.setup.resources import shipped
 
+pytestmark = pytest.mark.slow
+
 SEQUENCES = [path.stem for path in sorted(shipped("sequences").glob("*.toml"))]
 SIMULATORS = shipped("simulators")
 # What people and accidents write: hostile numbers, units, types, keys, and what breaks readers.

@@ -46,6 +46,7 @@ def test_a_narrow_terminal_gets_lines_and_no_table() -> None:
     assert "position" not in text
 
 
+@pytest.mark.slow
 def test_odd_names_go_through_a_whole_run(ohmward: Ohmward, tmp_path: Path) -> None:
     rows = [f"{name},{place},capacitor,1 uF,±10 %,63 V,PP" for place, name in enumerate(ODD, 1)]
     heading = "part_id,position,kind,nominal,tolerance,rated_voltage,dielectric"
