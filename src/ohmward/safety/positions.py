@@ -52,13 +52,15 @@ class Charge:
     """What is known of the charge at one position.
 
     ``bound_v`` bounds the part's voltage when nobody measures it; ``witnessed`` says that the
-    voltmeter has seen the applied voltage in this charge.
+    voltmeter has seen the applied voltage in this charge, ``vanished`` that what was charged no
+    longer stands behind the terminals: its contact was lost while it was live.
     """
 
     bound_v: float
     least_f: float
     most_f: float
     witnessed: bool = False
+    vanished: bool = False
     drain_a: float = 0.0  # what it drew last when settled, its divider included
     decay: Decay = Decay.UNRESOLVED
 

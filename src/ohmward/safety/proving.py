@@ -51,7 +51,7 @@ class Prover:
         last_v = abs(samples[-1].voltage_v)
         target_v = short_target_v(self._desk.laws, wired)
         known.decay = self._judge(wired, known, samples)
-        if known.decay is Decay.INSTANT:
+        if known.decay is Decay.INSTANT or known.vanished:
             await self._positions.event(position, E.CONTACT_LOST)
             raise PositionUnproven(position, "its voltage vanished faster than the part can fall")
         if last_v > target_v or known.decay is Decay.STAYS:

@@ -275,6 +275,8 @@ class Charger:
             capacitance_min_f=least_f,
             capacitance_max_f=most_f + desk.wiring.node_capacitance_f(),
         )
+        if course.connection is Connection.ABSENT:
+            self._positions.charge(hold.position).vanished = True
 
     async def _soak(
         self, hold: Hold, soak_s: float, observer: Observer, course: Course

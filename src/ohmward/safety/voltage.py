@@ -252,7 +252,7 @@ class HighVoltageWarden:
         if hold.measured_f is not None:
             known.least_f = min(known.least_f, 0.9 * hold.measured_f)
             known.most_f = max(known.most_f, 1.1 * hold.measured_f)
-        known.witnessed = False
+        known.witnessed = known.vanished = False
         check_way_down(
             desk.laws,
             self._positions.wired(hold.position),
