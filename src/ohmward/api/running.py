@@ -264,7 +264,7 @@ def _world_of(task: _Task) -> _World | None:
     bench = simulation.build(task.prepared, seed=task.seed, with_faults=task.on_bench is not None)
     if task.on_bench is not None:
         task.on_bench(bench)
-    faults = json.loads(task.facts.get("faults", "[]"))
+    faults = json.loads(task.facts.get("faults", "[]")) if task.progress is None else ()
     return _World(bench, read_mishaps(faults, task.prepared.brief, bench), Witness(bench))
 
 
@@ -390,6 +390,8 @@ def _finish(task: _Task, truth: Truth | None) -> Outcome:
 def _finish_what_there_is(task: _Task, truth: Truth | None, error: Exception) -> None:
     """Tables of a run that ended early; a failure here must not hide what ended it."""
     try:
-        _finish(task, truth)
+        outcome = _finish(task, truth)
+        if isinstance(error, OhmwardError):
+            error.outcome = outcome
     except Exception as second:
         error.add_note(f"its tables could not be written either: {second}")

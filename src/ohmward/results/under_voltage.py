@@ -5,7 +5,7 @@ was seen to be in the path. Everything else is invalid with its reason, and neve
 """
 
 from collections.abc import Callable, Iterable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from math import hypot, nan, sqrt
 
 import numpy as np
@@ -106,6 +106,14 @@ class Given:
         return self.outcomes[-1].why_not
 
     @property
+    def cut_short_s(self) -> float | None:
+        """When the runner ended a soak before its time; None where it lasted as planned."""
+        if self.plan.kind not in ("leakage", "insulation") or self.why_not:
+            return None
+        last_s = float(self.column("since_voltage_s").max(initial=0.0))
+        return last_s if last_s < 0.98 * self.plan.lasts_s else None
+
+    @property
     def gave_way(self) -> bool:
         """Whether the part, seen to be connected, drew so much that it was stopped for it."""
         last = self.outcomes[-1] if self.outcomes else None
@@ -180,12 +188,26 @@ def judge_one(limit: Limit, given: Given | None) -> Judged:
         return _reformed(limit, given)
     if limit.quantity == "absorption_rel":
         return _absorbed(limit, given)
+    if given.cut_short_s is not None and QUANTITIES[limit.quantity].per == "time":
+        return _cut_short(limit, given, given.cut_short_s)
     try:
         if limit.quantity in RATIOS:
             return _ratio(limit, given)
         return _of_current(limit, given, current_at(given, _time_of(limit, given)))
     except _NoCurrentError as why:
         return _invalid(f"{limit.quantity}: {why}")
+
+
+def _cut_short(limit: Limit, given: Given, after_s: float) -> Judged:
+    """The runner stops a part whose leakage rises: rejected by its last reading, or not judged."""
+    said = f"its leakage rose and it was stopped after {after_s:.0f} s"
+    try:
+        last = _of_current(limit, given, current_at(given, after_s))
+    except _NoCurrentError as why:
+        return _invalid(f"{limit.quantity}: {said}; {why}")
+    if last.decision is Decision.REJECT:
+        return replace(last, reason=f"{last.reason}; {said}")
+    return _invalid(f"{limit.quantity}: {said}")
 
 
 def _time_of(limit: Limit, given: Given) -> float:
@@ -201,7 +223,6 @@ def current_at(given: Given, since_s: float) -> Current:
     good = np.isfinite(current) & np.isfinite(spread) & (given.column("voltage_set_v") > 0.0)
     if not good.any():
         raise _NoCurrentError("no reading can be trusted")
-    _check_course(given, times[good])
     times, current, spread = times[good], current[good], spread[good]
     volts = given.column("voltage_v")[good]
     nearest = int(np.argmin(np.abs(times - since_s)))
@@ -221,12 +242,6 @@ def current_at(given: Given, since_s: float) -> Current:
         since_s=since_s if fitted else float(times[nearest]),
         fitted=fitted,
     )
-
-
-def _check_course(given: Given, times: NDArray[np.float64]) -> None:
-    """A hold that the runner cut short was cut short for a reason."""
-    if given.plan.kind in ("leakage", "insulation") and times.max() < 0.98 * given.plan.lasts_s:
-        raise _NoCurrentError(f"its leakage rose: it was stopped after {times.max():.0f} s")
 
 
 def _interpolated(
@@ -259,7 +274,7 @@ def _of_current(limit: Limit, given: Given, at: Current) -> Judged:
     scale_rel = given.voltage_error_v(at.voltage_v) / sqrt(3.0) / at.voltage_v
     if limit.quantity == "insulation_time_s":
         if not farad > 0.0:
-            return _invalid(f"{limit.quantity}: the part's capacitance was not measured", at, given)
+            return _invalid(f"{limit.quantity}: the part's capacitance was not measured")
         scale_rel = hypot(scale_rel, u_farad / farad)
     k = given.rule.coverage_k
     most_a = None if limit.minimum is None else scale / limit.minimum
@@ -316,7 +331,7 @@ def _ratio(limit: Limit, given: Given) -> Judged:
     early, late = (current_at(given, since_s) for since_s in RATIOS[limit.quantity])
     k = given.rule.coverage_k
     if late.value_a <= k * late.u_a or early.value_a <= k * early.u_a:
-        return _invalid(f"{limit.quantity}: the leakage is too small to be divided by", late, given)
+        return _invalid(f"{limit.quantity}: the leakage is too small to be divided by")
     value = early.value_a / late.value_a
     u = value * hypot(early.u_a / early.value_a, late.u_a / late.value_a)
     return _decided(limit, given, late, value, u)
@@ -330,6 +345,8 @@ def _reformed(limit: Limit, given: Given) -> Judged:
     outcome = given.outcomes[-1]
     if outcome.connection != "agrees" or not (outcome.bypass_shown or outcome.stopped):
         return _invalid(f"{limit.quantity}: {outcome.why_not}")
+    if not given.column("since_voltage_s").size:
+        return _invalid(f"{limit.quantity}: {outcome.why_not or 'nothing was read'}")
     names = ("elapsed_s", "since_voltage_s", "voltage_set_v", "current_a")
     rows = zip(*(given.column(name).tolist() for name in names), strict=True)
     passed_v, step = replayed(rule, rows)
@@ -408,7 +425,7 @@ def _absorbed(limit: Limit, given: Given) -> Judged:
 # ---- rows
 
 
-def _invalid(reason: str, at: Current | None = None, given: Given | None = None) -> Judged:
+def _invalid(reason: str) -> Judged:
     return Judged(decision=Decision.INVALID, reason=reason)
 
 
