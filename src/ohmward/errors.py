@@ -76,9 +76,13 @@ class Problems:
 
 
 class OhmwardError(Exception):
-    """Root of the tree; by itself it means that ohmward is at fault."""
+    """Root of the tree; by itself it means that ohmward is at fault.
+
+    ``outcome`` is what a run left behind that this error ended early: its folder and decisions.
+    """
 
     exit_code = 1
+    outcome: Any = None
 
 
 class BadInput(OhmwardError):

@@ -1,9 +1,12 @@
 """``brief``, ``dryrun``, ``run``, ``resume`` and ``demo``: a sequence, a bench and a parts list."""
 
+from collections.abc import Callable
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated
 
 import typer
+
+from ohmward.errors import OhmwardError
 
 if TYPE_CHECKING:
     from ohmward.api import Outcome
@@ -49,10 +52,17 @@ def add_to(app: typer.Typer) -> None:
         app.command()(command)
 
 
-def _show(outcome: "Outcome") -> None:
-    """Write the report of a finished run beside its tables, then print the decisions."""
+def _show(carry_out: Callable[[], "Outcome"]) -> None:
+    """Carry a run out, write its report and print the decisions: also where it ended early."""
     from ohmward import api
 
+    try:
+        outcome = carry_out()
+    except OhmwardError as error:
+        if error.outcome is not None:
+            api.write_report(error.outcome.folder)
+            api.show_run(error.outcome)
+        raise
     api.write_report(outcome.folder)
     api.show_run(outcome)
 
@@ -113,10 +123,11 @@ def dryrun(
     from ohmward import api
 
     prepared = api.prepare(sequence, bench=bench, parts=parts, compensation=compensation, out=out)
-    outcome = api.dry_run(
-        prepared, out=out, seed=seed, watch=True, faults=fault or (), transcript=transcript
+    _show(
+        lambda: api.dry_run(
+            prepared, out=out, seed=seed, watch=True, faults=fault or (), transcript=transcript
+        )
     )
-    _show(outcome)
 
 
 def run(
@@ -135,7 +146,7 @@ def run(
     from ohmward import api
 
     prepared = api.prepare(sequence, bench=bench, parts=parts, compensation=compensation, out=out)
-    _show(api.run(prepared, out=out, watch=True, transcript=transcript))
+    _show(lambda: api.run(prepared, out=out, watch=True, transcript=transcript))
 
 
 def resume(
@@ -144,7 +155,7 @@ def resume(
     """Go on with a run that was stopped or killed; readings already taken are kept."""
     from ohmward import api
 
-    _show(api.resume(folder, watch=True))
+    _show(lambda: api.resume(folder, watch=True))
 
 
 def demo(
@@ -164,4 +175,4 @@ def demo(
         parts=shipped("simulators") / "depot-lot.csv",
         out=out,
     )
-    _show(api.dry_run(prepared, out=out, seed=seed, watch=True))
+    _show(lambda: api.dry_run(prepared, out=out, seed=seed, watch=True))
