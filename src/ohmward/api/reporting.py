@@ -2,17 +2,21 @@
 
 from pathlib import Path
 
-from ohmward.journal.store import Store
+from ohmward.journal.store import JournalUnusable, Store
 from ohmward.output import manifest, report
+from ohmward.output.record import RunUnreadable
 from ohmward.run.folder import JOURNAL
 
 
 def write_report(folder: Path) -> Path:
     """Write report.html into a run's folder from its tables, and renew the manifest.
 
-    Raises JournalUnusable or RunUnreadable, naming what is wrong; then nothing is written.
+    Raises RunUnreadable, naming what is wrong; then nothing is written.
     """
-    store = Store.read(folder / JOURNAL)
+    try:
+        store = Store.read(folder / JOURNAL)
+    except JournalUnusable as error:
+        raise RunUnreadable(str(error)) from error
     try:
         facts, instruments = store.facts(), store.instruments()
     finally:

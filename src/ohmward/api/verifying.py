@@ -55,8 +55,10 @@ def verify(folder: Path) -> Verified:
     try:
         kept = json.loads(path.read_text("utf-8"))
         listed = {name: one["sha256"] for name, one in kept["files"].items()}
-    except (OSError, ValueError, KeyError, TypeError) as error:
-        raise RunUnreadable(f"{path}: {error!r}; this folder cannot be verified") from error
+    except OSError as error:
+        raise RunUnreadable(f"{path}: {error.strerror}; this folder cannot be verified") from error
+    except (ValueError, KeyError, TypeError) as error:
+        raise RunUnreadable(f"{path} is no manifest; this folder cannot be verified") from error
     there = {
         file.relative_to(folder).as_posix(): file
         for file in folder.rglob("*")

@@ -71,7 +71,7 @@ UNITS: dict[str, Unit] = dict(
             names=("f", "farad", "farads", "fd"),
             prefixes="fpnum",
             shown="F",
-            shown_prefixes="fpnum",
+            shown_prefixes="fpnu",  # a large capacitor is 1000 µF to everyone, never 1 mF
         ),
         Unit(
             symbol="H",
