@@ -21,7 +21,7 @@ from ohmward.terms.quantity import QUANTITIES
 
 ResultRow = dict[str, object]
 
-LOOK_S = 5.0  # a simulated part needs no closer watch than its readings, and looking takes time
+LOOK_S = 10.0  # a simulated part needs no closer watch than its readings, and looking takes time
 
 
 class SimulatedOperator:

@@ -6,7 +6,7 @@ was seen to be in the path. Everything else is invalid with its reason, and neve
 
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass, replace
-from math import hypot, nan, sqrt
+from math import hypot, inf, nan, sqrt
 
 import numpy as np
 from numpy.typing import NDArray
@@ -413,6 +413,11 @@ def _absorbed(limit: Limit, given: Given) -> Judged:
     near = back & (np.abs(times - wanted_s) <= max(SAME_TIME_REL * wanted_s, SAME_TIME_S))
     if not near.any() or not charged.any():
         return _invalid(f"{limit.quantity}: it was not read {wanted_s:g} s after the short")
+    last_a = float(given.column("current_a")[charged][-1])
+    keeps_s = float(volts[charged][-1]) * given.capacitance[0] / last_a if last_a > 0.0 else inf
+    if not keeps_s > wanted_s:
+        kept = format_quantity(keeps_s, "s", 2)
+        return _invalid(f"{limit.quantity}: it leaks too much to keep what comes back ({kept})")
     row = int(np.flatnonzero(near)[0])
     first_v, back_v = float(volts[charged][-1]), float(volts[row])
     value = back_v / first_v / (1.0 - droop)

@@ -112,6 +112,8 @@ class Charger:
             series_ohm=wired.series_ohm,
             capacitance_f=whole_f,
         )
+        # where looking is seldom, a slow ramp needs no more settings than a fast one
+        every_s = max(desk.facts.ramp_every_s, min(desk.facts.check_s / 5.0, 0.04 * expected_s))
         course.from_v, began_s = course.set_v, desk.time.now_s()
         course.currents = [(began_s, 0.0)]
         known.bound_v = max(known.bound_v, to_v)
@@ -128,7 +130,7 @@ class Charger:
                 break
             if limit_is_fault(desk.laws, elapsed_s=spent_s, expected_s=expected_s):
                 raise PartFault(_why_low(volts, course.set_v, supply))
-            await desk.time.sleep(desk.facts.ramp_every_s)
+            await desk.time.sleep(every_s)
         course.reached = True
         course.ramp_s = desk.time.now_s() - began_s
         await self._positions.event(hold.position, PositionEvent.REACHED)
