@@ -61,7 +61,7 @@ def test_a_link_that_comes_back_after_an_hour_goes_on_with_its_sweep(tmp_path: P
     (lost,) = [row for row in found if row["status"] != "ok"]
     assert lost["status"] in ("timeout", "stale", "unsettled")
     for row, was in zip(found, other, strict=True):
-        if row["status"] == "ok" == was["status"] and was["cs_f"] and row["cs_f"]:
+        if row["status"] == "ok" and row["part_id"] != "HD-C4":  # a short has no capacitance
             assert float(row["cs_f"]) == pytest.approx(float(was["cs_f"]), rel=0.01)
     times = [float(row["elapsed_s"]) for row in found]
     assert max(b - a for a, b in pairwise(times)) == pytest.approx(HOUR_S, rel=0.02)
