@@ -52,7 +52,7 @@ def serve(listener: socket.socket, delay_s: float) -> None:
         connection.close()
 
 
-def serve_hislip(listener: socket.socket) -> None:
+def serve_hislip(listener: socket.socket, delay_s: float) -> None:
     """Answer as a HiSLIP instrument with two connections at a time (IVI-6.1)."""
     while True:
         sync, _ = listener.accept()
@@ -67,6 +67,8 @@ def serve_hislip(listener: socket.socket) -> None:
         try:
             while True:
                 _, number, _ = hear(sync)
+                if delay_s:
+                    time.sleep(delay_s)
                 sync.sendall(frame(7, number, REPLY))
         except (OSError, struct.error):
             sync.close()
@@ -84,9 +86,11 @@ def hear(connection: socket.socket) -> tuple[int, int, bytes]:
     return kind, number, connection.recv(length, socket.MSG_WAITALL) if length else b""
 
 
-def serve_line(master: int) -> None:
+def serve_line(master: int, delay_s: float) -> None:
     """Answer on a pseudo-terminal."""
     while os.read(master, 4096):
+        if delay_s:
+            time.sleep(delay_s)
         os.write(master, REPLY)
 
 
@@ -122,18 +126,21 @@ def instrument(delay_s: float) -> Iterator[str]:
 
 
 @contextmanager
-def hislip_instrument() -> Iterator[str]:
+def hislip_instrument(delay_s: float = 0.0) -> Iterator[str]:
     """An instrument that speaks HiSLIP; gives its address."""
-    with socket.create_server(("127.0.0.1", 0)) as listener, served(serve_hislip, listener):
+    with (
+        socket.create_server(("127.0.0.1", 0)) as listener,
+        served(serve_hislip, listener, delay_s),
+    ):
         yield f"TCPIP::127.0.0.1::hislip0,{listener.getsockname()[1]}::INSTR"
 
 
 @contextmanager
-def serial_instrument() -> Iterator[str]:
+def serial_instrument(delay_s: float = 0.0) -> Iterator[str]:
     """An instrument on a serial line; gives its address."""
     master, slave = os.openpty()
     tty.setraw(slave)
-    with served(serve_line, master):
+    with served(serve_line, master, delay_s):
         yield f"ASRL{os.ttyname(slave)}::INSTR"
     os.close(master)
     os.close(slave)
@@ -242,6 +249,15 @@ def main() -> None:
             rounds,
             0.9,
         )
+    for kind, served_as in (("HiSLIP", hislip_instrument), ("serial", serial_instrument)):
+        with served_as(0.01) as address:
+            compare(
+                f"{kind}, 10 ms, against bare PyVISA",
+                partial(bare, address, 100),
+                partial(linked, address, 100),
+                rounds,
+                0.95,
+            )
 
 
 if __name__ == "__main__":
