@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from ohmward.api.tabulating import Arrays, accuracies_of, journal_columns
+from ohmward.api.under_voltage import UnderVoltage, under_voltage
 from ohmward.errors import BadInput, Problem, Problems
 from ohmward.journal.store import Row, Store
 from ohmward.metrology.compensation import Compensation
@@ -23,7 +24,17 @@ from ohmward.results.derive import derive_impedance
 from ohmward.results.judged import Rule
 from ohmward.run.folder import INPUTS, JOURNAL
 from ohmward.run.resuming import progress_of
-from ohmward.sequence.brief import PlannedSweep, Settle
+from ohmward.sequence.brief import (
+    PlannedAbsorption,
+    PlannedDirect,
+    PlannedInsulation,
+    PlannedLeakage,
+    PlannedProof,
+    PlannedReform,
+    PlannedResistance,
+    PlannedSweep,
+    Settle,
+)
 from ohmward.setup.bench import Bench
 from ohmward.setup.compensation_file import load_compensation
 from ohmward.setup.driver import Driver
@@ -35,6 +46,14 @@ from ohmward.terms.limit import Limit
 from ohmward.terms.part import Part
 
 T = TypeVar("T")
+
+DIRECT: Mapping[str, type[PlannedDirect]] = {
+    stage.kind: stage
+    for stage in (
+        *(PlannedLeakage, PlannedInsulation, PlannedReform, PlannedProof),
+        *(PlannedAbsorption, PlannedResistance),
+    )
+}
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
@@ -53,6 +72,7 @@ class PastRun:
     readings: Arrays
     events: list[Row]
     impedance: Mapping[str, NDArray[Any]]
+    direct: UnderVoltage | None = None
 
     @property
     def closures(self) -> set[str]:
@@ -70,10 +90,22 @@ def past_run(folder: Path) -> PastRun:
         path.stem: Driver.model_validate(_json(path))
         for path in sorted((inputs / "drivers").glob("*.json"))
     }
-    accuracies, cable_m = accuracies_of(drivers), _cables(inputs)
+    bench = _bench(inputs)
+    accuracies = accuracies_of(drivers)
+    cable_m = {name: one.cable_m for name, one in bench.instruments.items()}
     compensations = _compensations(inputs)
     readings, events = _readings(folder)
     by_id = {part.part_id: part for part in parts}
+    impedance = derive_impedance(
+        readings,
+        parts,
+        accuracies,
+        run_id=facts["run_id"],
+        simulated=facts["simulated"] == "yes",
+        cable_m=cable_m,
+        compensations=compensations,
+    )
+    both = {**readings, **impedance}
     return PastRun(
         folder=folder,
         run_id=facts["run_id"],
@@ -86,15 +118,8 @@ def past_run(folder: Path) -> PastRun:
         compensations=compensations,
         readings=readings,
         events=events,
-        impedance=derive_impedance(
-            readings,
-            parts,
-            accuracies,
-            run_id=facts["run_id"],
-            simulated=facts["simulated"] == "yes",
-            cable_m=cable_m,
-            compensations=compensations,
-        ),
+        impedance=impedance,
+        direct=_direct(folder, brief, parts, bench, drivers, both, facts),
     )
 
 
@@ -111,13 +136,53 @@ def _readings(folder: Path) -> tuple[Arrays, list[Row]]:
     return {name: np.concatenate([one[name] for one in batches]) for name in names}, events
 
 
-def _cables(inputs: Path) -> dict[str, float]:
+def _bench(inputs: Path) -> Bench:
     problems = Problems()
     table = read_toml(inputs / "bench.toml", problems)
     bench = None if table is None else validate(Bench, table, inputs / "bench.toml", problems)
     problems.raise_if_any()
-    instruments = bench.instruments if bench is not None else {}
-    return {name: one.cable_m for name, one in instruments.items()}
+    if bench is None:
+        raise _unusable(inputs / "bench.toml", "the bench of the run", "none")
+    return bench
+
+
+def _direct(
+    folder: Path,
+    brief: Mapping[str, Any],
+    parts: tuple[Part, ...],
+    bench: Bench,
+    drivers: Mapping[str, Driver],
+    impedance: Mapping[str, NDArray[Any]],
+    facts: Mapping[str, str],
+) -> UnderVoltage | None:
+    """What was read under voltage; None for a run without such stages."""
+    by_id = {part.part_id: part for part in parts}
+    planned = [
+        _made(DIRECT[row["kind"]], _tuples(row), part=by_id[row["part"]])
+        for row in brief["stages"]
+        if row["kind"] in DIRECT
+    ]
+    if not planned:
+        return None
+    store = Store.read(folder / JOURNAL)
+    try:
+        return under_voltage(
+            store,
+            parts,
+            planned,
+            bench,
+            drivers,
+            impedance,
+            rule=Rule(guard=brief["guard"], coverage_k=brief["coverage_k"]),
+            run_id=facts["run_id"],
+            simulated=facts["simulated"] == "yes",
+        )
+    finally:
+        store.abandon()
+
+
+def _tuples(row: Mapping[str, Any]) -> dict[str, Any]:
+    return {key: tuple(value) if isinstance(value, list) else value for key, value in row.items()}
 
 
 def _compensations(inputs: Path) -> dict[str, Compensation]:

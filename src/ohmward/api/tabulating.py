@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from ohmward.api.under_voltage import under_voltage
+from ohmward.api.under_voltage import of_sweeps, under_voltage, with_direct
 from ohmward.journal import schema
 from ohmward.journal.store import Row, Store
 from ohmward.metrology.compensation import Compensation
@@ -17,18 +17,15 @@ from ohmward.output.tables import TableWriter
 from ohmward.results.derive import derive_impedance
 from ohmward.results.judge import judge
 from ohmward.results.judged import Rule
-from ohmward.results.under_voltage import judge_under_voltage
-from ohmward.sequence.brief import Brief
+from ohmward.sequence.brief import Brief, PlannedDirect
 from ohmward.setup.bench import Bench
 from ohmward.setup.driver import Driver
 from ohmward.terms.accuracy import ImpedanceAccuracy
-from ohmward.terms.quantity import QUANTITIES
 
 Arrays = dict[str, NDArray[Any]]
 ResultRow = dict[str, object]
 Truth = Callable[[ResultRow], tuple[float, str]]
 
-OF_SWEEPS = frozenset({"point", "part"})
 _TEXT = {"range", "integration", "status", "pair", "instrument"}
 _KEPT_OF_JOURNAL = (
     "reading",
@@ -94,10 +91,12 @@ def tabulate(
         readings, derived = (one.whole() for one in kept)
         rule = Rule(guard=brief.guard, coverage_k=brief.coverage_k)
         direct = None
-        if bench is not None and len(brief.sweeps) < len(brief.stages):
+        planned = [stage for stage in brief.stages if isinstance(stage, PlannedDirect)]
+        if bench is not None and planned:
             direct = under_voltage(
                 store,
-                brief,
+                brief.parts,
+                planned,
                 bench,
                 drivers,
                 {**readings, **derived},
@@ -112,7 +111,7 @@ def tabulate(
         readings,
         derived,
         brief.parts,
-        [limit for limit in brief.limits if QUANTITIES[limit.quantity].per in OF_SWEEPS],
+        of_sweeps(brief.limits),
         rule=rule,
         closures=closures,
         accuracies=accuracies_of(drivers),
@@ -122,9 +121,7 @@ def tabulate(
     if direct is not None:
         with TableWriter(folder, columns.LEAKAGE) as table:
             table.arrays(direct.rows)
-        results += judge_under_voltage(brief.limits, brief.parts, direct.stages, run_id=run_id)
-        place = {part.part_id: number for number, part in enumerate(brief.parts)}
-        results.sort(key=lambda row: place[str(row["part_id"])])
+    results = with_direct(results, direct, brief.limits, brief.parts, run_id)
     with TableWriter(folder, columns.RESULTS) as table:
         table.rows(results)
     if truth is not None:

@@ -1,7 +1,7 @@
 """From the journal to the rows of leakage.csv, and to what is judged of stages under voltage."""
 
 import json
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from functools import partial
 from math import inf, nan, pi, sqrt
@@ -14,11 +14,16 @@ from ohmward.journal import schema
 from ohmward.journal.store import Store
 from ohmward.results.judged import Rule
 from ohmward.results.leakage import Path, derive_leakage, range_of
-from ohmward.results.under_voltage import Given, Outcome, PlannedHold
+from ohmward.results.under_voltage import (
+    Given,
+    Outcome,
+    PlannedHold,
+    Row,
+    judge_under_voltage,
+)
 from ohmward.run.high_voltage import error_a
 from ohmward.run.holding import forming_rule
 from ohmward.sequence.brief import (
-    Brief,
     PlannedAbsorption,
     PlannedDirect,
     PlannedLeakage,
@@ -29,7 +34,9 @@ from ohmward.setup.bench import Bench
 from ohmward.setup.driver import Driver
 from ohmward.terms.accuracy import ScalarAccuracy
 from ohmward.terms.kind import Kind
+from ohmward.terms.limit import Limit
 from ohmward.terms.part import Part
+from ohmward.terms.quantity import QUANTITIES
 from ohmward.terms.role import Role
 
 Arrays = dict[str, NDArray[Any]]
@@ -48,7 +55,8 @@ class UnderVoltage:
 
 def under_voltage(
     store: Store,
-    brief: Brief,
+    parts: Sequence[Part],
+    planned: Iterable[PlannedDirect],
     bench: Bench,
     drivers: Mapping[str, Driver],
     impedance: Mapping[str, NDArray[Any]],
@@ -62,7 +70,7 @@ def under_voltage(
     ``impedance`` are part_id, frequency_hz, bias_set_v, reactance_ohm and u_reactance_ohm of
     what the sweeps have read: from there comes each part's capacitance.
     """
-    capacitances = {part.part_id: capacitance_of(part, impedance) for part in brief.parts}
+    capacitances = {part.part_id: capacitance_of(part, impedance) for part in parts}
     journal = leakage_columns(store)
     rows = derive_leakage(
         journal,
@@ -72,12 +80,12 @@ def under_voltage(
         run_id=run_id,
         simulated=simulated,
     )
-    planned = {stage.number: stage for stage in brief.stages if isinstance(stage, PlannedDirect)}
     outcomes = _outcomes(store)
     volts = drivers.get(bench.name_of_role(Role.VOLTMETER))
     ammeter = drivers.get(bench.name_of_role(Role.CURRENT_METER))
     stages = {}
-    for number, stage in planned.items():
+    for stage in planned:
+        number = stage.number
         here = journal["stage_number"] == number
         holds = outcomes.get(number, {})
         last = max(holds, default=0)
@@ -91,6 +99,26 @@ def under_voltage(
             rule=rule,
         )
     return UnderVoltage(rows=rows, stages=stages)
+
+
+def with_direct(
+    swept: list[Row],
+    direct: UnderVoltage | None,
+    limits: Iterable[Limit],
+    parts: Sequence[Part],
+    run_id: str,
+) -> list[Row]:
+    """The rows of results.csv: those of the sweeps, each part's then followed by the others."""
+    if direct is None:
+        return swept
+    rows = swept + judge_under_voltage(limits, parts, direct.stages, run_id=run_id)
+    place = {part.part_id: number for number, part in enumerate(parts)}
+    return sorted(rows, key=lambda row: place[str(row["part_id"])])
+
+
+def of_sweeps(limits: Iterable[Limit]) -> list[Limit]:
+    """The limits that an impedance meter's readings are held against."""
+    return [limit for limit in limits if QUANTITIES[limit.quantity].per in ("point", "part")]
 
 
 def leakage_columns(store: Store) -> Arrays:

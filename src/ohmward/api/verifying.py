@@ -7,6 +7,7 @@ from pathlib import Path
 
 from ohmward.api.past_run import PastRun, past_run
 from ohmward.api.tabulating import write_events
+from ohmward.api.under_voltage import of_sweeps, with_direct
 from ohmward.errors import OhmwardError
 from ohmward.output import columns, manifest
 from ohmward.output.record import RunUnreadable
@@ -92,7 +93,7 @@ def _differing(folder: Path) -> tuple[str, ...]:
         _tables_again(past, again)
         return tuple(
             table.file
-            for table in MADE_AGAIN
+            for table in (*MADE_AGAIN, *((columns.LEAKAGE,) if past.direct else ()))
             if not (folder / table.file).is_file()
             or (folder / table.file).read_bytes() != (again / table.file).read_bytes()
         )
@@ -105,13 +106,17 @@ def _tables_again(past: PastRun, out: Path) -> None:
         past.readings,
         past.impedance,
         past.parts,
-        past.limits,
+        of_sweeps(past.limits),
         rule=past.rule,
         closures=past.closures,
         accuracies=past.accuracies,
         cable_m=past.cable_m,
         run_id=past.run_id,
     )
+    if past.direct is not None:
+        with TableWriter(out, columns.LEAKAGE) as table:
+            table.arrays(past.direct.rows)
+    results = with_direct(results, past.direct, past.limits, past.parts, past.run_id)
     with TableWriter(out, columns.RESULTS) as table:
         table.rows(results)
     write_events(out, past.run_id, past.events)
