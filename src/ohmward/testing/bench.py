@@ -1,8 +1,7 @@
 """An in-process bench under a virtual clock, with a knob for faults: what the fixture hands out."""
 
-from collections.abc import AsyncIterator, Awaitable, Callable, Sequence
+from collections.abc import AsyncIterator, Awaitable, Callable
 from contextlib import asynccontextmanager
-from dataclasses import fields
 from pathlib import Path
 from typing import TypeVar
 
@@ -11,7 +10,16 @@ import trio
 from ohmward import api
 from ohmward.api.preparing import Prepared
 from ohmward.api.running import Outcome
-from ohmward.api.simulation import build_bench, connections, simulator_of
+from ohmward.api.simulation import build_bench, connections
+from ohmward.api.under_test import (
+    ADDRESS,
+    INSTRUMENT,
+    KINDS,
+    Chance,
+    Fault,
+    SimulatedBench,
+    bench_of_driver,
+)
 from ohmward.clock import Clock, run_in_virtual_time
 from ohmward.errors import Problems
 from ohmward.instruments.talker import Talker, open_talker
@@ -21,16 +29,10 @@ from ohmward.setup.bench import load_bench
 from ohmward.setup.bench_drivers import load_drivers
 from ohmward.setup.driver import Driver
 from ohmward.setup.parts import load_parts
-from ohmward.setup.resources import find_file, shipped
-from ohmward.sim.bench import InstrumentAt, SimulatedBench
-from ohmward.sim.faults import KINDS, Chance, Fault
+from ohmward.setup.resources import find_file
 from ohmward.terms.part import Part
-from ohmward.terms.role import Role
 
 T = TypeVar("T")
-INSTRUMENT = "instrument"
-ADDRESS = "TCPIP::192.0.2.1::5025::SOCKET"
-CHANNELS = tuple(str(bank + n) for bank in (100, 200) for n in range(1, 11))
 
 
 class OpenInstruments:
@@ -180,7 +182,7 @@ class VirtualBench:
         if self._driver is not None:
             rows = self._rows(None, problems)
             problems.raise_if_any()
-            simulated = _bench_of_one(self._driver, rows, self.seed)
+            simulated = bench_of_driver(self._driver, rows, self.seed)
             return simulated, {INSTRUMENT: self._driver}, {INSTRUMENT: ADDRESS}
         bench = load_bench(find_file(self._bench, "simulators"), problems)
         drivers = load_drivers(bench, problems) if bench else None
@@ -225,30 +227,3 @@ class VirtualBench:
                 for talker in talkers.values():
                     await talker.aclose()
             linked.manager.close()
-
-
-def _bench_of_one(driver: Driver, parts: Sequence[Part], seed: int) -> SimulatedBench:
-    positions = {"1": CHANNELS if driver.role is Role.SCANNER else ()}
-    instrument = InstrumentAt(
-        name=INSTRUMENT,
-        address=ADDRESS,
-        simulator=simulator_of(driver),
-        driver=driver.merged,
-    )
-    rows = [
-        {one.name: getattr(part, one.name) for one in fields(part)}
-        | {"kind": part.kind.value, "polarity": part.polarity.value, "position": "1"}
-        for part in parts
-    ]
-    bench = SimulatedBench(
-        None,
-        [instrument],
-        positions,
-        rows,
-        seed,
-        models=shipped("simulators") / "parts",
-        faulty=(INSTRUMENT,),
-    )
-    if parts and driver.role is Role.IMPEDANCE_METER:
-        bench.place(parts[0].part_id)
-    return bench
