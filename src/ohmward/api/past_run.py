@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 from ohmward.api.tabulating import Arrays, accuracies_of, journal_columns
 from ohmward.api.under_voltage import UnderVoltage, under_voltage
 from ohmward.errors import BadInput, Problem, Problems
+from ohmward.journal import schema
 from ohmward.journal.store import Row, Store
 from ohmward.metrology.compensation import Compensation
 from ohmward.results.compensations import compensations_of
@@ -47,6 +48,7 @@ from ohmward.terms.part import Part
 
 T = TypeVar("T")
 
+NAMES = ("part_id", "position", "stage", "status", "range", "integration", "pair", "instrument")
 DIRECT: Mapping[str, type[PlannedDirect]] = {
     stage.kind: stage
     for stage in (
@@ -131,7 +133,11 @@ def _readings(folder: Path) -> tuple[Arrays, list[Row]]:
     finally:
         store.abandon()
     if not batches:
-        raise _unusable(folder, "a run with readings of an impedance meter", "none")
+        nothing: Arrays = {
+            name: np.array([], dtype=object if name in NAMES else np.float64)
+            for name in (*("reading", *NAMES, "time_utc"), *schema.IMPEDANCE_COLUMNS)
+        }
+        return nothing | {"time_utc": np.array([], dtype="datetime64[us]")}, events
     names = batches[0]
     return {name: np.concatenate([one[name] for one in batches]) for name in names}, events
 

@@ -451,14 +451,22 @@ def _unlimited(part_id: str, stage: str, given: Given) -> list[Limit]:
 
 
 def _reported(limit: Limit, given: Given) -> Judged:
-    found = judge_one(limit, given)
-    said = found.reason.partition(": within")[0]
+    """A leakage that no limit judges; where it cannot be trusted there is no value."""
+    if given.why_not:
+        reason = f"{limit.quantity}: {given.why_not}"
+        return Judged(decision=Decision.REPORTED, reason=reason)
+    try:
+        at = current_at(given, _time_of(limit, given))
+    except _NoCurrentError as why:
+        return Judged(decision=Decision.REPORTED, reason=f"{limit.quantity}: {why}")
+    k = given.rule.coverage_k
+    where = _where(at).removeprefix("at ")
     return Judged(
         decision=Decision.REPORTED,
-        reason=said,
-        value=found.value,
-        u_expanded=found.u_expanded,
-        k=found.k,
+        reason=reasons.measured(limit.quantity, at.value_a, k * at.u_a, k, where),
+        value=at.value_a,
+        u_expanded=k * at.u_a,
+        k=k,
     )
 
 
