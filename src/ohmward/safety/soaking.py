@@ -146,7 +146,8 @@ class Charger:
         if flows_a < 10.0 * self._desk.facts.supply_error_a:
             return
         reading = await self._read_current()
-        if reading.status is not Status.OK or abs(reading.current_a) > CLOSED_SHARE * flows_a:
+        most_a = CLOSED_SHARE * flows_a + 3.0 * self._error_a(self._watching_range_a())
+        if reading.status is not Status.OK or abs(reading.current_a) > most_a:
             raise BenchFault("the current meter sees the ramp: its bypass does not make")
 
     # ---- under voltage
