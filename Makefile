@@ -24,7 +24,7 @@ quick: .venv/dev-stamp ## what runs in a minute: no processes, no sockets, nothi
 	$(BIN)/pytest -q -m "not processes and not slow and not soak"
 
 test: .venv/dev-stamp ## the whole suite
-	$(BIN)/pytest -q -m "not soak"
+	$(BIN)/pytest -q -m "not soak" -n 2 --dist loadfile
 
 check: .venv/dev-stamp ## style, types, layers
 	$(BIN)/ruff format --check src tests benchmarks

@@ -122,9 +122,7 @@ def test_surge_voltage(rated_v: float, volts: float) -> None:
 
 
 # A film-capacitor maker's table, τ at 25 °C: leakage = C·V/τ of 100 nF at 400 V (calculated).
-@pytest.mark.parametrize(
-    ("dielectric", "nanoamperes"), [("PP", 0.4), ("PET", 4.0), ("X7R", 40.0)]
-)
+@pytest.mark.parametrize(("dielectric", "nanoamperes"), [("PP", 0.4), ("PET", 4.0), ("X7R", 40.0)])
 def test_leakage_by_dielectric(dielectric: str, nanoamperes: float) -> None:
     rule, one = direct("leakage-by-dielectric"), part(100e-9, 400.0, dielectric)
     assert rule.bounds(one, 400.0)[1] == pytest.approx(nanoamperes * 1e-9, rel=1e-9)

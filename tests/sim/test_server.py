@@ -10,9 +10,11 @@ from types import SimpleNamespace
 import pytest
 import pyvisa
 import trio
-from pyvisa.constants import StatusCode
+from pyvisa.constants import InterfaceType, StatusCode
 from pyvisa.errors import VisaIOError
 from pyvisa.resources import MessageBasedResource
+from pyvisa_py.sessions import Session
+from pyvisa_py.tcpip import TCPIPSocketSession
 
 from ohmward.sim import hislip_port as hislip
 from ohmward.sim.backend import InProcessLibrary
@@ -178,8 +180,11 @@ def test_an_unknown_link_is_refused() -> None:
 
 
 def test_a_forgotten_termination_fails_served_as_it_does_in_process(
-    serving: Serving, manager: pyvisa.ResourceManager
+    serving: Serving, manager: pyvisa.ResourceManager, monkeypatch: pytest.MonkeyPatch
 ) -> None:
+    # plain PyVISA, also where another test of this process has put ohmward's sessions in place
+    socket_kind = (InterfaceType.tcpip, "SOCKET")
+    monkeypatch.setitem(Session._session_classes, socket_kind, TCPIPSocketSession)
     now_s = [0.0]
 
     def wait(until_s: float) -> None:

@@ -16,8 +16,25 @@ from ohmward.setup.driver import Driver
 from ohmward.setup.resources import shipped
 from ohmward.sim.backend import InProcessLibrary
 from ohmward.sim.bench import SIMULATORS, InstrumentAt, SimulatedBench
+from ohmward.sim.faults import KINDS, Chance, Fault
 from ohmward.terms.part import Part
 from ohmward.terms.quantity import QUANTITIES
+
+# the simulator's own names are here for the room beside: only this module knows the simulator
+__all__ = [
+    "KINDS",
+    "Chance",
+    "Fault",
+    "InstrumentAt",
+    "SimulatedBench",
+    "SimulatedOperator",
+    "build",
+    "build_bench",
+    "connections",
+    "notes",
+    "simulator_of",
+    "truth_of",
+]
 
 ResultRow = dict[str, object]
 
