@@ -62,4 +62,4 @@ def test_a_voltmeter_behind_faults(link: str) -> None:
 )
 def test_every_driver_behind_faults(name: str, link: str) -> None:
     slow = (*SHORT[1:], ("timeout", 0.6))  # a handheld meter sends every 25 ms here
-    judged(World(name, link, served=True, settings=slow), 100)
+    judged(World(name, link, served=True, settings=slow), 40)
