@@ -19,7 +19,9 @@ ENOUGH = 8
 """Committed readings after which the link is pulled: the first part is in work or done."""
 
 
-def job(folder: Path, meter: str, scanner: str = "", *, bias: str = "0 V") -> Workbench:
+def job(
+    folder: Path, meter: str, scanner: str = "", *, bias: str = "0 V", repeats: str = "8"
+) -> Workbench:
     workbench = Workbench(folder)
     workbench.driver(meter)
     if scanner:
@@ -28,7 +30,7 @@ def job(folder: Path, meter: str, scanner: str = "", *, bias: str = "0 V") -> Wo
         text = text.replace('"scpi-thermometer"', f'"{folder / "room.toml"}"')
         workbench.write("room.toml", f'format = 1\nextends = "scpi-thermometer"\n{scanner}')
         workbench.write("bench.toml", text)
-    workbench.write("sequence.toml", sequence(f'bias = "{bias}"', repeats="8"))
+    workbench.write("sequence.toml", sequence(f'bias = "{bias}"', repeats=repeats))
     return workbench
 
 
@@ -63,7 +65,8 @@ def test_a_bench_that_is_gone_ends_the_run_with_4(tmp_path: Path, program: Progr
 def test_a_bench_that_is_gone_with_its_bias_on_ends_with_5(
     tmp_path: Path, program: Program
 ) -> None:
-    workbench = job(tmp_path, SHORT, SHORT, bias="10 V")
+    # so many readings that the link is pulled within the first part, and not between two
+    workbench = job(tmp_path, SHORT, SHORT, bias="10 V", repeats="80")
     out = tmp_path / "out"
     with Served(workbench):
         running = program.start("run", *workbench.arguments(out))
