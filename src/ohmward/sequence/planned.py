@@ -1,5 +1,6 @@
 """The planned stages of a brief: one stage for one part, with every value worked out."""
 
+from abc import ABC, abstractmethod
 from dataclasses import dataclass
 from typing import ClassVar
 
@@ -22,7 +23,7 @@ class Settle:
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
-class PlannedStage:
+class PlannedStage(ABC):
     """One stage for one part; ``number`` counts all planned stages of the run from 1."""
 
     kind: ClassVar[str]
@@ -33,9 +34,9 @@ class PlannedStage:
     duration_s: float
 
     @property
+    @abstractmethod
     def readings(self) -> int:
         """How many readings are kept of this stage."""
-        raise NotImplementedError
 
 
 @dataclass(frozen=True, kw_only=True, slots=True)
